@@ -1,0 +1,35 @@
+"""loopsim: every DC operating point of circuits with feedback, proved, judged and traced. See docs/tutorial.md."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+from loopsim._version import __version__
+from loopsim.errors import AnalysisError, CircuitError, InternalError, LoopsimError, MissingExtra
+
+if TYPE_CHECKING:
+    from loopsim.circuit import Circuit
+    from loopsim.language.load import load, parse
+
+__all__ = [
+    "AnalysisError",
+    "Circuit",
+    "CircuitError",
+    "InternalError",
+    "LoopsimError",
+    "MissingExtra",
+    "__version__",
+    "load",
+    "parse",
+]
+
+_LAZY = {"Circuit": "loopsim.circuit", "load": "loopsim.language.load", "parse": "loopsim.language.load"}
+
+
+def __getattr__(name: str) -> Any:
+    # NumPy, SciPy and lark take longer to import than a shell should wait for `loopsim --help`
+    if name in _LAZY:
+        import importlib
+
+        return getattr(importlib.import_module(_LAZY[name]), name)
+    raise AttributeError(f"module 'loopsim' has no attribute {name!r}")
