@@ -9,6 +9,10 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 
+from loopsim.printable import cell_width, one_column, printable
+
+EXCERPT = 120  # characters of a long source line that are shown around the place, so that a caret still meets its line
+
 
 @dataclass(frozen=True, slots=True)
 class Span:
@@ -58,21 +62,30 @@ class CircuitError(LoopsimError):
         return self.span.column if self.span else None
 
     def head(self) -> str:
-        """The first line: file:line:column: code: message."""
-        place = f"{self.span}: " if self.span else ""
-        return f"{place}{self.code}: {self.message}"
+        """The first line: file:line:column: code: message. Safe to print whatever the file held."""
+        place = f"{printable(str(self.span))}: " if self.span else ""
+        return f"{place}{self.code}: {printable(self.message)}"
 
     def __str__(self) -> str:
         """The head, the source line and a caret under the place with the hint behind it."""
+        hint = printable(self.hint)
         if self.span is None or not self.span.text:
-            return self.head() + (f"\n    {self.hint}" if self.hint else "")
-        line = self.span.text.replace("\t", " ")
+            return self.head() + (f"\n    {hint}" if hint else "")
+        line, start, end = _excerpt(self.span)
         number = str(self.span.line)
-        width = max(1, min(self.span.end_column, len(line) + 1) - self.span.column)
-        caret = " " * (self.span.column - 1) + "^" * width
-        margin = " " * len(number)
-        tail = f" {self.hint}" if self.hint else ""
-        return f"{self.head()}\n    {number} | {line}\n    {margin} | {caret}{tail}"
+        caret = " " * cell_width(line[:start]) + "^" * max(1, cell_width(line[start:end]))
+        return f"{self.head()}\n    {number} | {line}\n    {' ' * len(number)} | {caret}" + (f" {hint}" if hint else "")
+
+
+def _excerpt(span: Span) -> tuple[str, int, int]:
+    """What is shown of the source line, one safe character for each of its own, and where the span stands in it."""
+    line = one_column(span.text)
+    start = min(max(span.column - 1, 0), len(line))
+    end = min(max(span.end_column - 1, start), len(line))
+    if len(line) <= EXCERPT:
+        return line, start, end
+    first = max(0, min(start - EXCERPT // 3, len(line) - EXCERPT))
+    return line[first : first + EXCERPT], start - first, min(end - first, EXCERPT)
 
 
 class AnalysisError(LoopsimError):
