@@ -1,0 +1,386 @@
+"""What a proof needs of each scalar nonlinearity over an interval: range, slope range, chord error, inverse.
+
+All functions take intervals as arrays (low, high) of shape (..., rows) and the parameters with the parameter axis first (p, ..., rows),
+as `System.groups` gives them. Every answer holds the truth: values are widened by FUNCTION_ERROR times what was computed.
+The chord of phi over [low, high] is a real slope a with phi(w) - a w in [e_low, e_high] for every w there; any a is allowed, the error is
+what is enclosed (L. Kolev's linear enclosure, from memory).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from math import comb
+from typing import Any, TypeAlias
+
+import numpy as np
+from numpy.typing import NDArray
+
+from loopsim.devices.phi import EXPONENT_LIMIT, SLOPE, VALUE, Kind
+from loopsim.numerics.enclosure import FUNCTION_ERROR, HUGE, TINY, UNIT, down, up
+
+Array: TypeAlias = NDArray[np.float64]
+Pair: TypeAlias = tuple[Array, Array]
+
+MONOTONE = frozenset({Kind.EXPONENTIAL, Kind.SATURATION, Kind.SOFTPLUS, Kind.CHARGE_SHEET, Kind.ARCTANGENT})
+CONVEX = frozenset({Kind.EXPONENTIAL, Kind.SOFTPLUS, Kind.CHARGE_SHEET})
+RECIPROCAL_PEAK = float(np.sqrt(2.0 / 3.0))
+SHAVE_PIECES = 16  # pieces an interval is cut into when the inverse of a kind has no closed form
+FLAT = 1e-4  # below this width the chord slope is taken from the tangent: a difference quotient would be noise
+
+
+def value_error(kind: int, w: Array, p: Any) -> Array:
+    """Bound of |computed - true| of VALUE[kind] at w."""
+    if kind == Kind.POLYNOMIAL:
+        total = np.zeros_like(w)
+        size = np.abs(w)
+        for j in range(len(p) - 1, -1, -1):
+            total = (total + np.abs(p[j])) * size
+        return total * ((2 * len(p) + 4) * UNIT) + TINY
+    if kind == Kind.POINTS:
+        total = np.abs(p[0]) + np.abs(p[1] * w)
+        for j in range(2, len(p) - 1, 2):
+            total = total + np.abs(p[j + 1]) * (np.abs(w) + 2.0 * np.abs(p[j]))
+        return total * ((len(p) + 6) * UNIT) + TINY
+    if kind == Kind.EXPONENTIAL:
+        # beyond the limit exp(limit) * (w - limit) is added; the sum has no cancellation, so a relative bound holds
+        return np.abs(VALUE[kind](w, p)) * FUNCTION_ERROR + TINY
+    if kind == Kind.RECIPROCAL:
+        inside = np.minimum(np.abs(w), 1.0)
+        return (3.0 * inside + np.abs(VALUE[kind](w, p))) * FUNCTION_ERROR + TINY
+    return np.abs(VALUE[kind](w, p)) * FUNCTION_ERROR + TINY
+
+
+def value_at(kind: int, w: Array, p: Any) -> Pair:
+    """Enclosure of phi at the points w."""
+    value = VALUE[kind](w, p)
+    error = value_error(kind, w, p)
+    return down(value - error), up(value + error)
+
+
+def bounds(kind: int, low: Array, high: Array, p: Any) -> Pair:
+    """Range of phi over [low, high]."""
+    if kind in MONOTONE:
+        bottom, top = VALUE[kind](low, p), VALUE[kind](high, p)
+        return bottom - (np.abs(bottom) * FUNCTION_ERROR + TINY), top + (np.abs(top) * FUNCTION_ERROR + TINY)
+    return deviation(kind, np.zeros_like(low), low, high, p)
+
+
+def slope_bounds(kind: int, low: Array, high: Array, p: Any) -> Pair:
+    """Range of the derivative of phi over [low, high] (for POINTS: of all its one-sided slopes)."""
+    if kind in CONVEX:
+        bottom, top = SLOPE[kind](low, p), SLOPE[kind](high, p)
+        return bottom * (1.0 - FUNCTION_ERROR) - TINY, top * (1.0 + FUNCTION_ERROR) + TINY
+    if kind in (Kind.SATURATION, Kind.ARCTANGENT):
+        far = np.maximum(np.abs(low), np.abs(high))
+        near = np.maximum(np.maximum(low, -high), 0.0)
+        bottom, top = SLOPE[kind](far, p), SLOPE[kind](near, p)
+        return np.maximum(bottom * (1.0 - FUNCTION_ERROR) - TINY, 0.0), top * (1.0 + FUNCTION_ERROR) + TINY
+    if kind == Kind.RECIPROCAL:
+        far = np.maximum(np.abs(low), np.abs(high))
+        near = np.maximum(np.maximum(low, -high), 0.0)
+        at_far, at_near = SLOPE[kind](far, p), SLOPE[kind](near, p)
+        holds_corner = (near <= 1.0) & (far >= 1.0)
+        bottom = np.where(holds_corner, -1.0, np.minimum(at_far, at_near))
+        return bottom - 8.0 * FUNCTION_ERROR, np.maximum(at_far, at_near) + 8.0 * FUNCTION_ERROR
+    if kind == Kind.POINTS:
+        return _points_slope_bounds(low, high, p)
+    return _bernstein([(j + 1) * p[j] for j in range(len(p))], low, high)
+
+
+def _points_slope_bounds(low: Array, high: Array, p: Any) -> Pair:
+    """Exact up to the sums: the slope is constant between corners, so every corner inside shows both of its sides."""
+    slope = SLOPE[Kind.POINTS]
+    # just left of `low` counts too when low stands on a corner; slopes_left treats corners as not yet passed
+    corners = [p[j] for j in range(2, len(p) - 1, 2)]
+    changes = [p[j + 1] for j in range(2, len(p) - 1, 2)]
+    left = p[1] + 0.0 * low
+    for corner, change in zip(corners, changes, strict=True):
+        left = left + change * np.where(low > corner, 1.0, 0.0)
+    bottom = np.minimum(left, slope(high, p))
+    top = np.maximum(left, slope(high, p))
+    for corner in corners:
+        inside = (corner >= low) & (corner <= high)
+        here = slope(corner + 0.0 * low, p)
+        bottom = np.where(inside, np.minimum(bottom, here), bottom)
+        top = np.where(inside, np.maximum(top, here), top)
+    size = np.abs(p[1]) + 0.0 * low
+    for change in changes:
+        size = size + np.abs(change)
+    error = size * ((len(p) + 2) * UNIT) + TINY
+    return bottom - error, top + error
+
+
+def _bernstein(a: list[Array], low: Array, high: Array) -> Pair:
+    """Range of the polynomial a0 + a1 w + ... over [low, high], from its Bernstein coefficients there.
+
+    The range lies between the least and the greatest coefficient (G. T. Cargo, O. Shisha 1966, from memory).
+    """
+    degree = len(a) - 1
+    width = high - low
+    anchor = np.abs(low)
+    taylor, size = [], []
+    for j in range(degree + 1):
+        value = np.zeros_like(low)
+        bound = np.zeros_like(low)
+        for k in range(degree, j - 1, -1):
+            value = value * low + comb(k, j) * a[k]
+            bound = bound * anchor + comb(k, j) * np.abs(a[k])
+        power = width**j
+        taylor.append(value * power)
+        size.append(bound * np.abs(power))
+    least = most = taylor[0]
+    for i in range(1, degree + 1):
+        coefficient = taylor[0]
+        for j in range(1, i + 1):
+            coefficient = coefficient + (comb(i, j) / comb(degree, j)) * taylor[j]
+        least = np.minimum(least, coefficient)
+        most = np.maximum(most, coefficient)
+    total = size[0]
+    for j in range(1, degree + 1):
+        total = total + size[j]
+    # width itself carries one rounding, so width**j carries j of them; 6 (degree + 2) covers Horner, powers and the sums
+    error = total * (6 * (degree + 2) * UNIT) + TINY
+    return least - error, most + error
+
+
+def stationary(kind: int, a: Array, low: Array, high: Array, p: Any) -> list[Array]:
+    """Points, to about working precision, where the slope of phi equals a; clipped to [low, high]. Only tightness rests on them."""
+    with np.errstate(all="ignore"):
+        if kind == Kind.EXPONENTIAL:
+            found = [np.log(np.maximum(a, 1e-300))]
+        elif kind == Kind.SOFTPLUS:
+            inside = np.clip(a, 1e-300, 1.0 - 1e-16)
+            found = [np.log(inside) - np.log1p(-inside)]
+        elif kind == Kind.CHARGE_SHEET:
+            found = [_charge_sheet_stationary(a)]
+        elif kind == Kind.SATURATION:
+            t = np.arccosh(1.0 / np.sqrt(np.clip(a, 1e-300, 1.0)))
+            found = [-t, t]
+        elif kind == Kind.ARCTANGENT:
+            t = np.sqrt(np.maximum(1.0 / np.clip(a, 1e-300, 1.0) - 1.0, 0.0))
+            found = [-t, t]
+        elif kind == Kind.RECIPROCAL:
+            inner = np.sqrt(np.clip((2.0 - a) / 3.0, 0.0, 1.0))
+            outer = np.where(a < 0.0, 1.0 / np.sqrt(np.clip(-a, 1e-300, 1.0)), 1.0)
+            found = [-outer, -inner, inner, outer]
+        elif kind == Kind.POINTS:
+            found = [p[j] + 0.0 * low for j in range(2, len(p) - 1, 2)]
+        else:
+            found = _polynomial_stationary(a, low, high, p)
+    return [np.clip(np.nan_to_num(t, nan=0.0), low, high) for t in found]
+
+
+def _charge_sheet_stationary(a: Array) -> Array:
+    """Where ln(1 + e^(w/2)) e^(w/2) / (1 + e^(w/2)) = a: four Newton steps on the logarithm of the slope from its two asymptotes."""
+    a = np.clip(a, 1e-300, 1e300)
+    w = np.where(a > 1.0, 2.0 * (a + np.log1p(-np.exp(-a))), np.log(a) + 0.75 * np.minimum(a, 1.0))
+    for _ in range(4):
+        slope = SLOPE[Kind.CHARGE_SHEET](w, ())
+        bend = np.maximum(_charge_sheet_bend(w), 1e-300)
+        w = w - np.log(np.maximum(slope, 1e-300) / a) * slope / bend
+    return w
+
+
+def _charge_sheet_bend(w: Array) -> Array:
+    half = np.exp(-np.abs(0.5 * w))
+    slope = np.where(w >= 0.0, 1.0, half) / (1.0 + half)
+    plus = np.maximum(0.5 * w, 0.0) + np.log1p(half)
+    return 0.5 * (slope * slope + plus * half / ((1.0 + half) * (1.0 + half)))
+
+
+def _polynomial_stationary(a: Array, low: Array, high: Array, p: Any) -> list[Array]:
+    """Roots of phi' = a in closed form up to a cubic; evenly spaced cuts above."""
+    degree = len(p)
+    while degree > 1 and not np.any(p[degree - 1]):
+        degree -= 1
+    if degree <= 1:
+        return []
+    if degree > 3:
+        return [low + (high - low) * (j / 8.0) for j in range(1, 8)]
+    c0, c1 = p[0] - a, 2.0 * p[1]
+    c2 = 3.0 * p[2] if degree > 2 else 0.0 * c1
+    root = np.sqrt(np.maximum(c1 * c1 - 4.0 * c2 * c0, 0.0))
+    q = -0.5 * (c1 + np.where(c1 >= 0.0, root, -root))
+    first = np.where(c2 != 0.0, q / np.where(c2 != 0.0, c2, 1.0), np.where(c1 != 0.0, -c0 / np.where(c1 != 0.0, c1, 1.0), 0.0))
+    second = np.where(q != 0.0, c0 / np.where(q != 0.0, q, 1.0), first)
+    return [np.minimum(first, second), np.maximum(first, second)]
+
+
+def deviation(kind: int, a: Array, low: Array, high: Array, p: Any) -> Pair:
+    """Range of phi(w) - a w over [low, high].
+
+    [low, high] is cut near the stationary points; on each piece the function is held between the two lines that its slope range allows
+    from both ends, which is exact where it is monotone and second order small where a cut missed the stationary point.
+    """
+    cuts = [low, *stationary(kind, a, low, high, p), high]
+    if len(cuts) > 4:
+        cuts = list(np.sort(np.stack(cuts), axis=0))
+    least, most = None, None
+    ends = [_deviation_at(kind, a, t, p) for t in cuts]
+    for (start, at_start), (stop, at_stop) in zip(
+        zip(cuts[:-1], ends[:-1], strict=True), zip(cuts[1:], ends[1:], strict=True), strict=True
+    ):
+        s_low, s_high = slope_bounds(kind, start, stop, p)
+        error = np.abs(a) * (2.0 * UNIT)
+        s_low, s_high = down(s_low - a) - error, up(s_high - a) + error
+        lower, upper = _between_lines(at_start, at_stop, s_low, s_high, stop - start)
+        least = lower if least is None else np.minimum(least, lower)
+        most = upper if most is None else np.maximum(most, upper)
+    assert least is not None and most is not None
+    return least, most
+
+
+def _deviation_at(kind: int, a: Array, t: Array, p: Any) -> Pair:
+    value = VALUE[kind](t, p)
+    product = a * t
+    error = value_error(kind, t, p) + np.abs(product) * (2.0 * UNIT)
+    q = value - product
+    return down(q - error), up(q + error)
+
+
+def _between_lines(at_start: Pair, at_stop: Pair, s_low: Array, s_high: Array, width: Array) -> Pair:
+    """Bounds of q on a piece from its end values and slope range: q(start) + s_low t <= q <= q(start) + s_high t, likewise from the end.
+
+    Where both lines bind, their crossing is the bound; it is never worse than the one line alone, which is used with rounding room.
+    """
+    falls, rises = np.minimum(s_low, 0.0), np.maximum(s_high, 0.0)
+    reach = up(width)
+    # going down from the start at slope s_low and up to the stop at slope s_high: lowest where they meet
+    span = rises - falls
+    share = np.where(span > 0.0, 1.0 / np.where(span > 0.0, span, 1.0), 0.0)
+    # relative error of the quotient forms is a few roundings of the terms added
+    low_terms = (rises * at_start[0], -falls * at_stop[0], falls * rises * reach)
+    low_cross = (low_terms[0] + low_terms[1] + low_terms[2]) * share
+    low_error = (np.abs(low_terms[0]) + np.abs(low_terms[1]) + np.abs(low_terms[2])) * share * (12.0 * UNIT)
+    high_terms = (-falls * at_start[1], rises * at_stop[1], -falls * rises * reach)
+    high_cross = (high_terms[0] + high_terms[1] + high_terms[2]) * share
+    high_error = (np.abs(high_terms[0]) + np.abs(high_terms[1]) + np.abs(high_terms[2])) * share * (12.0 * UNIT)
+    both = (falls < 0.0) & (rises > 0.0)
+    ends_low = np.minimum(at_start[0], at_stop[0])
+    ends_high = np.maximum(at_start[1], at_stop[1])
+    low = np.where(both, np.minimum(ends_low, low_cross - low_error), ends_low)
+    high = np.where(both, np.maximum(ends_high, high_cross + high_error), ends_high)
+    return down(low), up(high)
+
+
+def chord(kind: int, low: Array, high: Array, p: Any) -> tuple[Array, Array, Array]:
+    """(slope a, e_low, e_high): phi(w) - a w lies in [e_low, e_high] over [low, high]. low, high finite."""
+    width = high - low
+    middle = 0.5 * low + 0.5 * high
+    flat = width <= FLAT * np.maximum(1.0, np.abs(middle) * 1e-6)
+    rise = VALUE[kind](high, p) - VALUE[kind](low, p)
+    a = np.where(flat, SLOPE[kind](middle, p), rise / np.where(width > 0.0, width, 1.0))
+    e_low, e_high = deviation(kind, a, low, high, p)
+    return a, e_low, e_high
+
+
+def _inverse_exponential(y: Array) -> Array:
+    top = np.expm1(EXPONENT_LIMIT)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        inner = np.log1p(np.clip(y, -1.0, top))
+        outer = EXPONENT_LIMIT + (y - top) / np.exp(EXPONENT_LIMIT)
+    return np.where(y > top, outer, np.where(y <= -1.0, -HUGE, inner))
+
+
+def _inverse_saturation(y: Array) -> Array:
+    with np.errstate(divide="ignore", invalid="ignore"):
+        inner = np.arctanh(np.clip(y, -1.0, 1.0))
+    return np.where(y >= 1.0, HUGE, np.where(y <= -1.0, -HUGE, inner))
+
+
+def _inverse_softplus(y: Array) -> Array:
+    with np.errstate(divide="ignore", invalid="ignore"):
+        inner = y + np.log(-np.expm1(-np.maximum(y, 0.0)))
+    return np.where(y <= 0.0, -HUGE, inner)
+
+
+def _inverse_charge_sheet(y: Array) -> Array:
+    return np.where(y <= 0.0, -HUGE, 2.0 * _inverse_softplus(np.sqrt(np.maximum(y, 0.0))))
+
+
+def _inverse_arctangent(y: Array) -> Array:
+    quarter = 0.5 * np.pi
+    inner = np.tan(np.clip(y, -quarter, quarter))
+    return np.where(y >= quarter * (1 - 1e-15), HUGE, np.where(y <= -quarter * (1 - 1e-15), -HUGE, inner))
+
+
+_INVERSE: dict[int, Callable[[Array], Array]] = {
+    Kind.EXPONENTIAL: _inverse_exponential,
+    Kind.SATURATION: _inverse_saturation,
+    Kind.SOFTPLUS: _inverse_softplus,
+    Kind.CHARGE_SHEET: _inverse_charge_sheet,
+    Kind.ARCTANGENT: _inverse_arctangent,
+}
+
+
+def inverse(kind: int, low: Array, high: Array, y_low: Array, y_high: Array, p: Any) -> Pair:
+    """Part of [low, high] where phi can lie in [y_low, y_high]: a hull, empty where the new low exceeds the new high.
+
+    A computed inverse is never trusted: it is moved out by a relative step and kept only where phi there is proved beyond the bound.
+    """
+    if kind in _INVERSE:
+        new_low, new_high = _proved_inverse(kind, y_low, y_high, p)
+        return np.maximum(low, new_low), np.minimum(high, new_high)
+    return _shave(kind, low, high, y_low, y_high, p)
+
+
+def _proved_inverse(kind: int, y_low: Array, y_high: Array, p: Any) -> Pair:
+    solve = _INVERSE[kind]
+    least = solve(y_low)
+    step = np.abs(least) * 1e-13 + 1e-13
+    least = least - step
+    # phi is increasing: if phi(least) < y_low for certain, then phi(w) < y_low for all w <= least
+    least = np.where(value_at(kind, least, p)[1] <= y_low, least, -HUGE)
+    most = solve(y_high)
+    most = most + (np.abs(most) * 1e-13 + 1e-13)
+    most = np.where(value_at(kind, most, p)[0] >= y_high, most, HUGE)
+    # values that phi never reaches empty the row
+    if kind == Kind.EXPONENTIAL:
+        least, most = np.where(y_high < -1.0 - 1e-12, HUGE, least), np.where(y_high < -1.0 - 1e-12, -HUGE, most)
+    elif kind in (Kind.SOFTPLUS, Kind.CHARGE_SHEET):
+        least, most = np.where(y_high < 0.0, HUGE, least), np.where(y_high < 0.0, -HUGE, most)
+    elif kind == Kind.SATURATION:
+        none = (y_high < -1.0 - 1e-12) | (y_low > 1.0 + 1e-12)
+        least, most = np.where(none, HUGE, least), np.where(none, -HUGE, most)
+    elif kind == Kind.ARCTANGENT:
+        none = (y_high < -1.5708) | (y_low > 1.5708)
+        least, most = np.where(none, HUGE, least), np.where(none, -HUGE, most)
+    return least, most
+
+
+def _cuts(low: Array, high: Array, pieces: int) -> Array:
+    """Cut points (pieces + 1, ...): even over short intervals, even in the inverse hyperbolic sine over wide ones."""
+    share = np.linspace(0.0, 1.0, pieces + 1).reshape((-1,) + (1,) * low.ndim)
+    wide = (high - low) > 100.0
+    even = low + (high - low) * share
+    if np.any(wide):
+        spread = np.sinh(np.arcsinh(low) + (np.arcsinh(high) - np.arcsinh(low)) * share)
+        even = np.where(wide, spread, even)
+    even = np.clip(even, low, high)
+    even[0], even[-1] = low, high
+    return np.asarray(even)
+
+
+def _shave(kind: int, low: Array, high: Array, y_low: Array, y_high: Array, p: Any) -> Pair:
+    """Cut [low, high] into pieces and drop those from both ends whose range misses [y_low, y_high]."""
+    for _ in range(2):
+        cuts = _cuts(low, high, SHAVE_PIECES)
+        starts, stops = cuts[:-1], cuts[1:]
+        # the new leading axis must stand behind the parameter axis
+        q = [np.asarray(p[j])[None, ...] for j in range(len(p))]
+        bottom, top = bounds(kind, starts, stops, q)
+        hit = (top >= y_low) & (bottom <= y_high)
+        some = np.any(hit, axis=0)
+        first = np.argmax(hit, axis=0)
+        last = SHAVE_PIECES - 1 - np.argmax(hit[::-1], axis=0)
+        new_low = np.take_along_axis(starts, first[None], axis=0)[0]
+        new_high = np.take_along_axis(stops, last[None], axis=0)[0]
+        gained = (new_high - new_low) < 0.5 * (high - low)
+        low = np.where(some, new_low, HUGE)
+        high = np.where(some, new_high, -HUGE)
+        if not np.any(gained & some):
+            break
+        # rows that came out empty are carried as a harmless point until the caller sees them
+        if not np.all(some):
+            break
+    return low, high
