@@ -100,7 +100,7 @@ class States(Sequence[State]):
 
     complete: proved that there are no others within `box` [V]. undecided: clusters or boxes left (0 when complete); remainder: a line
     each on where. boxes: how many were examined. seconds: wall time. settings: lets as used [SI]. watch: nets shown first.
-    found: number of points known but not proved unique (they stand among the states with certified_radius 0).
+    units: of the settings, for printing. States known but not proved unique have certified_radius 0.
     """
 
     circuit: str
@@ -115,6 +115,7 @@ class States(Sequence[State]):
     watch: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     remainder: tuple[str, ...] = field(default=())
+    units: Mapping[str, str] = field(default_factory=dict)
 
     def __len__(self) -> int:
         return len(self.states)
@@ -146,6 +147,23 @@ class States(Sequence[State]):
 
     def __repr__(self) -> str:
         return f"States({self.circuit}: {len(self.states)} operating points, {self.word})"
+
+    def __str__(self) -> str:
+        """The answer as `loopsim states` prints it."""
+        from loopsim.output.text import states_text
+
+        return states_text(self).rstrip("\n")
+
+    def _repr_html_(self) -> str:
+        from loopsim.output.text import states_html
+
+        return states_html(self)
+
+    def to_dataframe(self) -> Any:
+        """One row a state, indexed by its letter: verdict, stable, growth_rate, then every net [V]. Needs pandas."""
+        from loopsim.output.frames import states_frame
+
+        return states_frame(self)
 
     def to_dict(self) -> dict[str, Any]:
         """The JSON form, without the frame that every verb shares."""

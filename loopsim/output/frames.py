@@ -1,0 +1,33 @@
+"""Results as pandas data frames, where pandas is installed."""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+from loopsim.errors import LoopsimError
+
+if TYPE_CHECKING:
+    from loopsim.analyses.results import States
+
+
+def _pandas() -> Any:
+    try:
+        return importlib.import_module("pandas")
+    except ImportError as missing:
+        raise LoopsimError("to_dataframe needs pandas, which is not installed: pip install pandas") from missing
+
+
+def states_frame(points: States) -> Any:
+    """One row a state, indexed by its letter: verdict, stable, growth_rate [1/s], damping, then every net [V]."""
+    rows = [
+        {
+            "verdict": state.verdict,
+            "stable": state.stable,
+            "growth_rate": state.growth_rate,
+            "damping": state.damping,
+            **state.nets,
+        }
+        for state in points
+    ]
+    return _pandas().DataFrame(rows, index=[state.name for state in points])
