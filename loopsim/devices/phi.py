@@ -12,6 +12,8 @@ from typing import Any
 
 import numpy as np
 
+choose = np.where  # a compiled scalar loop puts a scalar choice in its place
+
 EXPONENT_LIMIT = 120.0  # exp(120) is 1e52: with 1e-30 A of saturation current still 1e22 A, where no circuit rests
 
 
@@ -30,7 +32,8 @@ class Kind(IntEnum):
 
 def exponential(w: Any, p: Any) -> Any:
     capped = np.minimum(w, EXPONENT_LIMIT)
-    return np.expm1(capped) + np.exp(capped) * (w - capped)
+    grown = np.expm1(capped)
+    return grown + (grown + 1.0) * (w - capped)
 
 
 def exponential_slope(w: Any, p: Any) -> Any:
@@ -38,7 +41,7 @@ def exponential_slope(w: Any, p: Any) -> Any:
 
 
 def exponential_curvature(w: Any, p: Any) -> Any:
-    return np.where(w < EXPONENT_LIMIT, np.exp(np.minimum(w, EXPONENT_LIMIT)), 0.0)
+    return choose(w < EXPONENT_LIMIT, np.exp(np.minimum(w, EXPONENT_LIMIT)), 0.0)
 
 
 def saturation(w: Any, p: Any) -> Any:
@@ -61,7 +64,7 @@ def softplus(w: Any, p: Any) -> Any:
 
 def softplus_slope(w: Any, p: Any) -> Any:
     e = np.exp(-np.abs(w))
-    return np.where(w >= 0.0, 1.0, e) / (1.0 + e)
+    return choose(w >= 0.0, 1.0, e) / (1.0 + e)
 
 
 def softplus_curvature(w: Any, p: Any) -> Any:
@@ -128,7 +131,7 @@ def points(w: Any, p: Any) -> Any:
 def points_slope(w: Any, p: Any) -> Any:
     total = p[1] + 0.0 * w
     for j in range(2, len(p) - 1, 2):
-        total = total + p[j + 1] * np.where(w >= p[j], 1.0, 0.0)
+        total = total + p[j + 1] * choose(w >= p[j], 1.0, 0.0)
     return total
 
 
@@ -138,20 +141,20 @@ def points_curvature(w: Any, p: Any) -> Any:
 
 def reciprocal(w: Any, p: Any) -> Any:
     inside = np.maximum(np.minimum(w, 1.0), -1.0)
-    outside = np.where(np.abs(w) > 1.0, w, 1.0)
-    return np.where(np.abs(w) > 1.0, 1.0 / outside, 2.0 * inside - inside * inside * inside)
+    outside = choose(np.abs(w) > 1.0, w, 1.0)
+    return choose(np.abs(w) > 1.0, 1.0 / outside, 2.0 * inside - inside * inside * inside)
 
 
 def reciprocal_slope(w: Any, p: Any) -> Any:
     inside = np.maximum(np.minimum(w, 1.0), -1.0)
-    outside = np.where(np.abs(w) > 1.0, w, 1.0)
-    return np.where(np.abs(w) > 1.0, -1.0 / (outside * outside), 2.0 - 3.0 * inside * inside)
+    outside = choose(np.abs(w) > 1.0, w, 1.0)
+    return choose(np.abs(w) > 1.0, -1.0 / (outside * outside), 2.0 - 3.0 * inside * inside)
 
 
 def reciprocal_curvature(w: Any, p: Any) -> Any:
     inside = np.maximum(np.minimum(w, 1.0), -1.0)
-    outside = np.where(np.abs(w) > 1.0, w, 1.0)
-    return np.where(np.abs(w) > 1.0, 2.0 / (outside * outside * outside), -6.0 * inside)
+    outside = choose(np.abs(w) > 1.0, w, 1.0)
+    return choose(np.abs(w) > 1.0, 2.0 / (outside * outside * outside), -6.0 * inside)
 
 
 VALUE = (exponential, saturation, softplus, charge_sheet, arctangent, polynomial, points, reciprocal)
