@@ -20,7 +20,7 @@ MANY_NETS = 6  # columns of nets that still fit on a line of 100 characters
 
 def counted(number: int, word: str, plural: str = "") -> str:
     """`1 point`, `3 points`, `no points`."""
-    return f"{number if number else 'no'} {word if number == 1 else plural or word + 's'}"
+    return f"{number or 'no'} {word if number == 1 else plural or word + 's'}"
 
 
 def table(rows: Sequence[Sequence[str]]) -> list[str]:

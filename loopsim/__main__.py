@@ -1,0 +1,6 @@
+"""`python -m loopsim`."""
+
+from loopsim.cli import entry
+
+if __name__ == "__main__":
+    entry()

@@ -1,0 +1,65 @@
+"""Every verb of the command with its options, as one table."""
+
+from __future__ import annotations
+
+from loopsim.cli import values
+from loopsim.cli.options import Option, Verb
+
+SET = Option("--set", "LET=VALUE", "give a let another value, as --set level=4.5V; repeatable", values.setting, repeatable=True)
+JSON = Option("--json", "", "one JSON document on standard output (docs/reference/json.md)")
+CSV = Option("--csv", "FILE", "write the table to FILE, numbers in SI units with all their digits")
+PLOT = Option("--plot", "FILE", "draw it; the suffix decides: svg, png or pdf (extra `plot`)", values.picture)
+BOX = Option("--box", "VOLTS", "look at all net voltages within +/- VOLTS (1 kV)", values.positive_volts)
+BUDGET = Option("--budget", "SECONDS", "stop proving after SECONDS and say what is left (60 s)", values.positive_seconds)
+SEED = Option("--seed", "N", "start of the random numbers, where a verb draws any (0)", values.whole)
+JOBS = Option("--jobs", "N", "worker processes, where a verb uses any (one a core)", values.count)
+WATCH = Option("--watch", "NET,...", "the nets to show", values.names)
+
+COMMON = (
+    Option("--quiet", "", "nothing on standard error but errors"),
+    Option("--no-color", "", "no colour codes"),
+)
+
+STATES = Verb(
+    "states",
+    "FILE",
+    "every DC operating point, the proof that there are no others, the verdict on each",
+    (
+        ("loopsim states circuits/comparators/cistern_pump.loop", "the table"),
+        ("loopsim states cistern_pump.loop --set level=8V", "the same with another level"),
+        ("loopsim states cistern_pump.loop --json", "for programs: every net, current and eigenvalue"),
+    ),
+    (SET, JSON, CSV, BOX, BUDGET, SEED, JOBS),
+    "loopsim.cli.states:run",
+    "complete: proved that there are no others within the box. found: search only. undecided: places left over.",
+)
+
+INSPECT = Verb(
+    "inspect",
+    "FILE",
+    "what was read: parts, nets, unknowns, structure findings",
+    (("loopsim inspect circuits/comparators/cistern_pump.loop", "what loopsim makes of the file"),),
+    (SET, JSON),
+    "loopsim.cli.inspect:run",
+)
+
+TIDY = Verb(
+    "tidy",
+    "FILE",
+    "lays a circuit file out in the standard way, in place",
+    (
+        ("loopsim tidy circuits/comparators/cistern_pump.loop", "rewrites the file; its meaning and comments stay"),
+        ("loopsim tidy cistern_pump.loop --check", "only tells: exit code 1 when it would change"),
+    ),
+    (Option("--check", "", "change nothing, only tell"),),
+    "loopsim.cli.tidy:run",
+)
+
+VERBS = {verb.name: verb for verb in (STATES, INSPECT, TIDY)}
+
+# Named in the design, not built yet: asked for, they get an answer that says so.
+PLANNED = {
+    "loops": "feedback loops with their return ratio and margins",
+    "spread": "what tolerances do to thresholds and requirements",
+    "report": "one HTML page for a design review",
+}

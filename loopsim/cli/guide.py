@@ -1,0 +1,67 @@
+"""Help texts, made from the table of verbs: examples first."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+
+from loopsim.cli.exits import MEANINGS
+from loopsim.cli.options import Option, Verb
+
+
+def _columns(rows: Sequence[tuple[str, str]]) -> list[str]:
+    width = max(len(left) for left, _ in rows)
+    return [f"    {left.ljust(width)}   {right}" for left, right in rows]
+
+
+def _examples(examples: Sequence[tuple[str, str]]) -> list[str]:
+    return [line for command, what in examples for line in (f"    {command}", f"        {what}")]
+
+
+def _option_rows(options: Sequence[Option]) -> list[tuple[str, str]]:
+    return [(f"{option.name} {option.value}".rstrip(), option.help) for option in options]
+
+
+def overview(verbs: Mapping[str, Verb], common: Sequence[Option]) -> str:
+    """What `loopsim --help` prints."""
+    firsts = [(verb.examples[0][0], verb.summary) for verb in verbs.values()][:3]
+    always = [
+        *_option_rows(common),
+        ("--version", "the version of loopsim and of the libraries under it"),
+        ("-h, --help", "help, anywhere: `loopsim states -h` tells the options of a verb"),
+    ]
+    return "\n".join(
+        [
+            "loopsim: every operating point of a circuit with feedback, proved and judged",
+            "",
+            *_examples(firsts),
+            "",
+            "verbs",
+            *_columns([(f"{verb.name} {verb.takes}", verb.summary) for verb in verbs.values()]),
+            "",
+            "always",
+            *_columns(always),
+            "",
+            "exit codes",
+            *_columns([(str(int(code)), meaning) for code, meaning in MEANINGS.items()]),
+            "",
+            "Answers go to standard output, everything else to standard error. NO_COLOR is obeyed.",
+            "",
+        ]
+    )
+
+
+def verb_help(verb: Verb, common: Sequence[Option]) -> str:
+    """What `loopsim VERB -h` prints."""
+    rows = [*_option_rows((*verb.options, *common)), ("-h, --help", "this text")]
+    return "\n".join(
+        [
+            f"loopsim {verb.name} {verb.takes}: {verb.summary}",
+            "",
+            *_examples(verb.examples),
+            "",
+            "options",
+            *_columns(rows),
+            *(["", verb.notes] if verb.notes else []),
+            "",
+        ]
+    )

@@ -1,0 +1,79 @@
+"""From a path and `--set` words to a circuit and SI values, with a clear word for everything that is no circuit file."""
+
+from __future__ import annotations
+
+import contextlib
+import difflib
+import os
+from typing import TYPE_CHECKING
+
+from loopsim.errors import CircuitError, LoopsimError, Span
+from loopsim.printable import printable
+
+if TYPE_CHECKING:
+    from loopsim.circuit import Circuit
+
+LARGEST_SNIFF = 65536  # bytes looked at for a NUL; a circuit file that long without one is text
+
+
+def readable(path: str) -> None:
+    """Raise CircuitError unless `path` is a text file that holds something."""
+    place = Span(path, 1, 1, 1)
+    if os.path.isdir(path):
+        raise CircuitError("is-a-folder", f"`{path}` is a folder, not a circuit file", hint=_inside(path))
+    if not os.path.exists(path):
+        raise CircuitError("missing-file", f"there is no file `{path}`", hint=_similar(path))
+    try:
+        with open(path, "rb") as stream:
+            head = stream.read(LARGEST_SNIFF)
+    except OSError as error:
+        raise CircuitError("unreadable-file", f"`{path}` cannot be read: {error.strerror}") from None
+    if b"\x00" in head:
+        raise CircuitError("not-text", "this is not text: it holds a zero byte", place, "a circuit file is UTF-8 text")
+    if not head.strip():
+        raise CircuitError("empty-file", "the file is empty", place, 'begin with: circuit NAME "title"')
+
+
+def _inside(folder: str) -> str:
+    try:
+        found = sorted(name for name in os.listdir(folder) if name.endswith(".loop"))
+    except OSError:
+        found = []
+    return f"name a file in it, such as `{os.path.join(folder, found[0])}`" if found else "name a file whose name ends in .loop"
+
+
+def _similar(path: str) -> str:
+    folder, name = os.path.split(path)
+    try:
+        here = [entry for entry in os.listdir(folder or ".") if entry.endswith(".loop")]
+    except OSError:
+        return f"there is no folder `{folder}` either"
+    found = difflib.get_close_matches(name, here, n=1, cutoff=0.6)
+    return f"did you mean `{os.path.join(folder, found[0])}`?" if found else ""
+
+
+def read_circuit(path: str) -> Circuit:
+    """The circuit in a file."""
+    readable(path)
+    from loopsim.language.load import load
+
+    return load(path)
+
+
+def units(circuit: Circuit) -> dict[str, str]:
+    """The unit of every let, for printing."""
+    return {name: parameter.unit for name, parameter in circuit.parameters.items()}
+
+
+def write_file(path: str, text: str) -> tuple[str, ...]:
+    """Write an answer's file whole or not at all; the remark to make."""
+    temporary = f"{path}.{os.getpid()}.part"
+    try:
+        with open(temporary, "w", encoding="utf-8", newline="") as stream:
+            stream.write(text)
+        os.replace(temporary, path)
+    except OSError as error:
+        with contextlib.suppress(OSError):
+            os.remove(temporary)
+        raise LoopsimError(f"cannot write `{path}`: {error.strerror}") from None
+    return (f"wrote {printable(path)}",)
