@@ -16,7 +16,7 @@ from loopsim.cli import main
 from loopsim.cli.answer import Answer, Surroundings
 from loopsim.cli.catalogue import COMMON, PLANNED, VERBS
 from loopsim.cli.exits import Exit, highest_ranked
-from loopsim.cli.options import Request, UsageError, parse_words
+from loopsim.cli.options import Request, parse_words
 from loopsim.cli.values import quantity
 from loopsim.errors import AnalysisError, CircuitError, InternalError, LoopsimError, Span
 

@@ -65,3 +65,19 @@ def verb_help(verb: Verb, common: Sequence[Option]) -> str:
             "",
         ]
     )
+
+
+def reference(verbs: Mapping[str, Verb], common: Sequence[Option]) -> str:
+    """The verbs as a section of docs/reference/cli.md."""
+    lines: list[str] = []
+    for verb in verbs.values():
+        lines += [f"## {verb.name} {verb.takes}", "", f"{verb.summary[0].upper()}{verb.summary[1:]}.", ""]
+        lines += ["| example | does |", "| --- | --- |"]
+        lines += [f"| `{command}` | {what} |" for command, what in verb.examples]
+        if verb.options:
+            lines += ["", "| option | does |", "| --- | --- |"]
+            lines += [f"| `{left}` | {right} |" for left, right in _option_rows(verb.options)]
+        lines += ["", *([verb.notes, ""] if verb.notes else [])]
+    lines += ["## Every verb", "", "| option | does |", "| --- | --- |"]
+    lines += [f"| `{left}` | {right} |" for left, right in _option_rows(common)]
+    return "\n".join(lines) + "\n"
