@@ -2,8 +2,9 @@
 
 Fenced blocks of a page run in order, in a folder of their own that holds a copy of `circuits`:
 `loop` beginning with `# file: NAME` is written to that file, and each one that has a `circuit` statement is read;
-`loop` beginning with `# file: NAME` is written to that file; each one with a `circuit` statement is read;
-`text` block follows, compares what it printed. Times and numbers of boxes vary between machines and are not compared.
+`console` runs each line after `$ ` and compares what follows it with the output;
+`python` runs in one name space a page and, where a `text` block follows, compares what it printed.
+Times and numbers of boxes vary between machines and are not compared.
 """
 
 import contextlib
