@@ -16,6 +16,7 @@ LAYERS = (
     ("numerics",),
     ("devices",),
     ("circuit",),
+    ("build",),
     ("language",),
     ("equations",),
     ("analyses",),

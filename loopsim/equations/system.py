@@ -5,12 +5,13 @@ u is 1 where a row is no product (V row 0, d = 1). A leading batch axis on any a
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Any, TypeAlias
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 from loopsim.devices.phi import CURVATURE, SLOPE, VALUE
 
@@ -133,3 +134,55 @@ class System:
         for timed in self.timed:
             s = s + timed.column * (timed.waveform.value(t) - timed.waveform.value(0.0))
         return s
+
+
+def lurie(
+    *,
+    G: ArrayLike,
+    s: ArrayLike | None = None,
+    C: ArrayLike | None = None,
+    B: ArrayLike | None = None,
+    W: ArrayLike | None = None,
+    c: ArrayLike | None = None,
+    V: ArrayLike | None = None,
+    d: ArrayLike | None = None,
+    kinds: ArrayLike = (),
+    parameters: ArrayLike | None = None,
+    names: Sequence[str] = (),
+    supply: ArrayLike | None = None,
+) -> System:
+    """A System from bare arrays, for problems that are published as equations: C x' + G x + B (phi(W x + c) (V x + d)) = s.
+
+    G: (..., n, n); kinds: (m,), one of `loopsim.devices.phi.Kind` each. What is left out is zero, d is one, W and B are the identity
+    where m = n, supply is s. names: of the unknowns, as nets; x1, x2, ... without. ValueError where shapes do not meet.
+    """
+    conductances = np.asarray(G, dtype=float)
+    n = conductances.shape[-1]
+    rows = np.atleast_1d(np.asarray(kinds, dtype=np.int64))
+    m = len(rows)
+
+    def filled(given: ArrayLike | None, shape: tuple[int, ...], otherwise: Array) -> Array:
+        found = otherwise if given is None else np.asarray(given, dtype=float)
+        if found.shape[-len(shape) :] != shape:
+            raise ValueError(f"an array of shape {found.shape} stands where {shape} is wanted")
+        return found
+
+    square = np.eye(n) if m == n else np.zeros((n, m))
+    numbers = np.zeros((m, 0)) if parameters is None else np.asarray(parameters, dtype=float)
+    put_in = filled(s, (n,), np.zeros(n))
+    return System(
+        unknowns=tuple(("net", name) for name in (names or [f"x{i + 1}" for i in range(n)])),
+        C=filled(C, (n, n), np.zeros((n, n))),
+        G=filled(conductances, (n, n), conductances),
+        B=filled(B, (n, m), square),
+        W=filled(W, (m, n), square.T),
+        c=filled(c, (m,), np.zeros(m)),
+        V=filled(V, (m, n), np.zeros((m, n))),
+        d=filled(d, (m,), np.ones(m)),
+        s=put_in,
+        supply=filled(supply, (n,), put_in),
+        kinds=rows,
+        parameters=filled(numbers, (m, numbers.shape[-1]), numbers),
+        owners=tuple(f"row{k + 1}" for k in range(m)),
+        row_units=("1",) * n,
+    )
