@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from itertools import pairwise
 from typing import Any
 
 import mpmath
@@ -38,7 +39,7 @@ def real_roots(coefficients: Sequence[Any], digits: int = 60) -> list[Any]:
         except TypeError:  # an mpmath that knows one order only, the descending one
             roots = mpmath.polyroots(given[::-1], **options)
         real = sorted(mpmath.re(r) for r in roots if abs(mpmath.im(r)) < mpmath.mpf("1e-25") * (1 + abs(r)))
-    if any(b - a < mpmath.mpf("1e-20") for a, b in zip(real, real[1:], strict=False)):
+    if any(b - a < mpmath.mpf("1e-20") for a, b in pairwise(real)):
         raise AssertionError("roots that touch have no count")
     return real
 

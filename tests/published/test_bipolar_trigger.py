@@ -1,7 +1,9 @@
 """Emitter-coupled trigger of two bipolar transistors: three operating points, full Ebers-Moll equations.
 
-Lj. Trajkovic, R. C. Melville, S.-C. Fang (1990/91); A. Dyes and others, Simple implementations of homotopy algorithms for finding dc
-solutions of nonlinear circuits, ISCAS 1999. Parameter values from memory, topology reconstructed; the count of three supports both.
+Lj. Trajkovic, R. C. Melville, S.-C. Fang (1990/91); A. Dyes and others, Simple implementations of homotopy algorithms
+for finding dc
+solutions of nonlinear circuits, ISCAS 1999. Parameter values from memory, topology reconstructed; the count of three
+supports both.
 """
 
 import itertools
@@ -109,8 +111,10 @@ def test_only_the_middle_point_grows():
 
 
 def test_uniqueness_criterion_fails_as_it_must():
-    """I. W. Sandberg, A. N. Willson, SIAM J. Appl. Math. 19 (1970), from memory: one point for every source and every increasing
-    junction law if and only if A = T^-1 G has no negative principal minor. Here the one of both base-collector voltages is -0.0278 mS^2."""
+    """I. W. Sandberg, A. N. Willson, SIAM J. Appl. Math. 19 (1970), from memory: one point for every source and every
+    increasing
+    junction law if and only if A = T^-1 G has no negative principal minor. Here the one of both base-collector
+    voltages is -0.0278 mS^2."""
     G, _ = linear_part()
     rows = junctions()  # be1, bc1, be2, bc2
     W = np.array([row.line for row in rows]) / SLOPE

@@ -117,7 +117,8 @@ def test_trip_points_of_a_comparator_with_hysteresis(text, low, high):
 
 
 def test_latch_of_cross_coupled_transistors_against_extended_precision():
-    """Two npn transistors, Ebers-Moll in transport form, resistors; the three points by mpmath.findroot from each side, to 1e-9."""
+    """Two npn transistors, Ebers-Moll in transport form, resistors; the three points by mpmath.findroot from each
+    side, to 1e-9."""
     text = """circuit latch "Cross-coupled pair"
     kind device = bipolar_npn(saturation_current = 10 fA, forward_gain = 100, reverse_gain = 2)
     gnd -> rail: 5 V -> vcc
@@ -205,7 +206,8 @@ def test_marginal_loop_is_undecided():
 
 
 def test_phase_shift_oscillator_needs_a_gain_of_29():
-    """Three high-pass sections RC = 1 with inverting gain K: at K = 29 the polynomial 30 s^3 + 6 s^2 + 5 s + 1 has roots -0.2 and
+    """Three high-pass sections RC = 1 with inverting gain K: at K = 29 the polynomial 30 s^3 + 6 s^2 + 5 s + 1 has
+    roots -0.2 and
     +-0.408248290463863 i."""
     from loopsim.analyses.stability import judge
 
@@ -215,7 +217,8 @@ def test_phase_shift_oscillator_needs_a_gain_of_29():
         return system_of(np.eye(3), np.zeros(3), [], C=C)
 
     roots = judge(shifter(29.0), np.zeros((1, 3)))[0].eigenvalues
-    assert np.allclose(np.sort_complex(roots), np.sort_complex(np.array([-0.2, 0.408248290463863j, -0.408248290463863j])), atol=1e-9)
+    expected = np.array([-0.2, 0.408248290463863j, -0.408248290463863j])
+    assert np.allclose(np.sort_complex(roots), np.sort_complex(expected), atol=1e-9)
     assert judge(shifter(28.5), np.zeros((1, 3)))[0].stable is True
     assert judge(shifter(29.5), np.zeros((1, 3)))[0].stable is False
 

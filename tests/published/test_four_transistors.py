@@ -1,6 +1,7 @@
 """Two coupled flip-flops of four transistors: nine operating points.
 
-L. O. Chua, R. L. P. Ying, Finding all solutions of piecewise-linear circuits, Int. J. Circuit Theory Appl. 10 (1982) 201-229, and
+L. O. Chua, R. L. P. Ying, Finding all solutions of piecewise-linear circuits, Int. J. Circuit Theory Appl. 10 (1982)
+201-229, and
 S. M. Lee, K. S. Chao, IEEE Trans. CAS 30 (1983). Equations from memory; the count of nine supports them.
 Unknowns: base-emitter voltages of a forward-only model, i_k = 1e-9 (exp(40 v_k) - 1).
 """

@@ -1,6 +1,7 @@
 """n tunnel diodes with a common resistor, and a cubic companion with a closed form: exact counts at every size.
 
-K. Yamamura, H. Kawata, A. Tokue, Interval solution of nonlinear equations using linear programming, BIT 38 (1998) 186-199; formula from
+K. Yamamura, H. Kawata, A. Tokue, Interval solution of nonlinear equations using linear programming, BIT 38 (1998)
+186-199; formula from
 memory. Counts recomputed by a reduction to one variable, repeated here. Companion: closed form derived.
 """
 
@@ -54,7 +55,8 @@ def companion_points(n):
 
 
 def diode_points(n):
-    """Every solution by the reduction: for a sum S each x_i is one of the real roots of g(x) = i - S. The branch of each root is
+    """Every solution by the reduction: for a sum S each x_i is one of the real roots of g(x) = i - S. The branch of
+    each root is
     followed by monotone pieces of g; zeros of sum(x_i) - S by brentq on a grid between the ends of the pieces."""
     top, bottom = 0.778174729794079, 2.021825270205921
 

@@ -1,6 +1,7 @@
 """A piecewise-linear resistor, two capacitors and an inductor: three equilibria, all unstable, all in closed form.
 
-T. Matsumoto, L. O. Chua, M. Komuro, The double scroll, IEEE Trans. CAS 32 (1985) 797-818; L. O. Chua, M. Komuro, T. Matsumoto, The double
+T. Matsumoto, L. O. Chua, M. Komuro, The double scroll, IEEE Trans. CAS 32 (1985) 797-818; L. O. Chua, M. Komuro, T.
+Matsumoto, The double
 scroll family, IEEE Trans. CAS 33 (1986) 1072-1118: parameters and three-digit eigenvalues from memory, recomputed to 16.
 x' = alpha (y - x - f(x)), y' = x - y + z, z' = -beta y, f(x) = m1 x + (m0 - m1) (|x + 1| - |x - 1|) / 2, m0 = -8/7, m1 = -5/7.
 """

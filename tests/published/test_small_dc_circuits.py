@@ -76,11 +76,13 @@ def test_diode_and_resistor_agree_with_lambert_w(row):
 
 
 def test_four_resistor_bias():
-    """Derived, Lambert W; forward-active transistor with Ib = (Is / bF) (exp(vBE / VT) - 1), Ic = bF Ib. The full device's reverse
+    """Derived, Lambert W; forward-active transistor with Ib = (Is / bF) (exp(vBE / VT) - 1), Ic = bF Ib. The full
+    device's reverse
     current at 5.8 V of reverse bias is a saturation current, 1e-15 A: below the tolerance."""
     point = only(
         f"""circuit bias "Four resistors and a transistor"
-        kind stage = bipolar_npn(saturation_current = 1 fA, forward_gain = 100, reverse_gain = 1, ideality = {0.025852 / THERMAL!r})
+        kind stage = bipolar_npn(saturation_current = 1 fA, forward_gain = 100, reverse_gain = 1, ideality = {0.025852
+        / THERMAL!r})
         gnd -> source: 12 V -> vcc
         vcc -- r1: 100 kohm -- base -- r2: 20 kohm -- gnd
         vcc -- rc: 4.7 kohm -- collector
@@ -95,7 +97,8 @@ def test_four_resistor_bias():
 
 
 def test_square_law_in_arrays():
-    """Derived: I = (k/2) (V - Vt)^2 with R to VDD; the quadratic has a second root with the channel off, which the square law's own
+    """Derived: I = (k/2) (V - Vt)^2 with R to VDD; the quadratic has a second root with the channel off, which the
+    square law's own
     condition V > Vt rules out, and no more."""
     k, threshold, ohms, supply = 2e-4, 1.0, 1e4, 5.0
     # (k/2) (V^2 - 2 Vt V + Vt^2) + V / R = VDD / R
@@ -121,14 +124,16 @@ def inverter(p_transconductance):
 
 @pytest.mark.parametrize(("ratio", "threshold", "tolerance"), [(1, 1.265, 1e-5), (2, 0.98666667, 2e-3)])
 def test_switching_voltage_of_an_inverter(ratio, threshold, tolerance):
-    """Square law, derived: VM = (VDD - |Vtp| + r Vtn) / (1 + r), r = sqrt(kn / kp). The charge-sheet law is the square law plus terms of
+    """Square law, derived: VM = (VDD - |Vtp| + r Vtn) / (1 + r), r = sqrt(kn / kp). The charge-sheet law is the square
+    law plus terms of
     the order exp(-(V - Vt) / (2 V_T)); with r = 1 they cancel by symmetry."""
     point = only(inverter(1 / ratio**2))
     assert point["middle"] == pytest.approx(threshold, abs=tolerance)
 
 
 def test_textbook_diode():
-    """A. Sedra, K. Smith, Microelectronic Circuits, from memory: 5 V, 1 kohm, 0.7 V at 1 mA and 60 mV a decade: 4.262 mA, 0.738 V."""
+    """A. Sedra, K. Smith, Microelectronic Circuits, from memory: 5 V, 1 kohm, 0.7 V at 1 mA and 60 mV a decade: 4.262
+    mA, 0.738 V."""
     scale = 0.06 / np.log(10.0)
     saturation = 1e-3 / np.expm1(0.7 / scale)
     point = only(
@@ -143,7 +148,8 @@ def test_textbook_diode():
 
 @pytest.mark.parametrize("multiple", [-3.0, -1.0, 0.0, 0.5, 1.0, 4.0])
 def test_differential_pair_follows_tanh(multiple):
-    """Textbook: the difference of the collector currents is I_EE tanh(v_id / (2 V_T)); v_id = V_T gives 0.462117157260009759."""
+    """Textbook: the difference of the collector currents is I_EE tanh(v_id / (2 V_T)); v_id = V_T gives
+    0.462117157260009759."""
     drive = multiple * THERMAL
     point = only(
         f"""circuit pair "Differential pair without base currents to speak of"

@@ -1,7 +1,9 @@
 """Two tunnel diodes in series: nine operating points, four of them on a closed branch that no sweep of the supply reaches.
 
-Circuit after L. O. Chua, A. Ushida, A switching-parameter algorithm for finding multiple solutions of nonlinear resistive circuits,
-Int. J. Circuit Theory Appl. 4 (1976) 215-239. Coefficients from memory; nine real roots support them. The reference is one polynomial
+Circuit after L. O. Chua, A. Ushida, A switching-parameter algorithm for finding multiple solutions of nonlinear
+resistive circuits,
+Int. J. Circuit Theory Appl. 4 (1976) 215-239. Coefficients from memory; nine real roots support them. The reference is
+one polynomial
 of degree 9 in v1, solved here by mpmath: at most nine solutions, so nine real roots are a proof of completeness.
 """
 
