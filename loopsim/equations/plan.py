@@ -265,7 +265,8 @@ def plan(circuit: Circuit) -> Plan:
 def make_plan(circuit: Circuit) -> Plan:
     """Check pins and fields of every part and find the place of each of its numbers."""
     parameters = parameter_plan(circuit)
-    parts = [_part_plan(part, circuit, parameters) for part in circuit.parts]
+    nets = frozenset(("gnd", *circuit.nets))
+    parts = [_part_plan(part, circuit, nets, parameters) for part in circuit.parts]
     _check_names(circuit)
     contributions = [part_contribution(entry, parameters.nominal, circuit.curves) for entry in parts]
     wanted = _currents_read(contributions)
@@ -322,7 +323,7 @@ def make_plan(circuit: Circuit) -> Plan:
 # --- parts ---------------------------------------------------------------------------------------------------------------------
 
 
-def _part_plan(part: Part, circuit: Circuit, parameters: ParameterPlan) -> PartPlan:
+def _part_plan(part: Part, circuit: Circuit, nets: frozenset[str], parameters: ParameterPlan) -> PartPlan:
     if part.device not in DEVICES:
         near = difflib.get_close_matches(part.device, DEVICES, 1)
         hint = f"did you mean `{near[0]}`?" if near else ""
@@ -331,7 +332,7 @@ def _part_plan(part: Part, circuit: Circuit, parameters: ParameterPlan) -> PartP
     for pin in device.pins:
         if pin not in part.pins:
             raise CircuitError("pin-missing", f"`{part.name}`: pin `{pin}` of {part.device} is not connected", part.span)
-        if part.pins[pin] != "gnd" and part.pins[pin] not in circuit.nets:
+        if part.pins[pin] not in nets:
             raise CircuitError("unknown-net", f"`{part.name}`: there is no net `{part.pins[pin]}`", part.span)
     for pin in part.pins:
         if pin not in device.pins:
