@@ -1,0 +1,85 @@
+"""Seeded random circuits of resistors, junctions and transistors, built as data.
+
+Supplies are Norton sources (a current and a resistor), so that a nodal matrix without gains has a positive determinant: the sign to
+which determinants are compared.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from loopsim.build import CircuitBuilder
+from loopsim.circuit import Circuit
+
+
+def _supply(build: CircuitBuilder, name: str, net: str, volts: float, ohms: float) -> None:
+    build.chain("gnd", f"{name}_source", net, device="current_source", current=volts / ohms)
+    build.chain(net, f"{name}_resistor", "gnd", device="resistor", resistance=ohms)
+
+
+def two_transistors(seed: int) -> Circuit:
+    """A pair of transistors that feed each other: the only structure of two transistors that can have several operating points
+    (R. O. Nielsen, A. N. Willson, Proc. IEEE 68 (1980) 196-208, from memory), with random resistors round it."""
+    random = np.random.default_rng([31, seed])
+    build = CircuitBuilder(f"pair_{seed}")
+    complementary = random.random() < 0.3
+    kinds = ("bipolar_npn", "bipolar_pnp") if complementary else ("bipolar_npn", "bipolar_npn")
+    volts = random.uniform(2.0, 12.0)
+    emitters = ("e1", "e1") if random.random() < 0.5 and not complementary else ("e1", "e2")
+    for k, (kind, emitter) in enumerate(zip(kinds, emitters, strict=True), start=1):
+        fields = {
+            "saturation_current": 10 ** random.uniform(-16, -13),
+            "forward_gain": 10 ** random.uniform(1, 2.5),
+            "reverse_gain": 10 ** random.uniform(-0.5, 1),
+        }
+        build.part(f"q{k}", kind, {"collector": f"c{k}", "base": f"b{k}", "emitter": emitter}, **fields)
+    for k in (1, 2):
+        if complementary and k == 2:
+            build.chain("c2", "r_c2", "gnd", device="resistor", resistance=10 ** random.uniform(2, 4))
+            _supply(build, "e2", "e2", volts, 10 ** random.uniform(1, 3))
+        else:
+            _supply(build, f"c{k}", f"c{k}", volts, 10 ** random.uniform(2.5, 4))
+        build.chain(f"c{k}", f"r_b{3 - k}", f"b{3 - k}", device="resistor", resistance=10 ** random.uniform(2, 4.5))
+        if random.random() < 0.7:
+            build.chain(f"b{k}", f"r_g{k}", "gnd", device="resistor", resistance=10 ** random.uniform(3, 6))
+    for emitter in sorted(set(emitters)):
+        build.chain(emitter, f"r_{emitter}", "gnd", device="resistor", resistance=10 ** random.uniform(0, 3))
+    return build.circuit()
+
+
+def one_transistor(seed: int) -> Circuit:
+    """One transistor between random resistors: never more than one operating point (same source, corollary)."""
+    random = np.random.default_rng([32, seed])
+    build = CircuitBuilder(f"single_{seed}")
+    kind = str(random.choice(["bipolar_npn", "bipolar_pnp"]))
+    build.part(
+        "q1", kind, {"collector": "c", "base": "b", "emitter": "e"},
+        saturation_current=10 ** random.uniform(-16, -13),
+        forward_gain=10 ** random.uniform(1, 2.5),
+        reverse_gain=10 ** random.uniform(-0.5, 1),
+    )
+    for net in ("c", "b", "e"):
+        _supply(build, net, net, random.uniform(-9.0, 9.0), 10 ** random.uniform(2, 5))
+    for a, b in (("c", "b"), ("b", "e"), ("c", "e")):
+        if random.random() < 0.6:
+            build.chain(a, f"r_{a}{b}", b, device="resistor", resistance=10 ** random.uniform(2, 5))
+    return build.circuit()
+
+
+def junction_network(seed: int) -> Circuit:
+    """Voltage sources, resistors and junctions: every two-terminal part increasing, so exactly one operating point (R. J. Duffin 1947,
+    from memory), and every net between the extreme source voltages."""
+    random = np.random.default_rng([33, seed])
+    build = CircuitBuilder(f"network_{seed}")
+    nets = [f"n{k}" for k in range(int(random.integers(2, 6)))]
+    for k in range(int(random.integers(1, 3))):
+        build.chain("gnd", f"source{k}", f"s{k}", device="voltage_source", voltage=random.uniform(-8.0, 8.0))
+        build.chain(f"s{k}", f"feed{k}", nets[k % len(nets)], device="resistor", resistance=10 ** random.uniform(1, 5))
+    for k, net in enumerate(nets):
+        build.chain(net, f"r{k}", str(random.choice(["gnd", *[n for n in nets if n != net]])), device="resistor",
+                    resistance=10 ** random.uniform(1, 6))
+        build.chain(net, f"g{k}", "gnd", device="resistor", resistance=10 ** random.uniform(4, 7))
+    for k in range(int(random.integers(1, 6))):
+        a, b = (str(x) for x in random.choice(["gnd", *nets], 2, replace=False))
+        build.chain(a, f"d{k}", b, device="diode", saturation_current=10 ** random.uniform(-15, -8), ideality=random.uniform(1, 2))
+    return build.circuit()
