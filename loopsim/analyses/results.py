@@ -100,7 +100,8 @@ class States(Sequence[State]):
 
     complete: proved that there are no others within `box` [V]. undecided: clusters or boxes left (0 when complete); remainder: a line
     each on where. boxes: how many were examined. seconds: wall time. settings: lets as used [SI]. watch: nets shown first.
-    units: of the settings, for printing. States known but not proved unique have certified_radius 0.
+    chosen: the settings worth printing; units: of the settings, for printing. States known but not proved unique have
+    certified_radius 0.
     """
 
     circuit: str
@@ -115,6 +116,7 @@ class States(Sequence[State]):
     watch: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     remainder: tuple[str, ...] = field(default=())
+    chosen: tuple[str, ...] = ()
     units: Mapping[str, str] = field(default_factory=dict)
 
     def __len__(self) -> int:

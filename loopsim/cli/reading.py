@@ -60,9 +60,6 @@ def read_circuit(path: str) -> Circuit:
     return load(path)
 
 
-def units(circuit: Circuit) -> dict[str, str]:
-    """The unit of every let, for printing."""
-    return {name: parameter.unit for name, parameter in circuit.parameters.items()}
 
 
 def write_file(path: str, text: str) -> tuple[str, ...]:

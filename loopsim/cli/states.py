@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 from loopsim.cli.answer import Answer, Surroundings
 from loopsim.cli.exits import Exit
 from loopsim.cli.options import Request
-from loopsim.cli.reading import read_circuit, settings, units, write_file
+from loopsim.cli.reading import read_circuit, settings, write_file
 from loopsim.output.csv import states_csv
 from loopsim.output.document import document, document_text
 from loopsim.output.text import states_text
@@ -36,7 +36,7 @@ def run(request: Request, around: Surroundings) -> Answer:
             "states", points.to_dict(), circuit=points.circuit, file=request.paths[0], settings=points.settings
         )
         return Answer(document_text(whole), code(points), remarks)
-    return Answer(states_text(points, units(circuit), around.answers), code(points), remarks)
+    return Answer(states_text(points, around.answers), code(points), remarks)
 
 
 def code(points: States) -> Exit:

@@ -41,8 +41,8 @@ def engineering(value: float | None, unit: str = "", digits: int = 4) -> str:
     exponent = 3 * math.floor(math.log10(abs(mantissa)) / 3 + 1e-12)
     if exponent not in PREFIXES:
         return f"{value:.{digits - 1}e} {shown}"
-    # a squared or composed unit cannot carry a prefix on the whole; ohm, V, A, s, Hz, F, H, W, S and rates can
-    if any(mark in unit.removeprefix("1/") for mark in "^*/ "):
+    # a prefix belongs to the unit behind it: mA/V^2 is fine, mV^2 and mV^-1 would be something else
+    if not unit.startswith("1/") and not unit.partition("/")[0].isalpha():
         plain = significant(value, digits) if 1e-3 <= abs(value) < 1e6 else f"{value:.{digits - 1}e}"
         return f"{plain} {shown}"
     return f"{significant(mantissa / 10.0**exponent, digits)} {PREFIXES[exponent]}{shown}"

@@ -42,10 +42,10 @@ def settings_text(settings: Mapping[str, float], units: Mapping[str, str]) -> st
     return ", ".join(f"{printable(name)} = {shortest(float(value), units.get(name, ''))}" for name, value in settings.items())
 
 
-def heading(circuit: str, settings: Mapping[str, float], units: Mapping[str, str]) -> str:
-    """The circuit and what was set."""
-    chosen = settings_text(settings, units)
-    return printable(circuit) + (f", {chosen}" if chosen else "")
+def heading(points: States) -> str:
+    """The circuit and the settings worth printing."""
+    chosen = settings_text({name: points.settings[name] for name in points.chosen}, points.units)
+    return printable(points.circuit) + (f", {chosen}" if chosen else "")
 
 
 def _known(points: States) -> str:
@@ -58,16 +58,14 @@ def _known(points: States) -> str:
     return f"({where}, {cost})"
 
 
-def _verdict_notes(points: States) -> list[str]:
-    """The doubts and assumptions of the verdicts, states that share one named together."""
+def _state_notes(points: States) -> list[str]:
+    """What the table has no column for: oscillation, and points that nothing proves; states that share a note named together."""
     sharing: dict[str, list[str]] = {}
     for state in points:
         full = state.verdict_full
         if full.frequency is not None:
             swings = f", swinging most at {', '.join(full.swings)}" if full.swings else ""
             sharing.setdefault(f"oscillation near {engineering(full.frequency, 'Hz')}{swings}", []).append(state.name)
-        if full.note:
-            sharing.setdefault(full.note, []).append(state.name)
     lines = []
     for note, names in sharing.items():
         owner = "all states" if len(names) == len(points) > 1 else ", ".join(names)
@@ -82,10 +80,10 @@ def _mark(state: State, text: str, palette: Palette) -> str:
     return palette.calm(text) if state.stable else palette.alarm(text)
 
 
-def states_text(points: States, units: Mapping[str, str] | None = None, palette: Palette = PLAIN) -> str:
-    """The answer of `states` with a line end. units: of the settings by let name, where the result does not know them."""
+def states_text(points: States, palette: Palette = PLAIN) -> str:
+    """The answer of `states` with a line end."""
     lines = [
-        palette.strong(heading(points.circuit, points.settings, units or points.units)),
+        palette.strong(heading(points)),
         f"{counted(len(points), 'operating point')}: {points.word} {_known(points)}",
     ]
     shown: tuple[str, ...] = ()
@@ -93,7 +91,7 @@ def states_text(points: States, units: Mapping[str, str] | None = None, palette:
         every = tuple(points[0].nets)
         shown = (points.watch or every)[:MANY_NETS]
         lines += ["", *_states_table(points, shown, palette)]
-    notes = [*_verdict_notes(points), *points.notes, *points.remainder]
+    notes = [*_state_notes(points), *points.notes, *points.remainder]
     hidden = len(points.watch or (points[0].nets if len(points) else ())) - len(shown)
     if hidden > 0:
         notes.append(f"{counted(hidden, 'more watched net')} in --json and --csv")
@@ -124,7 +122,7 @@ def _states_table(points: States, nets: Sequence[str], palette: Palette) -> list
     return [palette.faint(first), *marked]
 
 
-def states_html(points: States, units: Mapping[str, str] | None = None) -> str:
+def states_html(points: States) -> str:
     """The answer as a small HTML fragment for notebooks; every text escaped."""
 
     def safe(text: str) -> str:
@@ -146,7 +144,7 @@ def states_html(points: States, units: Mapping[str, str] | None = None) -> str:
         + "</tr>"
         for state in points
     )
-    title = safe(heading(points.circuit, points.settings, units or points.units))
+    title = html.escape(heading(points))
     count = safe(f"{counted(len(points), 'operating point')}: {points.word} {_known(points)}")
-    notes = "".join(f"<br>{safe(note)}" for note in (*_verdict_notes(points), *points.notes, *points.remainder))
+    notes = "".join(f"<br>{safe(note)}" for note in (*_state_notes(points), *points.notes, *points.remainder))
     return f"<table><caption>{title}<br>{count}{notes}</caption><thead><tr>{head}</tr></thead><tbody>{body}</tbody></table>"

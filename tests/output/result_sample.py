@@ -27,7 +27,7 @@ def points(states: tuple[State, ...] = THREE, **changes: Any) -> States:
     given: dict[str, Any] = {
         "circuit": "cistern_pump",
         "file": "cistern_pump.loop",
-        "settings": {"level": 4.5},
+        "settings": {"level": 4.5, "supply": 9.0, "r_in.resistance": 1e4},
         "states": states,
         "complete": True,
         "undecided": 0,
@@ -35,6 +35,7 @@ def points(states: tuple[State, ...] = THREE, **changes: Any) -> States:
         "boxes": 11,
         "seconds": 0.009,
         "watch": ("out", "plus"),
-        "units": {"level": "V"},
+        "chosen": ("level",),
+        "units": {"level": "V", "supply": "V", "r_in.resistance": "ohm"},
     }
     return States(**{**given, **changes})

@@ -47,16 +47,15 @@ def test_points_of_a_search_are_called_found_and_marked() -> None:
     assert "A, B: found by search, not proved to be the only one in its place" in text
 
 
-def test_notes_that_states_share_are_said_once() -> None:
+def test_an_oscillation_that_states_share_is_said_once_and_notes_stand_below() -> None:
     noted = (
-        state("A", 0.0, 1.0, -1e3, note="strays of 1 pF assumed"),
+        state("A", 0.0, 1.0, -1e3),
         state("B", 1.0, 1.0, 2e3, "unstable with these dynamics", frequency=1591.2, damping=-0.2, swings=("out", "plus")),
-        state("C", 2.0, 1.0, -1e3, note="strays of 1 pF assumed"),
+        state("C", 2.0, 1.0, 1e3, "unstable with these dynamics", frequency=1591.2, damping=-0.3, swings=("out", "plus")),
     )
-    lines = states_text(points(noted, notes=("the start box is 1 kV",))).splitlines()
-    assert "A, C: strays of 1 pF assumed" in lines
-    assert "B: oscillation near 1.591 kHz, swinging most at out, plus" in lines
-    assert "the start box is 1 kV" in lines
+    lines = states_text(points(noted, notes=("1 pF assumed on every net",))).splitlines()
+    assert "B, C: oscillation near 1.591 kHz, swinging most at out, plus" in lines
+    assert "1 pF assumed on every net" in lines
     assert lines[3].split() == ["state", "verdict", "out", "plus", "fastest", "growth", "damping"]
     assert lines[5].split()[-1] == "-0.20"
 
@@ -86,7 +85,7 @@ def test_colour_changes_no_letter_and_no_column() -> None:
 def test_nothing_of_a_circuit_reaches_the_terminal_unescaped() -> None:
     evil = state("A", 0.0, 1.0, -1.0, "stable\x1b[2J", note="\x1b]0;title\x07", swings=("\x9bnet",), frequency=1.0)
     odd = dataclasses.replace(evil, nets={"a\x1b[31m": 1.0, "b\u202e\r\n": 2.0})
-    strange = {"circuit": "c\x1b[5m", "settings": {"l\x08": 1.0}, "notes": ("n\x1b",), "remainder": ("\x00",)}
+    strange = {"circuit": "c\x1b[5m", "settings": {"l\x08": 1.0}, "chosen": ("l\x08",), "notes": ("n\x1b",), "remainder": ("\x00",)}
     text = states_text(points((odd,), watch=(), **strange))
     assert all(c == "\n" or c.isprintable() for c in text)
 
