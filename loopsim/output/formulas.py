@@ -24,7 +24,8 @@ def formula_text(tree: Expression, unit: str = "") -> str:
 def _inside(tree: Expression, strength: int) -> str:
     match tree:
         case Number(value):
-            return shortest(value, "", DIGITS)
+            text = shortest(value, "", DIGITS)
+            return f"({text})" if value < 0.0 and strength > STRENGTH["negative"] else text
         case LetRef(name) | NetRef(name):
             return name
         case CurrentRef(part):

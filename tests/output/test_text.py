@@ -85,8 +85,8 @@ def test_colour_changes_no_letter_and_no_column() -> None:
 def test_nothing_of_a_circuit_reaches_the_terminal_unescaped() -> None:
     evil = state("A", 0.0, 1.0, -1.0, "stable\x1b[2J", note="\x1b]0;title\x07", swings=("\x9bnet",), frequency=1.0)
     odd = dataclasses.replace(evil, nets={"a\x1b[31m": 1.0, "b\u202e\r\n": 2.0})
-    strange = {"circuit": "c\x1b[5m", "settings": {"l\x08": 1.0}, "chosen": ("l\x08",), "notes": ("n\x1b",), "remainder": ("\x00",)}
-    text = states_text(points((odd,), watch=(), **strange))
+    strange = {"circuit": "c\x1b[5m", "settings": {"l\x08": 1.0}, "chosen": ("l\x08",)}
+    text = states_text(points((odd,), watch=(), notes=("n\x1b",), remainder=("\x00",), **strange))
     assert all(c == "\n" or c.isprintable() for c in text)
 
 
