@@ -62,7 +62,8 @@ def _field(value: Given) -> FieldValue:
 
 
 class CircuitBuilder:
-    """Collects lets, curves, parts and couplings; `circuit()` gives the frozen circuit. Nets come into being where they are named."""
+    """Collects lets, curves, parts and couplings; `circuit()` gives the frozen circuit. Nets come into being where they are
+    named."""
 
     def __init__(self, name: str, title: str = "") -> None:
         self._name, self._title = name, title
@@ -117,5 +118,11 @@ class CircuitBuilder:
         """What was collected so far."""
         parameters = {"ambient": Parameter("ambient", Number(25.0), "degC"), **self._parameters}
         return Circuit(
-            self._name, self._title, None, tuple(self._nets), parameters, dict(self._curves), tuple(self._parts), tuple(self._couplings)
+            name=self._name,
+            title=self._title,
+            nets=tuple(self._nets),
+            parameters=parameters,
+            curves=dict(self._curves),
+            parts=tuple(self._parts),
+            couplings=tuple(self._couplings),
         )

@@ -44,7 +44,8 @@ class _Output:
 
 
 def _output(output_resistance: Scalar) -> _Output:
-    """Without a resistance `out` itself is the driven voltage and the current into it is free; with one an inner voltage is driven."""
+    """Without a resistance `out` itself is the driven voltage and the current into it is free; with one an inner voltage is
+    driven."""
     if output_resistance is None:
         entry: Entry = ("out", "output_current", -1.0)
         return _Output("out", "output_current", Unknown("output_current", "A"), (entry,), Branch(GROUND, "out", "voltage", True))
@@ -89,10 +90,11 @@ class OpAmp:
 
     (1 / (2 pi f_1)) dz/dt = v_d - z / A - r k softplus((z - high + headroom) / k) + r k softplus((low + headroom - z) / k),
 
-    v_d = plus - minus + input_offset, A = gain, softplus(u) = ln(1 + exp(u)), k = knee, r = clamp_ratio, f_1 = gain_bandwidth; without
-    it there is no dynamics. Where slew_rate S is given, v_d - z / A is replaced by L tanh((v_d - z / A) / L), L = S / (2 pi f_1), so
-    that dz/dt is at most S; the gain at rest stays A. out = z, or z through output_resistance. The clamps let z past a rail by
-    overdrive / r at most, and round the corner: where a loop with feedback share b turns over, z is short of it by about k ln(r / b).
+    v_d = plus - minus + input_offset, A = gain, softplus(u) = ln(1 + exp(u)), k = knee, r = clamp_ratio, f_1 =
+    gain_bandwidth; without it there is no dynamics. Where slew_rate S is given, v_d - z / A is replaced by L tanh((v_d - z /
+    A) / L), L = S / (2 pi f_1), so that dz/dt is at most S; the gain at rest stays A. out = z, or z through
+    output_resistance. The clamps let z past a rail by overdrive / r at most, and round the corner: where a loop with
+    feedback share b turns over, z is short of it by about k ln(r / b).
     """
 
     pins: ClassVar[tuple[str, ...]] = ("plus", "minus", "out", "high", "low")
@@ -114,7 +116,8 @@ class OpAmp:
 
     def contribution(self, ambient: Scalar) -> Contribution:
         if self.slew_rate is not None and self.gain_bandwidth is None:
-            raise CircuitError("field-missing", "a slew_rate needs a gain_bandwidth", hint="give gain_bandwidth, or leave slew_rate out")
+            hint = "give gain_bandwidth, or leave slew_rate out"
+            raise CircuitError("field-missing", "a slew_rate needs a gain_bandwidth", hint=hint)
         at = _output(self.output_resistance)
         conductance, capacitance, source, branches = _input(
             self.input_offset, self.input_bias, self.input_resistance, self.input_capacitance
@@ -141,12 +144,14 @@ class OpAmp:
 
 @dataclass(frozen=True)
 class Comparator:
-    """Decides plus > minus. Output `push_pull`: as the op-amp without dynamics of its own. Output `open_collector`: from `out` to `low`
-    a conductance (1 - d) / (2 sink_resistance), d = tanh(gain v_d / 1 V), v_d = plus - minus + input_offset; nothing drives it up.
+    """Decides plus > minus. Output `push_pull`: as the op-amp without dynamics of its own. Output `open_collector`: from
+    `out` to `low` a conductance (1 - d) / (2 sink_resistance), d = tanh(gain v_d / 1 V), v_d = plus - minus + input_offset;
+    nothing drives it up.
 
-    propagation_delay t_p puts a decision y between: tau dy/dt = tanh(...) - y, tau = t_p / ln 2, so that a full swing of the input
-    passes y = 0 after t_p; push_pull: tanh(gain v_d / 200 V) and an output gain of 200 V, so that gain is kept and the rails are
-    reached at |y| of a few hundredths; open_collector: d = tanh(50 y), y following tanh(gain v_d / 50 V) (own; from common practice).
+    propagation_delay t_p puts a decision y between: tau dy/dt = tanh(...) - y, tau = t_p / ln 2, so that a full swing of the
+    input passes y = 0 after t_p; push_pull: tanh(gain v_d / 200 V) and an output gain of 200 V, so that gain is kept and the
+    rails are reached at |y| of a few hundredths; open_collector: d = tanh(50 y), y following tanh(gain v_d / 50 V) (own;
+    from common practice).
     """
 
     pins: ClassVar[tuple[str, ...]] = ("plus", "minus", "out", "high", "low")

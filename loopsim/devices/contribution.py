@@ -1,7 +1,7 @@
 """What one device adds to C x' + G x + B psi(W x + c) = s, as plain data in the names of its pins and of its own unknowns.
 
-Signs: the row of a net is the sum of currents that leave it, so a current i through a part from pin `a` to pin `b` adds +i to row a
-and -i to row b; `source` and `supply` are what stands on the right-hand side. The row of an own unknown is its law.
+Signs: the row of a net is the sum of currents that leave it, so a current i through a part from pin `a` to pin `b` adds +i
+to row a and -i to row b; `source` and `supply` are what stands on the right-hand side. The row of an own unknown is its law.
 """
 
 from __future__ import annotations
@@ -31,7 +31,8 @@ class Unknown:
 
 @dataclass(frozen=True, slots=True)
 class Term:
-    """One nonlinear row: phi_kind(sum control + offset) * (sum factor + factor_offset), entered into rows with the outputs' weights."""
+    """One nonlinear row: phi_kind(sum control + offset) * (sum factor + factor_offset), entered into rows with the outputs'
+    weights."""
 
     kind: Kind
     control: tuple[Share, ...]
@@ -55,7 +56,8 @@ class Branch:
     """How two points are joined at DC, for the structure findings.
 
     way: "conductance" (current follows voltage), "voltage" (the voltage between them is prescribed), "current" (the current is
-    prescribed), "capacitance" (open at DC), "sense" (`first` is only looked at). controlled: a prescribed value that depends on others.
+    prescribed), "capacitance" (open at DC), "sense" (`first` is only looked at). controlled: a prescribed value that depends
+    on others.
     """
 
     first: Symbol
@@ -103,8 +105,8 @@ def branch_entries(first: Symbol, second: Symbol) -> tuple[Entry, ...]:
 
 
 def with_current(part: Contribution) -> Contribution:
-    """The same two-terminal part with its current as an unknown: `current` stands in the balances, and all that entered the row of
-    `from` makes up the law of `current`. Needed where a formula reads the current of a part that has none."""
+    """The same two-terminal part with its current as an unknown: `current` stands in the balances, and all that entered the
+    row of `from` makes up the law of `current`. Needed where a formula reads the current of a part that has none."""
 
     def moved(row: Symbol) -> Symbol | None:
         return {"from": "current", "to": None}.get(row, row) if isinstance(row, str) else row

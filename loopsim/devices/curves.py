@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -22,7 +23,8 @@ class CurveValues:
 
 
 def everywhere(condition: Any) -> bool:
-    """Whether a comparison holds for every member of a batch. What is neither a truth value nor an array of them is not judged."""
+    """Whether a comparison holds for every member of a batch. What is neither a truth value nor an array of them is not
+    judged."""
     return bool(np.all(condition)) if isinstance(condition, bool | np.bool_ | np.ndarray) else True
 
 
@@ -39,7 +41,7 @@ def points_curve(pairs: Sequence[Scalar]) -> CurveValues:
     x, y = pairs[0::2], pairs[1::2]
     if len(x) < 2 or len(x) != len(y):
         raise CircuitError("curve-points", f"a curve of points needs at least two points, this one has {len(y)}")
-    if not all(everywhere(a < b) for a, b in zip(x[:-1], x[1:], strict=True)):
+    if not all(everywhere(a < b) for a, b in pairwise(x)):
         raise CircuitError("curve-points", "the points of a curve must ascend in x", hint="sort them, drop doubles")
     slopes = [
         (y[j + 1] - y[j]) / (x[j + 1] - x[j]) for j in range(len(x) - 1)

@@ -1,4 +1,5 @@
-"""Formulas of net voltages and part currents as sums: a constant, coefficients of unknowns, and saturating or curve terms of such sums."""
+"""Formulas of net voltages and part currents as sums: a constant, coefficients of unknowns, and saturating or curve terms of
+such sums."""
 
 from __future__ import annotations
 

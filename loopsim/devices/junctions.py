@@ -29,9 +29,10 @@ from loopsim.devices.thermal import saturation_factor, thermal_voltage
 class Diode:
     """i = I_S (exp(v / (n V_T)) - 1) - I_B (exp(-(v + V_B) / V_T) - exp(-V_B / V_T)), anode `from`, cathode `to`.
 
-    The first term is Shockley's law (1949, from memory), the second the breakdown branch (common practice): the reverse current grows
-    past I_B = breakdown_current at V_B = breakdown_voltage. v is the voltage behind series_resistance. Charge: junction_capacitance v
-    (constant capacitance) and transit_time times the first term (common practice). I_S moves with temperature as `saturation_factor`.
+    The first term is Shockley's law (1949, from memory), the second the breakdown branch (common practice): the reverse
+    current grows past I_B = breakdown_current at V_B = breakdown_voltage. v is the voltage behind series_resistance. Charge:
+    junction_capacitance v (constant capacitance) and transit_time times the first term (common practice). I_S moves with
+    temperature as `saturation_factor`.
     """
 
     pins: ClassVar[tuple[str, ...]] = TWO
@@ -67,7 +68,8 @@ class Diode:
             capacitance.extend(across(anode, "to", self.junction_capacitance))
         outputs = through(anode, "to", saturation)
         if self.transit_time is not None:
-            # the diffusion current is an unknown d with d = I_S (exp - 1), so that the stored charge transit_time * d stays linear
+            # the diffusion current is an unknown d with d = I_S (exp - 1), so that the stored charge transit_time * d stays
+            # linear
             unknowns.append(Unknown("diffusion_current", "A"))
             conductance.append(("diffusion_current", "diffusion_current", 1.0))
             capacitance += [(anode, "diffusion_current", self.transit_time), ("to", "diffusion_current", -self.transit_time)]

@@ -32,9 +32,9 @@ FULL = 20.0  # tanh(20) is 1 to the last digit: a timed switch is fully on or of
 class Switch:
     """i = (g_off + (g_on - g_off) (1 + t) / 2) v with t = tanh((v_control - threshold) / width): smooth between off and on.
 
-    `control` names the net whose voltage closes the switch. Instead, close_time and open_time may be given: it then changes at those
-    times, each within transition_time, and begins open if it closes first, else closed. Own law. The conductance off is exact to about
-    1e-16 of that on.
+    `control` names the net whose voltage closes the switch. Instead, close_time and open_time may be given: it then changes
+    at those times, each within transition_time, and begins open if it closes first, else closed. Own law. The conductance
+    off is exact to about 1e-16 of that on.
     """
 
     pins: ClassVar[tuple[str, ...]] = TWO
@@ -78,9 +78,8 @@ class Switch:
     def _times(self) -> tuple[tuple[Share, ...], tuple[Timed, ...]]:
         """The control's value at time 0 and its changes: -FULL open, +FULL closed."""
         if self.close_time is None and self.open_time is None:
-            raise CircuitError(
-                "field-missing", "a switch needs a control net, a close_time or an open_time", hint="control = NET, or close_time = 1 ms"
-            )
+            text = "a switch needs a control net, a close_time or an open_time"
+            raise CircuitError("field-missing", text, hint="control = NET, or close_time = 1 ms")
         starts: Scalar = 0.0
         changes = []
         if self.close_time is not None:
@@ -103,7 +102,8 @@ class Switch:
 
 @dataclass(frozen=True)
 class ConstantPowerLoad:
-    """i = P / v for v above dropout_voltage V_0; within, i = (P / V_0) (2 u - u^3), u = v / V_0, which joins it smoothly; odd in v.
+    """i = P / v for v above dropout_voltage V_0; within, i = (P / V_0) (2 u - u^3), u = v / V_0, which joins it smoothly;
+    odd in v.
 
     What a switching converter with a regulated output draws (common practice); the smooth foot is our own.
     """

@@ -24,7 +24,8 @@ TWO = ("from", "to")
 
 @dataclass(frozen=True)
 class Resistor:
-    """i = v / R, R = resistance (1 + temperature_coefficient (ambient - 25 degC)). Ohm's law; the linear coefficient is common practice."""
+    """i = v / R, R = resistance (1 + temperature_coefficient (ambient - 25 degC)). Ohm's law; the linear coefficient is
+    common practice."""
 
     pins: ClassVar[tuple[str, ...]] = TWO
     polarised: ClassVar[bool] = False

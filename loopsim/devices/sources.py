@@ -71,7 +71,8 @@ class CurrentSource:
 
 
 def _enter(formula: Sum, rows: tuple[Share, ...]) -> Contribution:
-    """formula, with its weight in each row, on the left-hand side. A saturating term inside another becomes an unknown of its own."""
+    """formula, with its weight in each row, on the left-hand side. A saturating term inside another becomes an unknown of
+    its own."""
     conductance: list[Entry] = []
     source: list[Share] = []
     terms: list[Term] = []
@@ -110,7 +111,8 @@ def _looked_at(formula: Sum) -> tuple[tuple[str, str], ...]:
 
 @dataclass(frozen=True)
 class ControlledVoltageSource:
-    """v_to - v_from = formula: a constant, constants times net voltages and part currents, and limit, tanh, atan or curve terms."""
+    """v_to - v_from = formula: a constant, constants times net voltages and part currents, and limit, tanh, atan or curve
+    terms."""
 
     pins: ClassVar[tuple[str, ...]] = TWO
     polarised: ClassVar[bool] = True

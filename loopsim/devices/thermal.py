@@ -30,7 +30,8 @@ def temperature_ratio(ambient: Scalar) -> Scalar:
 def saturation_factor(ambient: Scalar, bandgap_voltage: Scalar, exponent: Scalar, ideality: Scalar) -> Scalar:
     """I_S(T) / I_S(25 degC) of a junction: ((T/T0)^exponent exp((E_g/k) (1/T0 - 1/T)))^(1/ideality).
 
-    The law of a diffusion current with n_i^2 ~ T^3 exp(-E_g / k T), shared out by the ideality (from memory). bandgap_voltage: E_g / e [V].
+    The law of a diffusion current with n_i^2 ~ T^3 exp(-E_g / k T), shared out by the ideality (from memory).
+    bandgap_voltage: E_g / e [V].
     """
     arrhenius = bandgap_voltage / THERMAL * (1.0 / kelvin(REFERENCE) - 1.0 / kelvin(ambient))
     return temperature_ratio(ambient) ** (exponent / ideality) * np.exp(arrhenius / ideality)

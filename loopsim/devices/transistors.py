@@ -13,12 +13,13 @@ from loopsim.devices.thermal import REFERENCE, saturation_factor, temperature_ra
 
 @dataclass(frozen=True)
 class BipolarNpn:
-    """Ebers-Moll in transport form (J. J. Ebers, J. L. Moll 1954; transport form from memory), per polarity p = +1 for npn, -1 for pnp:
+    """Ebers-Moll in transport form (J. J. Ebers, J. L. Moll 1954; transport form from memory), per polarity p = +1 for npn,
+    -1 for pnp:
 
     I_F = I_S (exp(p v_BE / (n V_T)) - 1), I_R = I_S (exp(p v_BC / (n V_T)) - 1),
     i_C = p ((I_F - I_R) m - I_R / B_R), i_B = p (I_F / B_F + I_R / B_R), i_E = -(i_C + i_B),
-    with m = 1, or m = 1 - p v_BC / V_A where early_voltage V_A is given (J. M. Early 1952, linear form, from memory). Charges: constant
-    capacitances, and transit_time * I_F between base and emitter. The gains hold at every temperature.
+    with m = 1, or m = 1 - p v_BC / V_A where early_voltage V_A is given (J. M. Early 1952, linear form, from memory).
+    Charges: constant capacitances, and transit_time * I_F between base and emitter. The gains hold at every temperature.
     """
 
     pins: ClassVar[tuple[str, ...]] = ("collector", "base", "emitter")
@@ -100,12 +101,13 @@ class BipolarPnp(BipolarNpn):
 
 @dataclass(frozen=True)
 class MosfetN:
-    """Charge-sheet interpolation between weak and strong inversion, symmetric in drain and source, per polarity p = +1 (n) or -1 (p):
+    """Charge-sheet interpolation between weak and strong inversion, symmetric in drain and source, per polarity p = +1 (n)
+    or -1 (p):
 
     i_D = p I_0 (F(f) (1 + p lambda v_DS) - F(r) (1 - p lambda v_DS)), F(u) = ln(1 + exp(u / 2))^2, I_0 = 2 n K V_T^2,
     f = (v_P - p v_SB) / V_T, r = (v_P - p v_DB) / V_T, v_P = (p v_GB - V_th) / n, K = transconductance, n = slope_factor
-    (C. C. Enz, F. Krummenacher, E. A. Vittoz 1995, from memory). In strong inversion and saturation i_D = K (v_GS - V_th)^2 / (2 n)
-    with source at body. Gate and body carry no current. The channel's modulation takes part in both directions, so that
+    (C. C. Enz, F. Krummenacher, E. A. Vittoz 1995, from memory). In strong inversion and saturation i_D = K (v_GS - V_th)^2
+    / (2 n) with source at body. Gate and body carry no current. The channel's modulation takes part in both directions, so that
     exchanging drain and source turns the current round exactly.
     """
 
@@ -113,8 +115,8 @@ class MosfetN:
     polarised: ClassVar[bool] = True
     polarity: ClassVar[float] = 1.0
 
-    threshold: Scalar = quantity("V", -100.0, 100.0, "gate voltage at which the channel forms; positive if off without a gate voltage", 0.7)
-    transconductance: Scalar = quantity("A/V^2", 1e-15, 1e6, "mobility times oxide capacitance times width over length, as drawn", 1e-3)
+    threshold: Scalar = quantity("V", -100.0, 100.0, "gate voltage at which the channel forms; positive if off at 0 V", 0.7)
+    transconductance: Scalar = quantity("A/V^2", 1e-15, 1e6, "mobility, oxide capacitance, width over length multiplied", 1e-3)
     slope_factor: Scalar = quantity("", 1.0, 10.0, "gate voltage over channel voltage in weak inversion", 1.3)
     channel_modulation: Scalar = quantity("1/V", 0.0, 10.0, "relative rise of the current per volt of drain voltage")
     gate_source_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance between gate and source, taken as constant")

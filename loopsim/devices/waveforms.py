@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any, ClassVar
 
 import numpy as np
@@ -52,7 +53,8 @@ class Sine:
 
 @dataclass(frozen=True, eq=False)
 class Square:
-    """From `low` up to `high` within `rise`, there for `width`, back within `fall`, every `period`; the first rise begins at `delay`."""
+    """From `low` up to `high` within `rise`, there for `width`, back within `fall`, every `period`; the first rise begins at
+    `delay`."""
 
     high: Scalar = needed("signal", -LARGEST, LARGEST, "upper value")
     period: Scalar = needed("s", SHORTEST, LONGEST, "from one rise to the next")
@@ -127,7 +129,7 @@ class Points:
     def __post_init__(self) -> None:
         if not self.times or len(self.times) != len(self.values):
             raise CircuitError("waveform-times", "a waveform of points needs a time and a value for each point")
-        if not all(everywhere(a < b) for a, b in zip(self.times[:-1], self.times[1:], strict=True)):
+        if not all(everywhere(a < b) for a, b in pairwise(self.times)):
             raise CircuitError("waveform-times", "the points of a waveform must ascend in time", hint="a jump needs a short ramp")
 
     def value(self, t: float) -> Scalar:

@@ -13,7 +13,8 @@ from loopsim.devices.contribution import Contribution, Symbol
 from loopsim.devices.fields import Scalar
 from loopsim.devices.phi import VALUE
 from loopsim.equations.parameters import unknown_let
-from loopsim.equations.plan import ARRAYS, PartPlan, Plan, part_contribution, plan, resolve
+from loopsim.equations.parts import PartPlan, part_contribution, resolve
+from loopsim.equations.plan import Plan, plan
 from loopsim.equations.system import System
 from loopsim.equations.traced import AFFINE
 
@@ -23,25 +24,28 @@ Array: TypeAlias = NDArray[np.float64]
 def assemble(circuit: Circuit, settings: Mapping[str, Any] | None = None) -> System:
     """The system of a circuit; settings: parameter name to SI value (degC for `ambient`) or to a (batch,) array of them.
 
-    Lets that depend on a set one follow it. Arrays that the settings do not move have no batch axis and are shared with other systems
-    of the same circuit: they are read-only. CircuitError for what is wrong with the circuit, `unknown-let` for a name it has not.
+    Lets that depend on a set one follow it. Arrays that the settings do not move have no batch axis and are shared with
+    other systems of the same circuit: they are read-only. CircuitError for what is wrong with the circuit, `unknown-let` for
+    a name it has not.
     """
     return plan(circuit).assemble(settings or {})
 
 
 def parameter_values(circuit: Circuit, settings: Mapping[str, Any] | None = None) -> dict[str, Scalar]:
-    """Every let and every toleranced value [SI; degC for `ambient`], the set ones as set and those that depend on them accordingly."""
+    """Every let and every toleranced value [SI; degC for `ambient`], the set ones as set and those that depend on them
+    accordingly."""
     return plan(circuit).values(settings or {})
 
 
 def dependence(circuit: Circuit, let: str) -> frozenset[str]:
-    """Names of the System's arrays that move with a let: some of C G B W c V d s supply parameters timed. Found from the formulas and
-    the devices' laws, not by trying values: what is not named never moves."""
+    """Names of the System's arrays that move with a let: some of C G B W c V d s supply parameters timed. Found from the
+    formulas and the devices' laws, not by trying values: what is not named never moves."""
     return frozenset(name for name, roots in _known(circuit, let).traced.items() if let in roots)
 
 
 def is_affine(circuit: Circuit, let: str) -> bool:
-    """Whether the let moves nothing but s (and supply), and those in a straight line: then s(let) follows from its values at two lets."""
+    """Whether the let moves nothing but s (and supply), and those in a straight line: then s(let) follows from its values at
+    two lets."""
     traced = _known(circuit, let).traced
     return all(let not in roots or (name in ("s", "supply") and roots[let] == AFFINE) for name, roots in traced.items())
 
@@ -103,4 +107,3 @@ def _into(pin: str, entry: PartPlan, given: Contribution, laid_out: Plan, x: Arr
     return total
 
 
-__all__ = ["ARRAYS", "assemble", "dependence", "is_affine", "parameter_values", "pin_currents", "plan"]

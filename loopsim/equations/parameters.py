@@ -95,7 +95,8 @@ def _ordered(needs: Mapping[str, frozenset[str]], formulas: Mapping[str, Paramet
 def unknown_let(name: str, known: Iterable[str], span: Span | None = None) -> CircuitError:
     """The error for a quantity that is not there, with the nearest name."""
     near = difflib.get_close_matches(name, list(known), 1)
-    hint = f"did you mean `{near[0]}`?" if near else "the names are those of `let` statements, and `part.field` of toleranced values"
+    names = "the names are those of `let` statements, and `part.field` of toleranced values"
+    hint = f"did you mean `{near[0]}`?" if near else names
     return CircuitError("unknown-let", f"there is no quantity `{name}`", span, hint)
 
 
@@ -131,7 +132,8 @@ def number(
     except KeyError as missing:
         raise CircuitError("formula-value", f"{what} reads {missing}, which has no value here", span) from None
     if not is_finite(value):
-        raise CircuitError("formula-value", f"{what} has no finite value", span, "a division by zero, or a root of a negative number?")
+        hint = "a division by zero, or a root of a negative number?"
+        raise CircuitError("formula-value", f"{what} has no finite value", span, hint)
     return value
 
 
@@ -178,9 +180,8 @@ def checked_settings(plan: ParameterPlan, settings: Mapping[str, Any]) -> dict[s
             found[name] = float(value)
             continue
         if value.ndim != 1 or (length is not None and len(value) != length):
-            raise CircuitError(
-                "setting-shape", f"`{name}` is set to an array of shape {value.shape}", hint="all arrays of a batch have one length"
-            )
+            text = f"`{name}` is set to an array of shape {value.shape}"
+            raise CircuitError("setting-shape", text, hint="all arrays of a batch have one length")
         length = len(value)
         found[name] = value
     return found

@@ -1,7 +1,7 @@
 """The same system with sparse arrays, for circuits too big for dense ones.
 
-Residual and Jacobian are those of `System`; the Jacobian's pattern is found once, so that a new one is a weighted sum of numbers in a
-fixed order, and SuperLU (scipy.sparse.linalg.splu) factorises it.
+Residual and Jacobian are those of `System`; the Jacobian's pattern is found once, so that a new one is a weighted sum of
+numbers in a fixed order, and SuperLU (scipy.sparse.linalg.splu) factorises it.
 """
 
 from __future__ import annotations
@@ -18,13 +18,15 @@ from scipy.sparse.linalg import SuperLU, splu
 
 from loopsim.circuit import Circuit
 from loopsim.devices.phi import SLOPE, VALUE
-from loopsim.equations.plan import Layout, plan
+from loopsim.equations.plan import plan
+from loopsim.equations.slots import Layout
 from loopsim.errors import CircuitError
 
 Array: TypeAlias = NDArray[np.float64]
 Index: TypeAlias = NDArray[np.int64]
 
-# unknowns from which a Newton step with these arrays is faster than with dense ones (tests/benchmarks/sparse_or_dense.py; see docs)
+# unknowns from which a Newton step with these arrays is faster than with dense ones (tests/benchmarks/sparse_or_dense.py;
+# see docs)
 SPARSE_FROM = 120
 
 
@@ -114,7 +116,8 @@ class SparseSystem:
 @dataclass(frozen=True, eq=False)
 class Pattern:
     """indices, indptr: of the Jacobian in compressed columns; places: where each entry of G, then each product, is added;
-    products: b * w for every pair of entries of B and W (then of B and V) that share a row k of psi; rows: that k (m + k for V)."""
+    products: b * w for every pair of entries of B and W (then of B and V) that share a row k of psi; rows: that k (m + k for
+    V)."""
 
     indices: Index
     indptr: Index
@@ -157,7 +160,8 @@ def assemble_sparse(circuit: Circuit, settings: Mapping[str, Any] | None = None)
     laid_out = plan(circuit)
     vectors = {**laid_out.vectors, **laid_out.changed(settings or {})[0]}
     if any(vector.ndim > 1 for vector in vectors.values()):
-        raise CircuitError("setting-shape", "sparse arrays hold one member, the settings give a batch", hint="set them one by one")
+        text = "sparse arrays hold one member, the settings give a batch"
+        raise CircuitError("setting-shape", text, hint="set them one by one")
 
     def matrix(name: str) -> scipy.sparse.csr_array:
         layout: Layout = laid_out.layouts[name]

@@ -1,8 +1,8 @@
 """What is wrong with a circuit whatever its values: floating nets, loops of voltage sources, cuts of current sources, loose ends.
 
-The graph has the nets (and the inner nodes of parts) as nodes; its edges say how parts join them at DC (`Branch.way`). Facts of network
-theory (from memory): node voltages are determined only where conductances or prescribed voltages reach gnd; currents are determined only
-where prescribed voltages form no loop.
+The graph has the nets (and the inner nodes of parts) as nodes; its edges say how parts join them at DC (`Branch.way`). Facts
+of network theory (from memory): node voltages are determined only where conductances or prescribed voltages reach gnd;
+currents are determined only where prescribed voltages form no loop.
 """
 
 from __future__ import annotations
@@ -20,7 +20,8 @@ from scipy.sparse.csgraph import maximum_bipartite_matching
 
 from loopsim.circuit import Circuit
 from loopsim.devices.contribution import Branch
-from loopsim.equations.plan import Key, part_contribution, plan, resolve
+from loopsim.equations.parts import Key, part_contribution, resolve
+from loopsim.equations.plan import plan
 from loopsim.equations.sparse import assemble_sparse
 from loopsim.errors import CircuitError
 
@@ -77,7 +78,8 @@ class _Graph:
 
 
 def findings(circuit: Circuit) -> tuple[Finding, ...]:
-    """Everything odd about the structure, fatal things first. CircuitError only for what keeps the equations from being set up."""
+    """Everything odd about the structure, fatal things first. CircuitError only for what keeps the equations from being set
+    up."""
     graph = _graph(circuit)
     found = [*_missing_ground(graph), *_floating(graph), *_voltage_loops(graph)]
     if not any(finding.fatal for finding in found):
@@ -131,8 +133,8 @@ def _missing_ground(graph: _Graph) -> list[Finding]:
 def _floating(graph: _Graph) -> list[Finding]:
     """Groups of nets that no conductance and no prescribed voltage joins to gnd.
 
-    A current that follows other voltages may still set them (a transconductor into a capacitor, in a loop): then the sum of their balances
-    depends on the unknowns, and their common voltage is looked at. Such a group is no fault.
+    A current that follows other voltages may still set them (a transconductor into a capacitor, in a loop): then the sum of
+    their balances depends on the unknowns, and their common voltage is looked at. Such a group is no fault.
     """
     joined: nx.Graph[Key] = nx.Graph()
     joined.add_nodes_from(graph.nodes)
@@ -141,9 +143,8 @@ def _floating(graph: _Graph) -> list[Finding]:
     for group in nx.connected_components(joined):
         if GROUND in group:
             continue
-        crossing = [
-            edge for edge in graph.edges if (edge.first in group) != (edge.second in group) and edge.way in ("current", "capacitance")
-        ]
+        open_ways = [edge for edge in graph.edges if edge.way in ("current", "capacitance")]
+        crossing = [edge for edge in open_ways if (edge.first in group) != (edge.second in group)]
         if any(edge.way == "current" and edge.controlled for edge in crossing) and group & graph.looked_at:
             continue
         nets = tuple(name for name in graph.circuit.nets if ("net", name) in group)
@@ -157,7 +158,11 @@ def _floating(graph: _Graph) -> list[Finding]:
 
 
 def _floating_finding(
-    nets: tuple[str, ...], currents: tuple[str, ...], capacitors: tuple[str, ...], touching: tuple[str, ...], inputs: tuple[str, ...]
+    nets: tuple[str, ...],
+    currents: tuple[str, ...],
+    capacitors: tuple[str, ...],
+    touching: tuple[str, ...],
+    inputs: tuple[str, ...],
 ) -> Finding:
     what = f"net {_listed(nets)}" if len(nets) == 1 else f"nets {_listed(nets)}"
     if currents:
@@ -173,8 +178,8 @@ def _floating_finding(
 
 
 def _voltage_loops(graph: _Graph) -> list[Finding]:
-    """Loops of prescribed voltages (inductors count, at DC). The current round a loop is free, so the loop is a fault, unless something
-    reads a current of it and a value of it follows other unknowns: then the two may settle each other."""
+    """Loops of prescribed voltages (inductors count, at DC). The current round a loop is free, so the loop is a fault,
+    unless something reads a current of it and a value of it follows other unknowns: then the two may settle each other."""
     forest: nx.Graph[Key] = nx.Graph()
     forest.add_nodes_from(graph.nodes)
     owners: dict[frozenset[Key], _Edge] = {}
@@ -205,7 +210,8 @@ def _loop_finding(graph: _Graph, loop: Sequence[_Edge], path: Sequence[Key]) -> 
 
 
 def _undetermined(graph: _Graph) -> list[Finding]:
-    """Unknowns that no equation is left for, by the largest matching of the pattern of the Jacobian: what the rules above do not see."""
+    """Unknowns that no equation is left for, by the largest matching of the pattern of the Jacobian: what the rules above do
+    not see."""
     laid_out = plan(graph.circuit)
     system = assemble_sparse(graph.circuit)
     n = system.n
@@ -260,12 +266,10 @@ def _no_current(graph: _Graph) -> list[Finding]:
     joined: nx.Graph[Key] = nx.Graph()
     joined.add_edges_from((edge.first, edge.second) for edge in carries)
     bridges: set[frozenset[Key]] = {frozenset((a, b)) for a, b in cast("Iterable[tuple[Key, Key]]", nx.bridges(joined))}
+    alone = {pair for pair in bridges if count[pair] == 1}
     two = {part.name for part in graph.circuit.parts if len(part.pins) == 2}
-    idle = graph.part_names(
-        edge.part
-        for edge in carries
-        if edge.way == "conductance" and edge.part in two and (pair := frozenset((edge.first, edge.second))) in bridges and count[pair] == 1
-    )
+    resistive = [edge for edge in carries if edge.way == "conductance" and edge.part in two]
+    idle = graph.part_names(edge.part for edge in resistive if frozenset((edge.first, edge.second)) in alone)
     if not idle:
         return []
     return [Finding("no-current", f"no current can flow at rest through {_listed(idle)}", (), idle, False)]
