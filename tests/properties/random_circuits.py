@@ -1,7 +1,7 @@
 """Seeded random circuits of resistors, junctions and transistors, built as data.
 
-Supplies are Norton sources (a current and a resistor), so that a nodal matrix without gains has a positive determinant: the sign to
-which determinants are compared.
+Supplies are Norton sources (a current and a resistor), so that a nodal matrix without gains has a positive determinant: the
+sign to which determinants are compared.
 """
 
 from __future__ import annotations
@@ -67,8 +67,8 @@ def one_transistor(seed: int) -> Circuit:
 
 
 def junction_network(seed: int) -> Circuit:
-    """Voltage sources, resistors and junctions: every two-terminal part increasing, so exactly one operating point (R. J. Duffin 1947,
-    from memory), and every net between the extreme source voltages."""
+    """Voltage sources, resistors and junctions: every two-terminal part increasing, so exactly one operating point (R. J.
+    Duffin 1947, from memory), and every net between the extreme source voltages."""
     random = np.random.default_rng([33, seed])
     build = CircuitBuilder(f"network_{seed}")
     nets = [f"n{k}" for k in range(int(random.integers(2, 6)))]
@@ -81,5 +81,6 @@ def junction_network(seed: int) -> Circuit:
         build.chain(net, f"g{k}", "gnd", device="resistor", resistance=10 ** random.uniform(4, 7))
     for k in range(int(random.integers(1, 6))):
         a, b = (str(x) for x in random.choice(["gnd", *nets], 2, replace=False))
-        build.chain(a, f"d{k}", b, device="diode", saturation_current=10 ** random.uniform(-15, -8), ideality=random.uniform(1, 2))
+        saturation, ideality = 10 ** random.uniform(-15, -8), random.uniform(1, 2)
+        build.chain(a, f"d{k}", b, device="diode", saturation_current=saturation, ideality=ideality)
     return build.circuit()

@@ -1,8 +1,10 @@
-"""Chains of tunnel diodes with 10 mS between neighbours: few points however long the chain, and the work must not explode with it.
+"""Chains of tunnel diodes with 10 mS between neighbours: few points however long the chain, and the work must not explode
+with it.
 
-Curve as in two_tunnel_diodes (coefficients from memory), in mA and V; every node is fed from 35 V through 13.3 kohm. The count is proved
-independently by shooting: the voltage t of the first node fixes all others, and the balance of the last is one function of t, whose zeros
-are isolated by ball arithmetic (python-flint) with its derivative. By passivity every voltage lies between 0 and 35 V.
+Curve as in two_tunnel_diodes (coefficients from memory), in mA and V; every node is fed from 35 V through 13.3 kohm. The
+count is proved independently by shooting: the voltage t of the first node fixes all others, and the balance of the last is
+one function of t, whose zeros are isolated by ball arithmetic (python-flint) with its derivative. By passivity every voltage
+lies between 0 and 35 V.
 """
 
 import numpy as np
@@ -37,7 +39,8 @@ def taken(v):
 def shoot(t, n):
     """(balance of the last node, its derivative) as balls over the ball t, or None where a voltage leaves 0 .. 35 V for all of t.
 
-    Every voltage is enclosed twice, directly and by its value in the middle plus its derivative times the distance (mean value form).
+    Every voltage is enclosed twice, directly and by its value in the middle plus its derivative times the distance (mean
+    value form).
     """
     middle = arb(t.mid())
     away = t - middle

@@ -1,4 +1,5 @@
-"""Theorems about operating points, as properties of seeded random circuits. Each source was known from memory or by its abstract."""
+"""Theorems about operating points, as properties of seeded random circuits. Each source was known from memory or by its
+abstract."""
 
 import itertools
 import math
@@ -31,7 +32,8 @@ def test_the_set_is_worth_looking_at(pairs):
 
 
 def test_the_number_of_points_is_odd_and_the_signs_sum_to_one(pairs):
-    """Degree theory: L. O. Chua, N. N. Wang, Int. J. Circuit Theory Appl. 5 (1977); A. N. Willson, IEEE Trans. CAS 22 (1975) 678-687."""
+    """Degree theory: L. O. Chua, N. N. Wang, Int. J. Circuit Theory Appl. 5 (1977); A. N. Willson, IEEE Trans. CAS 22 (1975)
+    678-687."""
     for _, found, system in pairs:
         assert len(found) % 2 == 1
         assert sum(signs(found, system)) == 1
@@ -59,7 +61,8 @@ def test_a_wrong_sign_is_unstable_for_every_stray_capacitance(pairs):
 
 
 def test_almost_half_of_the_points_are_unstable(pairs):
-    """M. M. Green, A. N. Willson, (Almost) half of any circuit's operating points are unstable, IEEE Trans. CAS-I 41 (1994) 286-293."""
+    """M. M. Green, A. N. Willson, (Almost) half of any circuit's operating points are unstable, IEEE Trans. CAS-I 41 (1994)
+    286-293."""
     for _, found, _ in pairs:
         stable = sum(point.stable is True for point in found)
         unstable = sum(point.stable is False for point in found)
@@ -68,8 +71,8 @@ def test_almost_half_of_the_points_are_unstable(pairs):
 
 
 def test_counts_stay_below_the_general_bound(pairs):
-    """J. C. Lagarias, Lj. Trajkovic, IEEE Trans. CAS-I 46 (1999) 1216-1221: at most (d + 1)^d 2^(d (d - 1) / 2), d = q + 2 p. Far from
-    tight; and no cap of three: two transistors can have five points (Nakaya, Nishi, Oishi, Claus 2009)."""
+    """J. C. Lagarias, Lj. Trajkovic, IEEE Trans. CAS-I 46 (1999) 1216-1221: at most (d + 1)^d 2^(d (d - 1) / 2), d = q + 2
+    p. Far from tight; and no cap of three: two transistors can have five points (Nakaya, Nishi, Oishi, Claus 2009)."""
     d = 4
     bound = (d + 1) ** d * 2 ** math.comb(d, 2)
     assert bound == 40000
@@ -98,8 +101,8 @@ def test_increasing_parts_have_one_point_between_the_supplies(seed):
 
 @pytest.mark.parametrize("seed", range(10))
 def test_principal_minors_of_a_junction_network_are_not_negative(seed):
-    """I. W. Sandberg, A. N. Willson, SIAM J. Appl. Math. 19 (1970): F(v) + A v = b has one solution for every increasing F and every b
-    if and only if A is P0; the conductance matrix seen by two-terminal junctions always is."""
+    """I. W. Sandberg, A. N. Willson, SIAM J. Appl. Math. 19 (1970): F(v) + A v = b has one solution for every increasing F
+    and every b if and only if A is P0; the conductance matrix seen by two-terminal junctions always is."""
     circuit = junction_network(seed)
     system = assemble(circuit)
     # seen from the junctions: impedance Z = V_T W G^-1 B with unit currents; P0 holds for Z where it holds for its inverse
