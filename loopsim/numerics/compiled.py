@@ -33,7 +33,7 @@ def compile_kernel(function: F) -> F:
         return function
     import numba
 
-    compiled: F = numba.njit(error_model="numpy")(function)
+    compiled: F = numba.njit(error_model="numpy", forceinline=True)(function)
     return compiled
 
 
