@@ -13,7 +13,7 @@ import threading
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
-from types import FunctionType, ModuleType
+from types import CellType, FunctionType, ModuleType
 from typing import Any, TypeVar
 
 F = TypeVar("F", bound=Callable[..., Any])
@@ -37,14 +37,24 @@ def compile_kernel(function: F) -> F:
     return compiled
 
 
-def compile_entry(function: F) -> F:
-    """`function` compiled with its machine code kept on disk; or `function` itself without numba."""
-    if not have_compiler():
-        return function
-    import numba
+def compile_entry(*modules: ModuleType) -> Callable[[F], F]:
+    """Decorator: the function compiled with its machine code kept on disk, keyed by the text of its own file and of `modules`;
+    or the function itself without numba."""
 
-    compiled: F = numba.njit(cache=True, error_model="numpy")(function)
-    return compiled
+    def decorate(function: F) -> F:
+        if not have_compiler():
+            return function
+        import numba
+
+        assert isinstance(function, FunctionType)
+        # numba's key has the code of the function and the values in its closure: the digest goes in as a variable that is never read
+        code = function.__code__.replace(co_freevars=(*function.__code__.co_freevars, "source_key"))
+        cells = (*(function.__closure__ or ()), CellType(source_stamp(function.__code__.co_filename, *modules)))
+        keyed = FunctionType(code, function.__globals__, function.__name__, function.__defaults__, cells)
+        compiled: F = numba.njit(cache=True, error_model="numpy")(keyed)
+        return compiled
+
+    return decorate
 
 
 def compile_table(functions: Sequence[Callable[..., Any]], replaced: dict[str, Callable[..., Any]]) -> tuple[Any, ...]:
@@ -74,12 +84,13 @@ def compile_table(functions: Sequence[Callable[..., Any]], replaced: dict[str, C
     return tuple(compiled(function) for function in functions)
 
 
-def source_stamp(*modules: ModuleType) -> str:
-    """Digest of the source text of `modules`: part of the key under which machine code is kept."""
+def source_stamp(*files: str | ModuleType) -> str:
+    """Digest of source texts: part of the key under which machine code is kept."""
     digest = hashlib.sha256()
-    for module in modules:
-        assert module.__file__ is not None
-        digest.update(Path(module.__file__).read_bytes())
+    for file in files:
+        name = file if isinstance(file, str) else file.__file__
+        assert name is not None
+        digest.update(Path(name).read_bytes())
     return digest.hexdigest()
 
 

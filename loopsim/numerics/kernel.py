@@ -10,13 +10,12 @@ rows (starts, columns, values). Small functions: each compiles in a moment, and 
 
 from __future__ import annotations
 
-import sys
 from typing import Any
 
 import numpy as np
 
 from loopsim.devices import phi
-from loopsim.numerics.compiled import compile_entry, compile_kernel, compile_table, source_stamp
+from loopsim.numerics.compiled import compile_entry, compile_kernel, compile_table
 
 # what `advance` returns
 DONE, FULL, TOO_SMALL, NOT_FINITE, PIVOT = 0, 1, 2, 3, 4
@@ -602,7 +601,7 @@ def clip_to_corner(time: float, step: float, corner: float, longest: float) -> f
     return step
 
 
-@compile_entry
+@compile_entry(phi)
 def advance(
     x: Any, peak: Any, control: Any, state: Any, counts: Any, corners: Any, kept: Any,
     A: Any, A_columns: Any, A_values: Any, W: Any, W_columns: Any, W_values: Any, c: Any, V: Any, V_columns: Any, V_values: Any, d: Any,
@@ -801,7 +800,7 @@ def advance(
     return DONE, recorded
 
 
-@compile_entry
+@compile_entry(phi)
 def sample(times: Any, out_time: Any, out_step: Any, out_x: Any, out_p: Any, values: Any) -> None:
     """values (times, kept): the recorded polynomials at ascending or mixed `times`, the last piece holding at its end."""
     place = 0
@@ -830,7 +829,3 @@ def sample(times: Any, out_time: Any, out_step: Any, out_x: Any, out_p: Any, val
                 total = (total + out_p[place, a, i]) * q
             values[j, i] = out_x[place, i] + total
 
-
-def stamp() -> str:
-    """Digest of everything that goes into the kernel."""
-    return source_stamp(phi, sys.modules[__name__])

@@ -11,7 +11,7 @@ import bisect
 import heapq
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
-from functools import cached_property, lru_cache
+from functools import cache, cached_property, lru_cache
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -20,6 +20,7 @@ import scipy.sparse.linalg
 from numpy.typing import ArrayLike, NDArray
 
 from loopsim.devices import phi
+from loopsim.numerics.compiled import announced
 
 Array: TypeAlias = NDArray[np.float64]
 Indices: TypeAlias = NDArray[np.int64]
@@ -149,15 +150,15 @@ class Equations:
 
 
 def _compressed(matrix: Any) -> tuple[Indices, Indices, Array]:
-    rows = scipy.sparse.csr_array(matrix)
+    rows = scipy.sparse.csr_array(matrix, copy=True)
     rows.eliminate_zeros()
-    return rows.indptr.astype(np.int64), rows.indices.astype(np.int64), rows.data.astype(np.float64)
+    return np.array(rows.indptr, dtype=np.int64), np.array(rows.indices, dtype=np.int64), np.array(rows.data, dtype=np.float64)
 
 
 def _stamps(B: Any, M: Any, offset: int) -> tuple[Indices, Indices, Indices, Array]:
     """Entries (row, column, nonlinear row, value) of B diag(g) M."""
-    left = scipy.sparse.csc_array(B)
-    right = scipy.sparse.csr_array(M)
+    left = scipy.sparse.csc_array(B, copy=True)
+    right = scipy.sparse.csr_array(M, copy=True)
     left.eliminate_zeros()
     right.eliminate_zeros()
     rows, columns, owners, values = [], [], [], []
@@ -181,10 +182,11 @@ def equations(
 ) -> Equations:
     """Lay the arrays of one circuit out for the kernel. C, G: (n, n); B: (n, m); W, V: (m, n); all dense or scipy sparse;
     c, d: (m,); kinds: (m,) of loopsim.devices.phi.Kind; parameters: (m, p)."""
-    kinds = np.asarray(kinds, dtype=np.int64)
+    # copies throughout: the kernel is compiled once, for arrays that may be written to
+    kinds = np.array(kinds, dtype=np.int64)
     n, m = C.shape[0], len(kinds)
     V = scipy.sparse.csr_array((m, n)) if V is None else V
-    parameters = np.zeros((m, 1)) if parameters is None or np.size(parameters) == 0 else np.asarray(parameters, dtype=np.float64)
+    parameters = np.zeros((m, 1)) if parameters is None or np.size(parameters) == 0 else np.array(parameters, dtype=np.float64, order="C")
     rows_1, columns_1, owner_1, value_1 = _stamps(B, W, 0)
     rows_2, columns_2, owner_2, value_2 = _stamps(B, V, m)
     stamp_row, stamp_column = np.concatenate([rows_1, rows_2]), np.concatenate([columns_1, columns_2])
@@ -213,10 +215,10 @@ def equations(
         control=_compressed(W) if m else (np.zeros(1, dtype=np.int64), np.zeros(0, dtype=np.int64), np.zeros(0)),
         product=_compressed(V) if m else (np.zeros(1, dtype=np.int64), np.zeros(0, dtype=np.int64), np.zeros(0)),
         storage=_compressed(C),
-        c=np.ascontiguousarray(c, dtype=np.float64),
-        d=np.ones(m) if d is None else np.ascontiguousarray(d, dtype=np.float64),
+        c=np.array(c, dtype=np.float64),
+        d=np.ones(m) if d is None else np.array(d, dtype=np.float64),
         kinds=kinds,
-        parameters=np.ascontiguousarray(parameters),
+        parameters=parameters,
         pattern=(pattern_row, pattern_column),
         mass=on_pattern(mass),
         base_jac=on_pattern(base),
@@ -354,7 +356,7 @@ def integrate(
     state[kernel.STEP] = min(1e-4 * span if first_step is None else first_step, longest)
     counts = np.zeros(kernel.COUNTS_SIZE, dtype=np.int64)
     counts[kernel.FIRST] = counts[kernel.FRESH] = 1
-    kept_places = np.arange(n, dtype=np.int64) if kept is None else np.asarray(kept, dtype=np.int64)
+    kept_places = np.arange(n, dtype=np.int64) if kept is None else np.array(kept, dtype=np.int64)
     peaks = np.zeros(n) if peak is None else np.maximum(np.asarray(peak, dtype=np.float64), np.abs(x))
     columns = _compressed(waves.columns)
     wave_starts = np.concatenate([[0], np.cumsum([len(d) for d in waves.data])]).astype(np.int64)
@@ -371,9 +373,9 @@ def integrate(
     inverse_A = np.linalg.inv(method.A)
     mass_full = np.kron(inverse_A, eq.mass.reshape(n, n)).ravel() if side else np.zeros(0)
     jac_full, lu_full, pivots_full = np.zeros(side * side), np.zeros((side, side)), np.zeros(side, dtype=np.int64)
-    weights = np.ones(n) if error_weight is None else np.asarray(error_weight, dtype=np.float64)
-    second = np.zeros(n, dtype=np.int64) if index_two is None else np.asarray(index_two, dtype=np.int64)
-    base = np.ascontiguousarray(source, dtype=np.float64)
+    weights = np.ones(n) if error_weight is None else np.array(error_weight, dtype=np.float64)
+    second = np.zeros(n, dtype=np.int64) if index_two is None else np.array(index_two, dtype=np.int64)
+    base = np.array(source, dtype=np.float64)
     records: list[tuple[Array, Array, Array, Array]] = []
     room, repivoted = FIRST_ROOM, 0
     cap = max(16, RECORD_ROOM // max(1, len(kept_places) * (stages + 1)))
@@ -418,6 +420,20 @@ def integrate(
         factorisations=int(counts[kernel.FACTORS]),
         worst=int(counts[kernel.WORST]),
     )
+
+
+@cache
+def _compile_now() -> None:
+    """One step of the smallest problem: compiles the kernel, or loads what was compiled before."""
+    one = np.ones((1, 1))
+    tiny = equations(one, one, one, one, [0.0], [int(phi.Kind.SATURATION)])
+    integrate(tiny, [1.0], 0.0, 1e-3, [0.0], first_step=1e-3).at([0.0])
+
+
+def prepare(tell: Callable[[str], None] | None = None) -> None:
+    """Have the kernel ready; `tell` hears of it when it has to be compiled (once in an environment, then it is kept on disk)."""
+    with announced(tell):
+        _compile_now()
 
 
 def jacobian_values(eq: Equations, x: Array) -> Array:
