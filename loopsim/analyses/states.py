@@ -116,7 +116,7 @@ def _unproved(system: System, found: Points, box: float, seconds: float) -> Arra
     with np.errstate(all="ignore"):
         sure = certify(problem, swept)
         here = start_points(problem, sure.x, sure.spread)
-    swept, low, high = swept[sure.good], here.x_low[sure.good], here.x_high[sure.good]
+    swept, low, high = swept[sure.good], here.low[sure.good, : system.n], here.high[sure.good, : system.n]
     new = np.ones(len(swept), dtype=bool)
     for x, spread in zip(found.x, found.spread, strict=True):
         # the same point: its certified box meets the sweep's

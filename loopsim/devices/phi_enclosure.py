@@ -28,8 +28,8 @@ SHAVE_PIECES = 16  # pieces an interval is cut into when the inverse of a kind h
 FLAT = 1e-4  # below this width the chord slope is taken from the tangent: a difference quotient would be noise
 
 
-def value_error(kind: int, w: Array, p: Any) -> Array:
-    """Bound of |computed - true| of VALUE[kind] at w."""
+def value_error(kind: int, w: Array, p: Any, value: Array) -> Array:
+    """Bound of |computed - true| of VALUE[kind] at w, whose computed value is `value`."""
     if kind == Kind.POLYNOMIAL:
         total = np.zeros_like(w)
         size = np.abs(w)
@@ -41,19 +41,16 @@ def value_error(kind: int, w: Array, p: Any) -> Array:
         for j in range(2, len(p) - 1, 2):
             total = total + np.abs(p[j + 1]) * (np.abs(w) + 2.0 * np.abs(p[j]))
         return total * ((len(p) + 6) * UNIT) + TINY
-    if kind == Kind.EXPONENTIAL:
-        # beyond the limit exp(limit) * (w - limit) is added; the sum has no cancellation, so a relative bound holds
-        return np.abs(VALUE[kind](w, p)) * FUNCTION_ERROR + TINY
     if kind == Kind.RECIPROCAL:
-        inside = np.minimum(np.abs(w), 1.0)
-        return (3.0 * inside + np.abs(VALUE[kind](w, p))) * FUNCTION_ERROR + TINY
-    return np.abs(VALUE[kind](w, p)) * FUNCTION_ERROR + TINY
+        return (3.0 * np.minimum(np.abs(w), 1.0) + np.abs(value)) * FUNCTION_ERROR + TINY
+    # the continued exponential adds terms of one sign; the others are single functions of the library: relative bounds hold
+    return np.abs(value) * FUNCTION_ERROR + TINY
 
 
 def value_at(kind: int, w: Array, p: Any) -> Pair:
     """Enclosure of phi at the points w."""
     value = VALUE[kind](w, p)
-    error = value_error(kind, w, p)
+    error = value_error(kind, w, p, value)
     return down(value - error), up(value + error)
 
 
@@ -84,7 +81,10 @@ def slope_bounds(kind: int, low: Array, high: Array, p: Any) -> Pair:
         return bottom - 8.0 * FUNCTION_ERROR, np.maximum(at_far, at_near) + 8.0 * FUNCTION_ERROR
     if kind == Kind.POINTS:
         return _points_slope_bounds(low, high, p)
-    return _bernstein([(j + 1) * p[j] for j in range(len(p))], low, high)
+    degree = len(p)
+    while degree > 1 and not np.any(p[degree - 1]):
+        degree -= 1
+    return _bernstein([(j + 1) * p[j] for j in range(degree)], low, high)
 
 
 def _points_slope_bounds(low: Array, high: Array, p: Any) -> Pair:
@@ -212,30 +212,22 @@ def deviation(kind: int, a: Array, low: Array, high: Array, p: Any) -> Pair:
     [low, high] is cut near the stationary points; on each piece the function is held between the two lines that its slope range allows
     from both ends, which is exact where it is monotone and second order small where a cut missed the stationary point.
     """
-    cuts = [low, *stationary(kind, a, low, high, p), high]
+    inner = stationary(kind, a, low, high, p)
+    cuts = np.stack([low, *inner, high])
     if len(cuts) > 4:
-        cuts = list(np.sort(np.stack(cuts), axis=0))
-    least, most = None, None
-    ends = [_deviation_at(kind, a, t, p) for t in cuts]
-    for (start, at_start), (stop, at_stop) in zip(
-        zip(cuts[:-1], ends[:-1], strict=True), zip(cuts[1:], ends[1:], strict=True), strict=True
-    ):
-        s_low, s_high = slope_bounds(kind, start, stop, p)
-        error = np.abs(a) * (2.0 * UNIT)
-        s_low, s_high = down(s_low - a) - error, up(s_high - a) + error
-        lower, upper = _between_lines(at_start, at_stop, s_low, s_high, stop - start)
-        least = lower if least is None else np.minimum(least, lower)
-        most = upper if most is None else np.maximum(most, upper)
-    assert least is not None and most is not None
-    return least, most
-
-
-def _deviation_at(kind: int, a: Array, t: Array, p: Any) -> Pair:
-    value = VALUE[kind](t, p)
-    product = a * t
-    error = value_error(kind, t, p) + np.abs(product) * (2.0 * UNIT)
-    q = value - product
-    return down(q - error), up(q + error)
+        cuts = np.sort(cuts, axis=0)
+    q = [np.asarray(parameter)[None] for parameter in p]  # the piece axis stands in front of the box axis
+    value = VALUE[kind](cuts, q)
+    product = a * cuts
+    error = value_error(kind, cuts, q, value) + np.abs(product) * (2.0 * UNIT)
+    value = value - product
+    at_low, at_high = down(value - error), up(value + error)
+    start, stop = cuts[:-1], cuts[1:]
+    s_low, s_high = slope_bounds(kind, start, stop, q)
+    slack = np.abs(a) * (2.0 * UNIT)
+    s_low, s_high = down(s_low - a) - slack, up(s_high - a) + slack
+    lower, upper = _between_lines((at_low[:-1], at_high[:-1]), (at_low[1:], at_high[1:]), s_low, s_high, stop - start)
+    return lower.min(axis=0), upper.max(axis=0)
 
 
 def _between_lines(at_start: Pair, at_stop: Pair, s_low: Array, s_high: Array, width: Array) -> Pair:

@@ -29,12 +29,16 @@ PROGRESS = 0.15  # a pass that narrows no width by this share has done its work;
 SMALL = 1e-7  # relative width at which an undecided box is called a cluster: a double root cannot be resolved below sqrt(2^-53) = 1e-8
 NEWTON_STEPS = 12  # from the middle of a box on which the slope matrices are all regular, 4 to 9 were seen
 INFLATIONS = 12  # Krawczyk with growing boxes: 1 to 3 were seen where it succeeds
+MAX_PASSES = 60  # narrowing passes before a box is split all the same
+ASIDE = 0.01  # weight of a row outside the feedback vertex set when a split is chosen
 MAX_CLUSTERS = 400  # more undecided tiny boxes than this mean a continuum of solutions
 
 
 class Rows(Protocol):
     """The scalar functions of all rows (loopsim.devices.phi_rows.PhiRows)."""
 
+    @property
+    def rising(self) -> NDArray[np.bool_]: ...
     def take(self, rows: Index) -> "Rows": ...
     def value(self, w: Array) -> Array: ...
     def slope(self, w: Array) -> Array: ...
@@ -81,6 +85,30 @@ class Problem:
         return np.flatnonzero(~plain)
 
     @cached_property
+    def layout(self) -> "Layout":
+        """Where each quantity stands in a box."""
+        n, m, q = self.n, self.m, len(self.product)
+        ends = np.cumsum([0, n, m, m, q, q]).tolist()
+        return Layout(*(slice(a, b) for a, b in zip(ends[:-1], ends[1:], strict=True)))
+
+    @cached_property
+    def preference(self) -> Array:
+        """(m,) weight of each row in the choice of a split: rows that move with a feedback vertex set of the unknowns come first, since the
+        rest follows from those by contraction. An unknown whose own row is monotone in it needs no split for that row's sake."""
+        moves = (self.W != 0.0) | (self.V != 0.0)
+        edges = (self.G != 0.0) | ((self.B != 0.0).astype(float) @ moves.astype(float) > 0.0)
+        for j in range(self.n):
+            signs = self.B[j] * self.W[:, j]
+            plain = self.rows.rising & ~np.any(self.V != 0.0, axis=1)
+            own = np.sign(np.append(signs, self.G[j, j]))
+            edges[j, j] = bool(np.any(own > 0) and np.any(own < 0)) or bool(np.any((signs != 0.0) & ~plain))
+        chosen = feedback_set(edges)
+        if not chosen.any():
+            return np.ones(self.m)
+        inside = np.any(moves & chosen[None, :], axis=1) & ~np.any(moves & ~chosen[None, :], axis=1)
+        return np.where(inside, 1.0, ASIDE)
+
+    @cached_property
     def centres(self) -> tuple[Array, Array, Array, Array, Array, Array]:
         """c, d, s as centre and radius."""
         found = []
@@ -105,9 +133,10 @@ class Problem:
         mid[:, :n], mid[:, n : n + m] = self.W, -np.eye(m)
         end = np.zeros((q, total))
         end[:, :n], end[:, n + 2 * m :] = self.V[self.product], -np.eye(q)
-        low = np.concatenate([self.s_low, -self.c_high, -self.d_high[self.product]])
-        high = np.concatenate([self.s_high, -self.c_low, -self.d_low[self.product]])
-        return linear_table(np.concatenate([top, mid, end]), low, high)
+        extra, extra_low, extra_high = differences(top, self.s_low, self.s_high, n)
+        low = np.concatenate([self.s_low, -self.c_high, -self.d_high[self.product], extra_low])
+        high = np.concatenate([self.s_high, -self.c_low, -self.d_low[self.product], extra_high])
+        return linear_table(np.concatenate([top, mid, end, extra]), low, high)
 
     @cached_property
     def nodal(self) -> "NodalTable | None":
@@ -126,6 +155,7 @@ class LinearTable:
     high: Array
     places: Index
     exclude: Array
+    right_size: Array
 
 
 def linear_table(matrix: Array, low: Array, high: Array) -> LinearTable:
@@ -147,7 +177,31 @@ def linear_table(matrix: Array, low: Array, high: Array) -> LinearTable:
     places = np.full((matrix.shape[1], length), len(matrix) * width, dtype=np.int64)
     for column, spots in enumerate(where):
         places[column, : len(spots)] = spots
-    return LinearTable(index, coefficient, low, high, places, np.ones((width, width)) - np.eye(width))
+    size = np.maximum(np.abs(low), np.abs(high))[:, None]
+    return LinearTable(index, coefficient, low[:, None], high[:, None], places, np.ones((width, width)) - np.eye(width), size)
+
+
+def differences(matrix: Array, low: Array, high: Array, n: int) -> tuple[Array, Array, Array]:
+    """Redundant rows: where rows share a long part exactly (all of G, or all of B), their difference with the first of them is short and
+    binds two unknowns directly. Only differences that are exact in floating point are taken. n: where B begins is matrix[:, n:]."""
+    found, lows, highs = [], [], []
+    for part in (slice(0, n), slice(n, matrix.shape[1])):
+        groups: dict[bytes, int] = {}
+        for i, row in enumerate(matrix):
+            if np.count_nonzero(row[part]) < 3:
+                continue
+            first = groups.setdefault(row[part].tobytes(), i)
+            if first == i:
+                continue
+            difference = row - matrix[first]
+            exact = np.all((difference + matrix[first] == row) & (row - difference == matrix[first]))
+            if exact and np.count_nonzero(difference) < np.count_nonzero(row):
+                found.append(difference)
+                lows.append(float(down(np.array(low[i] - high[first]))))
+                highs.append(float(up(np.array(high[i] - low[first]))))
+    if not found:
+        return np.zeros((0, matrix.shape[1])), np.zeros(0), np.zeros(0)
+    return np.stack(found), np.array(lows), np.array(highs)
 
 
 @dataclass(frozen=True, eq=False)
@@ -209,50 +263,59 @@ def nodal_table(problem: Problem) -> NodalTable | None:
 
 @dataclass(frozen=True, eq=False)
 class Boxes:
-    """A batch of boxes: x: (b, n), w, f (phi), p (psi): (b, m), u: (b, q), each as low and high."""
+    """A batch of boxes, low and high: (b, n + 2 m + 2 q), the columns x (n), w (m), psi (m), and for the q product rows u and phi.
 
-    x_low: Array
-    x_high: Array
-    w_low: Array
-    w_high: Array
-    f_low: Array
-    f_high: Array
-    p_low: Array
-    p_high: Array
-    u_low: Array
-    u_high: Array
+    For a plain row phi is psi. `Layout` names the columns.
+    """
+
+    low: Array
+    high: Array
 
     def __len__(self) -> int:
-        return len(self.x_low)
+        return len(self.low)
 
     def pick(self, chosen: NDArray[np.bool_] | Index | slice) -> "Boxes":
-        return Boxes(*(getattr(self, name)[chosen] for name in _FIELDS))
+        return Boxes(self.low[chosen], self.high[chosen])
 
     def empty(self) -> NDArray[np.bool_]:
-        """(b,) proved to hold nothing: some interval has its ends crossed (or is not a number, which is never proof: see below)."""
-        crossed = np.any(self.x_low > self.x_high, axis=1)
-        for low, high in ((self.w_low, self.w_high), (self.f_low, self.f_high), (self.p_low, self.p_high), (self.u_low, self.u_high)):
-            crossed |= np.any(low > high, axis=1)
-        return np.asarray(crossed)
+        """(b,) proved to hold nothing: some interval has its ends crossed. A NaN end crosses nothing, so it never proves."""
+        return np.asarray((self.low > self.high).any(axis=1))
 
 
-_FIELDS = ("x_low", "x_high", "w_low", "w_high", "f_low", "f_high", "p_low", "p_high", "u_low", "u_high")
+@dataclass(frozen=True, slots=True)
+class Layout:
+    """Column ranges of a box."""
+
+    x: slice
+    w: slice
+    p: slice
+    u: slice
+    f: slice
 
 
 def stack(parts: list[Boxes]) -> Boxes:
     """One batch from several."""
-    return parts[0] if len(parts) == 1 else Boxes(*(np.concatenate([getattr(p, name) for p in parts]) for name in _FIELDS))
+    if len(parts) == 1:
+        return parts[0]
+    return Boxes(np.concatenate([part.low for part in parts]), np.concatenate([part.high for part in parts]))
 
 
-def start_box(problem: Problem, low: Array, high: Array) -> Boxes:
-    """A batch of one: x in [low, high], the rest as wide as that allows."""
-    x_low, x_high = low[None].astype(float), high[None].astype(float)
-    w_low, w_high = _affine(problem.W, x_low, x_high, problem.c_low, problem.c_high)
+def boxes_over(problem: Problem, x_low: Array, x_high: Array) -> Boxes:
+    """The boxes of x with everything that follows from x alone; x_low, x_high: (b, n)."""
     q = problem.product
+    w_low, w_high = _affine(problem.W, x_low, x_high, problem.c_low, problem.c_high)
+    if problem.m == 0:
+        return Boxes(x_low, x_high)
+    f_low, f_high = problem.rows.bounds(w_low, w_high)
+    if len(q) == 0:
+        return Boxes(np.concatenate([x_low, w_low, f_low], axis=1), np.concatenate([x_high, w_high, f_high], axis=1))
     u_low, u_high = _affine(problem.V[q], x_low, x_high, problem.d_low[q], problem.d_high[q])
-    f_low, f_high = problem.rows.bounds(w_low, w_high) if problem.m else (w_low, w_high)
-    p_low, p_high = _product(problem, f_low, f_high, u_low, u_high)
-    return Boxes(x_low, x_high, w_low, w_high, f_low, f_high, p_low, p_high, u_low, u_high)
+    p_low, p_high = f_low.copy(), f_high.copy()
+    p_low[:, q], p_high[:, q] = multiply(f_low[:, q], f_high[:, q], u_low, u_high)
+    return Boxes(
+        np.concatenate([x_low, w_low, p_low, u_low, f_low[:, q]], axis=1),
+        np.concatenate([x_high, w_high, p_high, u_high, f_high[:, q]], axis=1),
+    )
 
 
 def _affine(matrix: Array, x_low: Array, x_high: Array, c_low: Array, c_high: Array) -> tuple[Array, Array]:
@@ -265,45 +328,64 @@ def _affine(matrix: Array, x_low: Array, x_high: Array, c_low: Array, c_high: Ar
     return low - error, high + error
 
 
-def _product(problem: Problem, f_low: Array, f_high: Array, u_low: Array, u_high: Array) -> tuple[Array, Array]:
-    q = problem.product
-    if len(q) == 0:
-        return f_low, f_high
-    p_low, p_high = f_low.copy(), f_high.copy()
-    p_low[:, q], p_high[:, q] = multiply(f_low[:, q], f_high[:, q], u_low, u_high)
-    return p_low, p_high
-
-
 def hull(problem: Problem, boxes: Boxes) -> Boxes:
     """One pass of hull consistency: every linear row to every variable in it, then every scalar function both ways."""
-    n, m = problem.n, problem.m
     table = problem.table
-    b = len(boxes)
-    zero = np.zeros((b, 1))
-    z_low = np.concatenate([boxes.x_low, boxes.w_low, boxes.p_low, boxes.u_low, zero], axis=1)
-    z_high = np.concatenate([boxes.x_high, boxes.w_high, boxes.p_high, boxes.u_high, zero], axis=1)
-    first, second = table.coefficient * z_low[:, table.index], table.coefficient * z_high[:, table.index]
+    b, linear = len(boxes), len(table.places)
+    pad = np.zeros((b, 1))
+    z_low = np.concatenate([boxes.low[:, :linear], pad], axis=1)[:, table.index]
+    z_high = np.concatenate([boxes.high[:, :linear], pad], axis=1)[:, table.index]
+    first, second = table.coefficient * z_low, table.coefficient * z_high
     t_low, t_high = np.minimum(first, second), np.maximum(first, second)
-    size = np.maximum(np.abs(t_low), np.abs(t_high))
-    if table.exclude.shape[0] <= 24:
+    size = np.maximum(-t_low, t_high)
+    if len(table.exclude) <= 24:
         others_low, others_high, others_size = t_low @ table.exclude, t_high @ table.exclude, size @ table.exclude
     else:
         others_low, others_high, others_size = _others(t_low), _others(t_high), _others(size)
     # every term carries one rounding itself, the right side two more
-    error = (others_size + np.abs(table.high)[:, None] + np.abs(table.low)[:, None]) * gamma(table.exclude.shape[0] + 4) + TINY
-    rest_low = table.low[:, None] - others_high - error
-    rest_high = table.high[:, None] - others_low + error
-    first, second = rest_low / table.coefficient, rest_high / table.coefficient
-    new_low = down(np.minimum(first, second)).reshape(b, -1)
-    new_high = up(np.maximum(first, second)).reshape(b, -1)
-    new_low = np.concatenate([new_low, np.full((b, 1), -np.inf)], axis=1)[:, table.places].max(axis=2)
-    new_high = np.concatenate([new_high, np.full((b, 1), np.inf)], axis=1)[:, table.places].min(axis=2)
-    z_low, z_high = np.maximum(z_low[:, :-1], new_low), np.minimum(z_high[:, :-1], new_high)
-    x_low, x_high = z_low[:, :n], z_high[:, :n]
-    w_low, w_high = z_low[:, n : n + m], z_high[:, n : n + m]
-    p_low, p_high = z_low[:, n + m : n + 2 * m], z_high[:, n + m : n + 2 * m]
-    u_low, u_high = z_low[:, n + 2 * m :], z_high[:, n + 2 * m :]
-    return _scalar(problem, x_low, x_high, w_low, w_high, boxes.f_low, boxes.f_high, p_low, p_high, u_low, u_high)
+    error = (others_size + table.right_size) * gamma(len(table.exclude) + 4) + TINY
+    first = (table.low - others_high - error) / table.coefficient
+    second = (table.high - others_low + error) / table.coefficient
+    ends = np.empty((2, b, first.shape[1] * first.shape[2] + 1))
+    ends[0, :, :-1] = down(np.minimum(first, second)).reshape(b, -1)
+    ends[1, :, :-1] = up(np.maximum(first, second)).reshape(b, -1)
+    ends[0, :, -1], ends[1, :, -1] = -np.inf, np.inf
+    low, high = boxes.low.copy(), boxes.high.copy()
+    low[:, :linear] = np.maximum(low[:, :linear], ends[0][:, table.places].max(axis=2))
+    high[:, :linear] = np.minimum(high[:, :linear], ends[1][:, table.places].min(axis=2))
+    if problem.m:
+        _scalar(problem, low, high)
+    return Boxes(low, high)
+
+
+def _scalar(problem: Problem, low: Array, high: Array) -> None:
+    """phi and psi to each other, in place: forward from w, back from psi."""
+    at = problem.layout
+    w_low, w_high = low[:, at.w], high[:, at.w]
+    # a crossed interval is already empty; the functions are shown its ends in order
+    safe_low, safe_high = np.minimum(w_low, w_high), np.maximum(w_low, w_high)
+    lower, upper = problem.rows.bounds(safe_low, safe_high)
+    q = problem.product
+    p_low, p_high = low[:, at.p], high[:, at.p]
+    if len(q) == 0:
+        np.maximum(p_low, lower, out=p_low)
+        np.minimum(p_high, upper, out=p_high)
+        f_low, f_high = p_low, p_high
+    else:
+        u_low, u_high, fq_low, fq_high = low[:, at.u], high[:, at.u], low[:, at.f], high[:, at.f]
+        f_low, f_high = np.maximum(p_low, lower), np.minimum(p_high, upper)
+        f_low[:, q], f_high[:, q] = np.maximum(fq_low, lower[:, q]), np.minimum(fq_high, upper[:, q])
+        pq_low, pq_high = multiply(f_low[:, q], f_high[:, q], u_low, u_high)
+        pq_low, pq_high = np.maximum(pq_low, p_low[:, q]), np.minimum(pq_high, p_high[:, q])
+        lower, upper = divide_clear(pq_low, pq_high, u_low, u_high)
+        f_low[:, q], f_high[:, q] = np.maximum(f_low[:, q], lower), np.minimum(f_high[:, q], upper)
+        lower, upper = divide_clear(pq_low, pq_high, f_low[:, q], f_high[:, q])
+        low[:, at.u], high[:, at.u] = np.maximum(u_low, lower), np.minimum(u_high, upper)
+        low[:, at.f], high[:, at.f] = f_low[:, q], f_high[:, q]
+        p_low[:], p_high[:] = f_low, f_high
+        p_low[:, q], p_high[:, q] = pq_low, pq_high
+    lower, upper = problem.rows.inverse(safe_low, safe_high, f_low, f_high)
+    low[:, at.w], high[:, at.w] = np.maximum(w_low, lower), np.minimum(w_high, upper)
 
 
 def _others(t: Array) -> Array:
@@ -313,41 +395,6 @@ def _others(t: Array) -> Array:
     np.cumsum(t[..., :-1], axis=-1, out=before[..., 1:])
     after[..., :-1] = np.cumsum(t[..., :0:-1], axis=-1)[..., ::-1]
     return before + after
-
-
-def _scalar(
-    problem: Problem, x_low: Array, x_high: Array, w_low: Array, w_high: Array, f_low: Array, f_high: Array,
-    p_low: Array, p_high: Array, u_low: Array, u_high: Array,
-) -> Boxes:
-    """phi and psi to each other: forward from w, back from psi."""
-    if problem.m == 0:
-        return Boxes(x_low, x_high, w_low, w_high, f_low, f_high, p_low, p_high, u_low, u_high)
-    # a crossed interval is already empty; keep its ends finite and ordered so that the functions see no nonsense
-    crossed = w_low > w_high
-    safe_low, safe_high = np.where(crossed, w_high, w_low), np.where(crossed, w_low, w_high)
-    lower, upper = problem.rows.bounds(safe_low, safe_high)
-    f_low, f_high = np.maximum(f_low, lower), np.minimum(f_high, upper)
-    q = problem.product
-    if len(q) == 0:
-        f_low, f_high = np.maximum(f_low, p_low), np.minimum(f_high, p_high)
-        p_low, p_high = f_low, f_high
-    else:
-        plain = np.ones(problem.m, dtype=bool)
-        plain[q] = False
-        f_low[:, plain] = np.maximum(f_low[:, plain], p_low[:, plain])
-        f_high[:, plain] = np.minimum(f_high[:, plain], p_high[:, plain])
-        p_low, p_high = p_low.copy(), p_high.copy()
-        p_low[:, plain], p_high[:, plain] = f_low[:, plain], f_high[:, plain]
-        fq_low, fq_high = f_low[:, q], f_high[:, q]
-        lower, upper = multiply(fq_low, fq_high, u_low, u_high)
-        p_low[:, q], p_high[:, q] = np.maximum(p_low[:, q], lower), np.minimum(p_high[:, q], upper)
-        lower, upper = divide_clear(p_low[:, q], p_high[:, q], u_low, u_high)
-        f_low[:, q], f_high[:, q] = np.maximum(fq_low, lower), np.minimum(fq_high, upper)
-        lower, upper = divide_clear(p_low[:, q], p_high[:, q], f_low[:, q], f_high[:, q])
-        u_low, u_high = np.maximum(u_low, lower), np.minimum(u_high, upper)
-    lower, upper = problem.rows.inverse(safe_low, safe_high, f_low, f_high)
-    w_low, w_high = np.maximum(w_low, lower), np.minimum(w_high, upper)
-    return Boxes(x_low, x_high, w_low, w_high, f_low, f_high, p_low, p_high, u_low, u_high)
 
 
 def nodal(problem: Problem, boxes: Boxes) -> Boxes:
@@ -360,9 +407,10 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     if table is None:
         return boxes
     j, t = table.unknowns, len(table.pair_row)
-    x_low, x_high = boxes.x_low, boxes.x_high
+    at = problem.layout
+    x_low, x_high = boxes.low[:, at.x], boxes.high[:, at.x]
     fixed_low, fixed_high = _affine(table.off, x_low, x_high, -problem.s_high[j], -problem.s_low[j])
-    term_low, term_high = _affine(table.keep, boxes.p_low, boxes.p_high, np.zeros(len(j)), np.zeros(len(j)))
+    term_low, term_high = _affine(table.keep, boxes.low[:, at.p], boxes.high[:, at.p], np.zeros(len(j)), np.zeros(len(j)))
     fixed_low, fixed_high = down(fixed_low + term_low), up(fixed_high + term_high)
     k = table.pair_row
     rest_low, rest_high = _affine(table.rest, x_low, x_high, problem.c_low[k], problem.c_high[k])
@@ -376,7 +424,7 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     reach_low, reach_high = scale(table.lever, ts, te)
     w_low, w_high = down(rest_low + reach_low), up(rest_high + reach_high)
     # the interval of w itself is known too; a slice that misses it is empty, but stays here clipped and is left to the row test
-    known_low, known_high = boxes.w_low[:, k], boxes.w_high[:, k]
+    known_low, known_high = boxes.low[:, at.w][:, k], boxes.high[:, at.w][:, k]
     missed = (w_high < known_low) | (w_low > known_high)
     w_low, w_high = np.clip(w_low, known_low, known_high), np.clip(w_high, known_low, known_high)
     f_low, f_high = table.rows.bounds(w_low, w_high)
@@ -397,9 +445,9 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     last = SLICES - 1 - hit[::-1].argmax(axis=0)
     new_low = np.where(some, np.take_along_axis(start, first[None], axis=0)[0], HUGE)
     new_high = np.where(some, np.take_along_axis(stop, last[None], axis=0)[0], -HUGE)
-    x_low, x_high = x_low.copy(), x_high.copy()
-    x_low[:, j], x_high[:, j] = np.maximum(own_low, new_low), np.minimum(own_high, new_high)
-    return Boxes(x_low, x_high, *(getattr(boxes, name) for name in _FIELDS[2:]))
+    low, high = boxes.low.copy(), boxes.high.copy()
+    low[:, j], high[:, j] = np.maximum(own_low, new_low), np.minimum(own_high, new_high)
+    return Boxes(low, high)
 
 
 def slices(low: Array, high: Array, pieces: int) -> Array:
@@ -453,28 +501,30 @@ def relax(problem: Problem, boxes: Boxes) -> Relaxed:
     g, b, w, v = problem.magnitudes
     c, c_rad, d, d_rad, s, s_rad = problem.centres
     q = problem.product
-    xm = middle(boxes.x_low, boxes.x_high)
-    rx = radius(boxes.x_low, boxes.x_high, xm)
-    a, e_low, e_high = problem.rows.chord(boxes.w_low, boxes.w_high)
+    at = problem.layout
+    x_low, x_high = boxes.low[:, at.x], boxes.high[:, at.x]
+    w_low, w_high = boxes.low[:, at.w], boxes.high[:, at.w]
+    xm = middle(x_low, x_high)
+    rx = radius(x_low, x_high, xm)
+    a, e_low, e_high = problem.rows.chord(w_low, w_high)
     em = middle(e_low, e_high)
     er = radius(e_low, e_high, em)
     lines = a
     f = np.zeros_like(a)
-    fr = np.zeros_like(a)
     u = np.ones_like(a)
     if len(q):
-        um = middle(boxes.u_low, boxes.u_high)
-        ur = radius(boxes.u_low, boxes.u_high, um)
-        fm = middle(boxes.f_low[:, q], boxes.f_high[:, q])
-        fr[:, q] = radius(boxes.f_low[:, q], boxes.f_high[:, q], fm)
+        um = middle(boxes.low[:, at.u], boxes.high[:, at.u])
+        ur = radius(boxes.low[:, at.u], boxes.high[:, at.u], um)
+        fm = middle(boxes.low[:, at.f], boxes.high[:, at.f])
+        fr = radius(boxes.low[:, at.f], boxes.high[:, at.f], fm)
         f[:, q] = fm
         u[:, q] = um
         # phi u = um (a w + e) + fm (u - um) + (phi - fm)(u - um)
         lines = a * u
         er = up(np.abs(u) * er)
-        er[:, q] = up(er[:, q] + up(fr[:, q] * ur))
+        er[:, q] = up(er[:, q] + up(fr * ur))
         em = em * u
-        er = er + (np.abs(em) * 2.0 + np.abs(lines) * 1.0 * np.maximum(np.abs(boxes.w_low), np.abs(boxes.w_high))) * (2.0 * UNIT)
+        er = er + (np.abs(em) * 2.0 + np.abs(lines) * np.maximum(np.abs(w_low), np.abs(w_high))) * (2.0 * UNIT)
     slope = lines[..., None] * problem.W + f[..., None] * problem.V if len(q) else lines[..., None] * problem.W
     matrix = problem.G + problem.B @ slope
     inverse = invert(matrix)
@@ -510,8 +560,9 @@ def relax(problem: Problem, boxes: Boxes) -> Relaxed:
     x_rad = up(x_rad * (1.0 + gamma(k))) + TINY
     dx = _times(inverse, residual)
     proved = np.any(inverse != 0.0, axis=(1, 2))[:, None]
-    x_low = np.where(proved, np.maximum(boxes.x_low, down(xm + dx - x_rad)), boxes.x_low)
-    x_high = np.where(proved, np.minimum(boxes.x_high, up(xm + dx + x_rad)), boxes.x_high)
+    low, high = boxes.low.copy(), boxes.high.copy()
+    low[:, at.x] = np.where(proved, np.maximum(x_low, down(xm + dx - x_rad)), x_low)
+    high[:, at.x] = np.where(proved, np.minimum(x_high, up(xm + dx + x_rad)), x_high)
     # the same for w = W x + c, with the cancellation inside W N B kept
     w_through = problem.W @ through
     w_rad = (
@@ -523,15 +574,14 @@ def relax(problem: Problem, boxes: Boxes) -> Relaxed:
     )
     w_rad = up(w_rad * (1.0 + gamma(k))) + TINY
     dw = _times(problem.W, dx)
-    w_low = np.where(proved, np.maximum(boxes.w_low, down(wm + dw - w_rad)), boxes.w_low)
-    w_high = np.where(proved, np.minimum(boxes.w_high, up(wm + dw + w_rad)), boxes.w_high)
-    width = np.maximum(boxes.w_high - boxes.w_low, TINY)
+    low[:, at.w] = np.where(proved, np.maximum(w_low, down(wm + dw - w_rad)), w_low)
+    high[:, at.w] = np.where(proved, np.minimum(w_high, up(wm + dw + w_rad)), w_high)
+    width = np.maximum(w_high - w_low, TINY)
     impact = np.max(np.abs(w_through) / width[:, :, None], axis=1) * inner_rad
-    narrowed = Boxes(x_low, x_high, w_low, w_high, *(getattr(boxes, name) for name in _FIELDS[4:]))
-    return Relaxed(narrowed, np.nan_to_num(impact, nan=0.0, posinf=HUGE))
+    return Relaxed(Boxes(low, high), np.nan_to_num(impact, nan=0.0, posinf=HUGE))
 
 
-def injective(problem: Problem, w_low: Array, w_high: Array, u_low: Array, u_high: Array, f_low: Array, f_high: Array) -> NDArray[np.bool_]:
+def injective(problem: Problem, boxes: Boxes) -> NDArray[np.bool_]:
     """(b,) whether the equations are one to one over {x: W x + c in [w], V x + d in [u], phi in [f]}.
 
     The difference of two values is J (x1 - x2), J = G + B (diag(a) W + diag(f) V) with a in the slope range times u, because every row is
@@ -539,15 +589,16 @@ def injective(problem: Problem, w_low: Array, w_high: Array, u_low: Array, u_hig
     """
     n, m = problem.n, problem.m
     g, b, w, v = problem.magnitudes
-    a_low, a_high = problem.rows.slope_bounds(w_low, w_high)
+    at = problem.layout
+    a_low, a_high = problem.rows.slope_bounds(boxes.low[:, at.w], boxes.high[:, at.w])
     q = problem.product
     f = np.zeros_like(a_low)
     fr = np.zeros_like(a_low)
     if len(q):
         a_low, a_high = a_low.copy(), a_high.copy()
-        a_low[:, q], a_high[:, q] = multiply(a_low[:, q], a_high[:, q], u_low, u_high)
-        f[:, q] = middle(f_low[:, q], f_high[:, q])
-        fr[:, q] = radius(f_low[:, q], f_high[:, q], f[:, q])
+        a_low[:, q], a_high[:, q] = multiply(a_low[:, q], a_high[:, q], boxes.low[:, at.u], boxes.high[:, at.u])
+        f[:, q] = middle(boxes.low[:, at.f], boxes.high[:, at.f])
+        fr[:, q] = radius(boxes.low[:, at.f], boxes.high[:, at.f], f[:, q])
     a = middle(a_low, a_high)
     ar = radius(a_low, a_high, a)
     slope = a[..., None] * problem.W + (f[..., None] * problem.V if len(q) else 0.0)
@@ -623,19 +674,20 @@ def certify(problem: Problem, x: Array) -> Certified:
     g, b, w, v = problem.magnitudes
     q = problem.product
     size_x = np.abs(x)
-    at = start_points(problem, x, np.zeros_like(x))
-    p_mid = middle(at.p_low, at.p_high)
-    p_rad = radius(at.p_low, at.p_high, p_mid)
+    at = problem.layout
+    here = boxes_over(problem, x, x)
+    p_mid = middle(here.low[:, at.p], here.high[:, at.p])
+    p_rad = radius(here.low[:, at.p], here.high[:, at.p], p_mid)
     _, _, _, _, s, s_rad = problem.centres
     k = n + 2 * m + 8
     residual = _times(problem.G, x) + _times(problem.B, p_mid) - s
     residual_rad = (_times(g, size_x) + _times(b, np.abs(p_mid)) + np.abs(s)) * gamma(k) + s_rad
-    a = problem.rows.slope(middle(at.w_low, at.w_high)) if m else np.zeros((len(x), 0))
+    a = problem.rows.slope(middle(here.low[:, at.w], here.high[:, at.w])) if m else np.zeros((len(x), 0))
     f = np.zeros_like(a)
     if len(q):
         u = np.ones_like(a)
-        u[:, q] = middle(at.u_low, at.u_high)
-        f[:, q] = middle(at.f_low[:, q], at.f_high[:, q])
+        u[:, q] = middle(here.low[:, at.u], here.high[:, at.u])
+        f[:, q] = middle(here.low[:, at.f], here.high[:, at.f])
         a = a * u
     lines = a[..., None] * problem.W + (f[..., None] * problem.V if len(q) else 0.0)
     matrix = problem.G + problem.B @ lines
@@ -655,14 +707,14 @@ def certify(problem: Problem, x: Array) -> Certified:
     spread = np.where(np.isfinite(spread), spread, 1.0)
     for _ in range(INFLATIONS):
         here = start_points(problem, x, spread)
-        a_low, a_high = problem.rows.slope_bounds(here.w_low, here.w_high) if m else (a, a)
+        a_low, a_high = problem.rows.slope_bounds(here.low[:, at.w], here.high[:, at.w]) if m else (a, a)
         if len(q):
             a_low, a_high = a_low.copy(), a_high.copy()
-            a_low[:, q], a_high[:, q] = multiply(a_low[:, q], a_high[:, q], here.u_low, here.u_high)
+            a_low[:, q], a_high[:, q] = multiply(a_low[:, q], a_high[:, q], here.low[:, at.u], here.high[:, at.u])
         ar = radius(a_low, a_high, a)
         fr = np.zeros_like(a)
         if len(q):
-            fr[:, q] = radius(here.f_low[:, q], here.f_high[:, q], f[:, q])
+            fr[:, q] = radius(here.low[:, at.f], here.high[:, at.f], f[:, q])
         move = ar * _times(w, spread) + fr * _times(v, spread)
         size_row = _times(g, spread) + _times(b, (np.abs(a) + ar) * _times(w, spread) + (np.abs(f) + fr) * _times(v, spread))
         error = _times(np.abs(np.eye(n) - inverse @ matrix), spread)
@@ -679,15 +731,8 @@ def certify(problem: Problem, x: Array) -> Certified:
 
 def start_points(problem: Problem, x: Array, spread: Array) -> Boxes:
     """The boxes x +/- spread with everything that follows from x; no contraction."""
-    x_low, x_high = down(x - spread), up(x + spread)
     zero = spread == 0.0
-    x_low, x_high = np.where(zero, x, x_low), np.where(zero, x, x_high)
-    w_low, w_high = _affine(problem.W, x_low, x_high, problem.c_low, problem.c_high)
-    q = problem.product
-    u_low, u_high = _affine(problem.V[q], x_low, x_high, problem.d_low[q], problem.d_high[q])
-    f_low, f_high = problem.rows.bounds(w_low, w_high) if problem.m else (w_low, w_high)
-    p_low, p_high = _product(problem, f_low, f_high, u_low, u_high)
-    return Boxes(x_low, x_high, w_low, w_high, f_low, f_high, p_low, p_high, u_low, u_high)
+    return boxes_over(problem, np.where(zero, x, down(x - spread)), np.where(zero, x, up(x + spread)))
 
 
 @dataclass(frozen=True, eq=False)
@@ -725,27 +770,6 @@ class _Search:
     doubtful: bool = False
 
 
-def _width(boxes: Boxes) -> Array:
-    return np.concatenate([boxes.x_high - boxes.x_low, boxes.w_high - boxes.w_low], axis=1)
-
-
-def narrow(problem: Problem, boxes: Boxes) -> tuple[Boxes, Array]:
-    """One pass of everything that narrows; (what is left alive, impact of each row on its widths). Dead boxes are dropped in between."""
-    for contract in (hull, hull, nodal, hull):
-        boxes = contract(problem, boxes)
-        boxes = boxes.pick(~boxes.empty())
-        if len(boxes) == 0:
-            return boxes, np.zeros((0, problem.m))
-    relaxed = relax(problem, boxes)
-    alive = ~relaxed.boxes.empty()
-    boxes, impact = relaxed.boxes.pick(alive), relaxed.impact[alive]
-    if len(boxes) == 0:
-        return boxes, impact
-    boxes = hull(problem, boxes)
-    alive = ~boxes.empty()
-    return boxes.pick(alive), impact[alive]
-
-
 def search(
     problem: Problem, low: Array, high: Array, *, deadline: float = np.inf, scale: Array | None = None, max_boxes: int = 10_000_000
 ) -> Found:
@@ -753,7 +777,7 @@ def search(
     unknown for the word small (default 1)."""
     began = time.monotonic()
     state = _Search(problem, np.ones(problem.n) if scale is None else scale)
-    queue: list[Boxes] = [start_box(problem, low, high)]
+    queue: list[Boxes] = [boxes_over(problem, low[None].astype(float), high[None].astype(float))]
     ended = False
     with np.errstate(over="ignore", invalid="ignore", divide="ignore", under="ignore"):
         while queue:
@@ -761,11 +785,10 @@ def search(
                 ended = True
                 break
             batch = _take(queue)
-            queue_next = _round(state, batch)
-            queue.extend(queue_next)
-    left = [np.stack([b.x_low, b.x_high], axis=1) for b in queue] if ended else []
+            queue.extend(_round(state, batch))
+    left = [_ends(problem, part) for part in queue] if ended else []
     x, spread, doubtful = _distinct(problem, state.points)
-    clusters = [np.stack([b.x_low, b.x_high], axis=1) for b in state.clusters] + doubtful
+    clusters = [_ends(problem, part) for part in state.clusters] + doubtful
     n = problem.n
     return Found(
         x, spread, np.concatenate(clusters) if clusters else np.zeros((0, 2, n)), np.concatenate(left) if left else np.zeros((0, 2, n)),
@@ -788,31 +811,36 @@ def _take(queue: list[Boxes]) -> Boxes:
     return stack(taken)
 
 
+def _ends(problem: Problem, boxes: Boxes) -> Array:
+    """(b, 2, n) the x part of boxes."""
+    return np.stack([boxes.low[:, problem.layout.x], boxes.high[:, problem.layout.x]], axis=1)
+
+
 def _round(state: _Search, boxes: Boxes) -> list[Boxes]:
     """Narrow a batch until it stands still, settle what can be settled, split the rest once."""
     problem = state.problem
     state.boxes += len(boxes)
     settled: list[Boxes] = []
     impacts: list[Array] = []
-    for _ in range(60):
-        before = _width(boxes)
-        tag = np.arange(len(boxes))
-        boxes, impact, tag = _narrow_tagged(problem, boxes, tag)
+    columns = problem.n + problem.m
+    for _ in range(MAX_PASSES):
+        before_low, before_high = boxes.low[:, :columns], boxes.high[:, :columns]
+        boxes, impact, tag = narrow(problem, boxes)
         if len(boxes) == 0:
             break
-        floor = 1e-9 * (1.0 + np.maximum(np.abs(np.concatenate([boxes.x_low, boxes.w_low], 1)), 0.0))
-        gain = np.where(before[tag] > floor, 1.0 - _width(boxes) / np.maximum(before[tag], TINY), 0.0)
-        moving = np.max(gain, axis=1) > PROGRESS
-        still = ~moving
-        if np.any(still):
-            settled.append(boxes.pick(still))
-            impacts.append(impact[still])
-        boxes = boxes.pick(moving)
+        before = before_high[tag] - before_low[tag]
+        floor = 1e-9 * (1.0 + np.abs(boxes.low[:, :columns]))
+        after = boxes.high[:, :columns] - boxes.low[:, :columns]
+        moving = ((after < (1.0 - PROGRESS) * before) & (before > floor)).any(axis=1)
+        if not moving.all():
+            settled.append(boxes.pick(~moving))
+            impacts.append(impact[~moving])
+            boxes, impact = boxes.pick(moving), impact[moving]
         if len(boxes) == 0:
             break
     else:
         settled.append(boxes)
-        impacts.append(impact[moving])
+        impacts.append(impact)
     if not settled:
         return []
     boxes, impact = stack(settled), np.concatenate(impacts)
@@ -821,97 +849,88 @@ def _round(state: _Search, boxes: Boxes) -> list[Boxes]:
     return [_split(problem, boxes, impact)] if len(boxes) else []
 
 
-def _narrow_tagged(problem: Problem, boxes: Boxes, tag: Index) -> tuple[Boxes, Array, Index]:
-    """`narrow`, keeping which box is which."""
-    for contract in (hull, hull, nodal, hull):
+def narrow(problem: Problem, boxes: Boxes) -> tuple[Boxes, Array, Index]:
+    """One pass of everything that narrows: what is left alive, (b, m) impact of each row on its widths, which box each was."""
+    tag = np.arange(len(boxes))
+    for contract in (hull, nodal, hull):
         boxes = contract(problem, boxes)
-        alive = ~boxes.empty()
-        boxes, tag = boxes.pick(alive), tag[alive]
-        if len(boxes) == 0:
-            return boxes, np.zeros((0, problem.m)), tag
+        empty = boxes.empty()
+        if empty.any():
+            boxes, tag = boxes.pick(~empty), tag[~empty]
+            if len(boxes) == 0:
+                return boxes, np.zeros((0, problem.m)), tag
     relaxed = relax(problem, boxes)
     alive = ~relaxed.boxes.empty()
-    boxes, impact, tag = relaxed.boxes.pick(alive), relaxed.impact[alive], tag[alive]
-    if len(boxes) == 0:
-        return boxes, impact, tag
-    boxes = hull(problem, boxes)
-    alive = ~boxes.empty()
-    return boxes.pick(alive), impact[alive], tag[alive]
+    return relaxed.boxes.pick(alive), relaxed.impact[alive], tag[alive]
 
 
 def _settle(state: _Search, boxes: Boxes) -> NDArray[np.bool_]:
     """(b,) which boxes are still open after the uniqueness test and the test for smallness; the others are recorded in `state`."""
     problem = state.problem
+    at = problem.layout
     open_ = np.ones(len(boxes), dtype=bool)
     for region in state.regions:
-        open_ &= ~_within(boxes, region)
+        open_ &= _outside(boxes, region, problem.n)
     candidates = np.flatnonzero(open_)
     if len(candidates):
-        part = boxes.pick(candidates)
-        one = injective(problem, part.w_low, part.w_high, part.u_low, part.u_high, part.f_low, part.f_high)
-        candidates = candidates[one]
+        candidates = candidates[injective(problem, boxes.pick(candidates))]
     if len(candidates):
         part = boxes.pick(candidates)
-        points = newton_points(problem, middle(part.x_low, part.x_high))
+        points = newton_points(problem, middle(part.low[:, at.x], part.high[:, at.x]))
         certified = certify(problem, points)
-        here = start_points(problem, certified.x, certified.spread)
-        joined = _join(part, here)
-        whole = injective(problem, joined.w_low, joined.w_high, joined.u_low, joined.u_high, joined.f_low, joined.f_high)
+        joined = _join(part, start_points(problem, certified.x, certified.spread))
         # one to one over the hull of the box and the point: the point is the only solution either holds
-        closed = certified.good & whole
+        closed = certified.good & injective(problem, joined)
         for i in np.flatnonzero(closed):
             state.points.append((certified.x[i], certified.spread[i]))
             state.regions.append(joined.pick(slice(i, i + 1)))
         open_[candidates[closed]] = False
-    size = np.max((boxes.x_high - boxes.x_low) / (state.scale + np.maximum(np.abs(boxes.x_low), np.abs(boxes.x_high))), axis=1)
-    w_size = np.max((boxes.w_high - boxes.w_low) / (1.0 + np.abs(boxes.w_low)), axis=1) if problem.m else size
-    tiny = open_ & (size < SMALL) & (w_size < 100.0 * SMALL)
+    x_low, x_high = boxes.low[:, at.x], boxes.high[:, at.x]
+    size = np.max((x_high - x_low) / (state.scale + np.maximum(np.abs(x_low), np.abs(x_high))), axis=1)
+    tiny = open_ & (size < SMALL)
+    if problem.m:
+        w_low, w_high = boxes.low[:, at.w], boxes.high[:, at.w]
+        tiny &= np.max((w_high - w_low) / (1.0 + np.abs(w_low)), axis=1) < 100.0 * SMALL
     if np.any(tiny):
         state.clusters.append(boxes.pick(tiny))
         open_ &= ~tiny
     return open_
 
 
-def _within(boxes: Boxes, region: Boxes) -> NDArray[np.bool_]:
-    inside = np.ones(len(boxes), dtype=bool)
-    for name in ("w", "u", "f"):
-        low, high = getattr(boxes, f"{name}_low"), getattr(boxes, f"{name}_high")
-        inside &= np.all((low >= getattr(region, f"{name}_low")) & (high <= getattr(region, f"{name}_high")), axis=1)
-    return np.asarray(inside)
+def _outside(boxes: Boxes, region: Boxes, n: int) -> NDArray[np.bool_]:
+    """(b,) not wholly within a region that is known to hold one solution. The x columns do not count: the proof there was of w, u, phi."""
+    return np.asarray(((boxes.low[:, n:] < region.low[:, n:]) | (boxes.high[:, n:] > region.high[:, n:])).any(axis=1))
 
 
 def _join(a: Boxes, b: Boxes) -> Boxes:
     """Hull of two batches, box by box."""
-    ends = []
-    for name in _FIELDS:
-        choose = np.minimum if name.endswith("_low") else np.maximum
-        ends.append(choose(getattr(a, name), getattr(b, name)))
-    return Boxes(*ends)
+    return Boxes(np.minimum(a.low, b.low), np.maximum(a.high, b.high))
 
 
 def _split(problem: Problem, boxes: Boxes, impact: Array) -> Boxes:
     """Each box in two across the row whose chord error matters most; across the widest unknown where no row matters."""
+    at = problem.layout
     b = np.arange(len(boxes))
-    halves_a = {name: getattr(boxes, name).copy() for name in _FIELDS}
-    halves_b = {name: getattr(boxes, name).copy() for name in _FIELDS}
-    x_size = (boxes.x_high - boxes.x_low) / (1e-3 + np.abs(boxes.x_low) + np.abs(boxes.x_high))
-    j = np.argmax(x_size, axis=1)
+    one, two = Boxes(boxes.low, boxes.high.copy()), Boxes(boxes.low.copy(), boxes.high)
     by_row = np.zeros(len(boxes), dtype=bool)
     if problem.m:
-        k = np.argmax(impact, axis=1)
-        w_low, w_high = boxes.w_low[b, k], boxes.w_high[b, k]
-        room = (w_high - w_low) > 1e-9 * (1.0 + np.abs(w_low))
-        by_row = (impact[b, k] > 1e-6) & room
-        points = problem.rows.split_points(boxes.w_low, boxes.w_high)[b, k]
-        rows = b[by_row]
-        halves_a["w_high"][rows, k[by_row]] = points[by_row]
-        halves_b["w_low"][rows, k[by_row]] = points[by_row]
+        w_low, w_high = boxes.low[:, at.w], boxes.high[:, at.w]
+        worth = np.where(w_high - w_low > 1e-9 * (1.0 + np.abs(w_low)), impact * problem.preference, 0.0)
+        k = np.argmax(worth, axis=1)
+        by_row = worth[b, k] > 1e-6
+        points = problem.rows.split_points(w_low, w_high)[b, k][by_row]
+        rows, column = b[by_row], at.w.start + k[by_row]
+        one.high[rows, column] = points
+        two.low[rows, column] = points
     rows = b[~by_row]
     if len(rows):
-        cuts = slices(boxes.x_low[rows, j[rows]], boxes.x_high[rows, j[rows]], 64)[31]
-        halves_a["x_high"][rows, j[rows]] = cuts
-        halves_b["x_low"][rows, j[rows]] = cuts
-    return stack([Boxes(**halves_a), Boxes(**halves_b)])
+        x_low, x_high = boxes.low[rows, at.x], boxes.high[rows, at.x]
+        j = np.argmax((x_high - x_low) / (1e-3 + np.abs(x_low) + np.abs(x_high)), axis=1)
+        here = np.arange(len(rows))
+        cuts = slices(x_low[here, j], x_high[here, j], 64)[31]
+        one.high[rows, j] = cuts
+        two.low[rows, j] = cuts
+    return stack([one, two])
 
 
 def _distinct(problem: Problem, points: list[tuple[Array, Array]]) -> tuple[Array, Array, list[Array]]:
@@ -924,14 +943,33 @@ def _distinct(problem: Problem, points: list[tuple[Array, Array]]) -> tuple[Arra
     kept: list[int] = []
     doubtful: list[Array] = []
     for i in range(len(x)):
-        same = False
-        for k in kept:
-            if np.all(np.abs(x[i] - x[k]) <= (spread[i] + spread[k]) * (1.0 + 1e-12)):
-                pair = _join(start_points(problem, x[i][None], spread[i][None]), start_points(problem, x[k][None], spread[k][None]))
-                same = True
-                if not injective(problem, pair.w_low, pair.w_high, pair.u_low, pair.u_high, pair.f_low, pair.f_high)[0]:
-                    doubtful.append(np.stack([pair.x_low, pair.x_high], axis=1))
-                break
-        if not same:
+        near = [k for k in kept if np.all(np.abs(x[i] - x[k]) <= (spread[i] + spread[k]) * (1.0 + 1e-12))]
+        for k in near:
+            pair = _join(start_points(problem, x[i][None], spread[i][None]), start_points(problem, x[k][None], spread[k][None]))
+            if not injective(problem, pair)[0]:
+                doubtful.append(_ends(problem, pair))
+        if not near:
             kept.append(i)
     return x[kept], spread[kept], doubtful
+
+
+def feedback_set(edges: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """(n,) a small set of nodes without which the graph has no cycle, greedily by in times out degree. edges: (n, n), [i, j] when i needs j.
+
+    Nodes with an edge to themselves are in it. (R. M. Karp 1972 for the problem, from memory; greedy, so not always the smallest.)
+    """
+    edges = edges.copy()
+    chosen = np.diag(edges).copy()
+    alive = ~chosen
+    while True:
+        live = edges & alive[:, None] & alive[None, :]
+        ins, outs = live.sum(axis=1), live.sum(axis=0)
+        trivial = alive & ((ins == 0) | (outs == 0))
+        if trivial.any():
+            alive &= ~trivial
+            continue
+        if not alive.any():
+            return chosen
+        best = int(np.argmax(np.where(alive, ins * outs, -1)))
+        chosen[best] = True
+        alive[best] = False
