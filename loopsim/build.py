@@ -1,13 +1,13 @@
 """Circuits from a program instead of text, from the same checked data.
 
-    from loopsim.build import CircuitBuilder, let, net
+from loopsim.build import CircuitBuilder, let, net
 
-    pump = CircuitBuilder("cistern")
-    pump.let("level", 4.5, unit="V", low=0.0, high=9.0)
-    pump.chain("gnd", "probe", "sense", device="voltage_source", voltage=let("level"))
-    pump.chain("sense", "r_in", "plus", device="resistor", resistance=10e3)
-    ...
-    circuit = pump.circuit()
+pump = CircuitBuilder("cistern")
+pump.let("level", 4.5, unit="V", low=0.0, high=9.0)
+pump.chain("gnd", "probe", "sense", device="voltage_source", voltage=let("level"))
+pump.chain("sense", "r_in", "plus", device="resistor", resistance=10e3)
+...
+circuit = pump.circuit()
 """
 
 from __future__ import annotations
@@ -107,12 +107,16 @@ class CircuitBuilder:
 
     def _add(self, name: str, device: str, pins: Mapping[str, str], fields: Mapping[str, Given]) -> None:
         if device not in DEVICES:
-            raise CircuitError("unknown-device", f"there is no device `{device}`", hint=f"there are {', '.join(DEVICES)}")
+            raise CircuitError(
+                "unknown-device", f"there is no device `{device}`", hint=f"there are {', '.join(DEVICES)}"
+            )
         # nets in the order of the device's pins, so that the order of a mapping does not matter
         for pin in (*DEVICES[device].pins, *pins):
             if pin in pins and pins[pin] != "gnd":
                 self._nets.setdefault(pins[pin])
-        self._parts.append(Part(name, device, dict(pins), {key: _field(value) for key, value in fields.items()}))
+        self._parts.append(
+            Part(name, device, dict(pins), {key: _field(value) for key, value in fields.items()})
+        )
 
     def circuit(self) -> Circuit:
         """What was collected so far."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -15,8 +16,16 @@ from loopsim.equations.system import System
 
 
 def solve(system: System, x: Any = None) -> np.ndarray:
-    """One operating point by Newton with halved steps, from x or zero; fails where it does not settle."""
-    x = np.zeros(system.n) if x is None else np.array(x, dtype=float)
+    """One operating point by Newton with halved steps from x; without x from zero with all sources ramped up in steps."""
+    if x is not None:
+        return _newton(system, np.array(x, dtype=float))
+    x = np.zeros(system.n)
+    for share in np.linspace(0.0, 1.0, 26):
+        x = _newton(replace(system, s=share * system.s), x)
+    return x
+
+
+def _newton(system: System, x: np.ndarray) -> np.ndarray:
     value = system.residual(x)
     for _ in range(300):
         step = np.linalg.solve(system.jacobian(x), -value)
@@ -44,7 +53,9 @@ def probed(device: str, volts: Mapping[str, float], **fields: Any) -> Circuit:
     return bench.circuit()
 
 
-def currents(device: str, volts: Mapping[str, float], ambient: float = 25.0, **fields: Any) -> dict[str, float]:
+def currents(
+    device: str, volts: Mapping[str, float], ambient: float = 25.0, **fields: Any
+) -> dict[str, float]:
     """Current into each pin of a part whose pins are held at `volts` [A]."""
     circuit = probed(device, volts, **fields)
     settings = {"ambient": ambient}

@@ -48,7 +48,13 @@ def _output(output_resistance: Scalar) -> _Output:
     driven."""
     if output_resistance is None:
         entry: Entry = ("out", "output_current", -1.0)
-        return _Output("out", "output_current", Unknown("output_current", "A"), (entry,), Branch(GROUND, "out", "voltage", True))
+        return _Output(
+            "out",
+            "output_current",
+            Unknown("output_current", "A"),
+            (entry,),
+            Branch(GROUND, "out", "voltage", True),
+        )
     g = 1.0 / output_resistance
     entries: tuple[Entry, ...] = (("out", "out", g), ("out", "stage", -g))
     return _Output("stage", "stage", Unknown("stage", "A"), entries, Branch(GROUND, "out", "conductance"))
@@ -59,8 +65,18 @@ def _clamps(at: _Output, knee: Scalar, ratio: Scalar, above: Scalar, below: Scal
     per_volt = 1.0 / knee
     weight = ratio * STAGE * knee
     return (
-        Term(Kind.SOFTPLUS, ((at.stage, per_volt), ("high", -per_volt)), ((at.row, weight),), offset=above / knee),
-        Term(Kind.SOFTPLUS, (("low", per_volt), (at.stage, -per_volt)), ((at.row, -weight),), offset=below / knee),
+        Term(
+            Kind.SOFTPLUS,
+            ((at.stage, per_volt), ("high", -per_volt)),
+            ((at.row, weight),),
+            offset=above / knee,
+        ),
+        Term(
+            Kind.SOFTPLUS,
+            (("low", per_volt), (at.stage, -per_volt)),
+            ((at.row, -weight),),
+            offset=below / knee,
+        ),
     )
 
 
@@ -103,7 +119,9 @@ class OpAmp:
     gain: Scalar = quantity("", 1e-3, 1e12, "open-loop voltage gain at DC", 1e5)
     gain_bandwidth: Scalar = quantity("Hz", 1e-3, 1e15, "gain-bandwidth product")
     slew_rate: Scalar = quantity("V/s", 1e-3, 1e15, "fastest change of the output; needs gain_bandwidth")
-    output_resistance: Scalar = quantity("ohm", 1e-9, 1e9, "from the inner stage to `out`; an ideal output without")
+    output_resistance: Scalar = quantity(
+        "ohm", 1e-9, 1e9, "from the inner stage to `out`; an ideal output without"
+    )
     headroom: Scalar = quantity("V", -10.0, 1e3, "how far the output stays from both rails", 0.0)
     headroom_high: Scalar = quantity("V", -10.0, 1e3, "how far it stays below `high`; headroom unless given")
     headroom_low: Scalar = quantity("V", -10.0, 1e3, "how far it stays above `low`; headroom unless given")
@@ -112,7 +130,9 @@ class OpAmp:
     input_resistance: Scalar = quantity("ohm", 1e-3, 1e18, "resistance between the inputs")
     input_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance between the inputs")
     knee: Scalar = quantity("V", 1e-6, 10.0, "softness of the rail clamps", 1e-3)
-    clamp_ratio: Scalar = quantity("", 1.0, 1e9, "conductance of a clamp over the transconductance of the input stage", 1000.0)
+    clamp_ratio: Scalar = quantity(
+        "", 1.0, 1e9, "conductance of a clamp over the transconductance of the input stage", 1000.0
+    )
 
     def contribution(self, ambient: Scalar) -> Contribution:
         if self.slew_rate is not None and self.gain_bandwidth is None:
@@ -129,16 +149,29 @@ class OpAmp:
         if self.gain_bandwidth is not None:
             capacitance += ((at.row, at.stage, STAGE / (2.0 * np.pi * self.gain_bandwidth)),)
         if self.slew_rate is None:
-            conductance += ((at.row, at.stage, STAGE / self.gain), (at.row, "plus", -STAGE), (at.row, "minus", STAGE))
+            conductance += (
+                (at.row, at.stage, STAGE / self.gain),
+                (at.row, "plus", -STAGE),
+                (at.row, "minus", STAGE),
+            )
             if self.input_offset is not None:
                 source += ((at.row, STAGE * self.input_offset),)
         else:
             reach = self.slew_rate / (2.0 * np.pi * self.gain_bandwidth)
-            control: tuple[Share, ...] = (("plus", 1.0 / reach), ("minus", -1.0 / reach), (at.stage, -1.0 / (self.gain * reach)))
+            control: tuple[Share, ...] = (
+                ("plus", 1.0 / reach),
+                ("minus", -1.0 / reach),
+                (at.stage, -1.0 / (self.gain * reach)),
+            )
             offset = 0.0 if self.input_offset is None else self.input_offset / reach
             terms = (Term(Kind.SATURATION, control, ((at.row, -STAGE * reach),), offset=offset), *terms)
         return Contribution(
-            (at.unknown,), conductance, capacitance, source, terms=terms, branches=(*branches, *_RAILS, at.branch)
+            (at.unknown,),
+            conductance,
+            capacitance,
+            source,
+            terms=terms,
+            branches=(*branches, *_RAILS, at.branch),
         )
 
 
@@ -157,18 +190,26 @@ class Comparator:
     pins: ClassVar[tuple[str, ...]] = ("plus", "minus", "out", "high", "low")
     polarised: ClassVar[bool] = True
 
-    gain: Scalar = quantity("", 1e-3, 1e12, "open-loop voltage gain (open collector: slope of the decision, per volt)", 1e5)
-    propagation_delay: Scalar = quantity("s", 1e-15, 1e3, "from the crossing of the inputs to the change of the output")
+    gain: Scalar = quantity(
+        "", 1e-3, 1e12, "open-loop voltage gain (open collector: slope of the decision, per volt)", 1e5
+    )
+    propagation_delay: Scalar = quantity(
+        "s", 1e-15, 1e3, "from the crossing of the inputs to the change of the output"
+    )
     output: str = word(("push_pull", "open_collector"), "what drives `out`")
     output_resistance: Scalar = quantity("ohm", 1e-9, 1e9, "of a push_pull output; an ideal output without")
-    sink_resistance: Scalar = quantity("ohm", 1e-6, 1e9, "from `out` to `low` when an open collector is on", 50.0)
+    sink_resistance: Scalar = quantity(
+        "ohm", 1e-6, 1e9, "from `out` to `low` when an open collector is on", 50.0
+    )
     input_offset: Scalar = quantity("V", -1e3, 1e3, "voltage that adds to plus - minus")
     input_bias: Scalar = quantity("A", -1.0, 1.0, "current into each input")
     input_resistance: Scalar = quantity("ohm", 1e-3, 1e18, "resistance between the inputs")
     input_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance between the inputs")
     headroom: Scalar = quantity("V", -10.0, 1e3, "how far a push_pull output stays from both rails", 0.0)
     knee: Scalar = quantity("V", 1e-6, 10.0, "softness of the rail clamps of a push_pull output", 1e-3)
-    clamp_ratio: Scalar = quantity("", 1.0, 1e9, "conductance of a clamp over the transconductance of the input stage", 1000.0)
+    clamp_ratio: Scalar = quantity(
+        "", 1.0, 1e9, "conductance of a clamp over the transconductance of the input stage", 1000.0
+    )
 
     def contribution(self, ambient: Scalar) -> Contribution:
         if self.output == "open_collector":

@@ -101,7 +101,12 @@ def branch_entries(first: Symbol, second: Symbol) -> tuple[Entry, ...]:
 
     The two are minus each other's transpose, so that a passive circuit has a positive determinant.
     """
-    return ((first, "current", 1.0), (second, "current", -1.0), ("current", first, -1.0), ("current", second, 1.0))
+    return (
+        (first, "current", 1.0),
+        (second, "current", -1.0),
+        ("current", first, -1.0),
+        ("current", second, 1.0),
+    )
 
 
 def with_current(part: Contribution) -> Contribution:
@@ -112,7 +117,9 @@ def with_current(part: Contribution) -> Contribution:
         return {"from": "current", "to": None}.get(row, row) if isinstance(row, str) else row
 
     def entries(given: tuple[Entry, ...]) -> tuple[Entry, ...]:
-        return tuple((target, column, value) for row, column, value in given if (target := moved(row)) is not None)
+        return tuple(
+            (target, column, value) for row, column, value in given if (target := moved(row)) is not None
+        )
 
     def shares(given: tuple[Share, ...]) -> tuple[Share, ...]:
         return tuple((target, value) for row, value in given if (target := moved(row)) is not None)

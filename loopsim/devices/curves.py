@@ -40,12 +40,14 @@ def points_curve(pairs: Sequence[Scalar]) -> CurveValues:
     """
     x, y = pairs[0::2], pairs[1::2]
     if len(x) < 2 or len(x) != len(y):
-        raise CircuitError("curve-points", f"a curve of points needs at least two points, this one has {len(y)}")
+        raise CircuitError(
+            "curve-points", f"a curve of points needs at least two points, this one has {len(y)}"
+        )
     if not all(everywhere(a < b) for a, b in pairwise(x)):
-        raise CircuitError("curve-points", "the points of a curve must ascend in x", hint="sort them, drop doubles")
-    slopes = [
-        (y[j + 1] - y[j]) / (x[j + 1] - x[j]) for j in range(len(x) - 1)
-    ]
+        raise CircuitError(
+            "curve-points", "the points of a curve must ascend in x", hint="sort them, drop doubles"
+        )
+    slopes = [(y[j + 1] - y[j]) / (x[j + 1] - x[j]) for j in range(len(x) - 1)]
     at_zero = y[0] - slopes[0] * x[0]
     bends: list[Scalar] = []
     for corner, before, after in zip(x[1:-1], slopes[:-1], slopes[1:], strict=True):

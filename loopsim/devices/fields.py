@@ -30,9 +30,13 @@ class FieldSpec:
     form: str = "number"
 
 
-def quantity(unit: str, low: float, high: float, text: str, default: float | None = None, form: str = "number") -> Any:
+def quantity(
+    unit: str, low: float, high: float, text: str, default: float | None = None, form: str = "number"
+) -> Any:
     """A number [unit] between low and high; without a default its effect is absent, exactly."""
-    return dataclasses.field(default=default, metadata={"unit": unit, "low": low, "high": high, "help": text, "form": form})
+    return dataclasses.field(
+        default=default, metadata={"unit": unit, "low": low, "high": high, "help": text, "form": form}
+    )
 
 
 def needed(unit: str, low: float, high: float, text: str, form: str = "number") -> Any:

@@ -84,10 +84,15 @@ def _add(a: Sum, b: Sum) -> Sum:
     return Sum(a.constant + b.constant, merged, a.terms + b.terms)
 
 
+def _product(a: Scalar, b: Scalar) -> Scalar:
+    """a * b, where a plain zero stays one: what is not there does not move with a let either."""
+    return 0.0 if isinstance(a, float) and a == 0.0 else a * b
+
+
 def _scale(a: Sum, factor: Scalar) -> Sum:
     coefficients = {key: value * factor for key, value in a.coefficients.items()}
     terms = tuple(Saturating(t.scale * factor, t.kind, t.control, t.parameters) for t in a.terms)
-    return Sum(a.constant * factor, coefficients, terms)
+    return Sum(_product(a.constant, factor), coefficients, terms)
 
 
 def _multiply(a: Sum, b: Sum) -> Sum:
@@ -105,7 +110,9 @@ def _multiply(a: Sum, b: Sum) -> Sum:
 def _divide(a: Sum, b: Sum) -> Sum:
     if not b.is_constant:
         raise CircuitError(
-            "formula-term", "division by a voltage or current is no term of a controlled source", hint="divide by a constant"
+            "formula-term",
+            "division by a voltage or current is no term of a controlled source",
+            hint="divide by a constant",
         )
     return _scale(a, 1.0 / b.constant)
 
@@ -125,9 +132,13 @@ def _atan(a: Sum) -> Sum:
 def _limit(x: Sum, low: Sum, high: Sum) -> Sum:
     """low + k (softplus((x - low) / k) - softplus((x - high) / k)), k = LIMIT_KNEE (high - low)."""
     if not (low.is_constant and high.is_constant):
-        raise CircuitError("formula-term", "the ends of `limit` must be constants", hint="give them as numbers or lets")
+        raise CircuitError(
+            "formula-term", "the ends of `limit` must be constants", hint="give them as numbers or lets"
+        )
     if not everywhere(low.constant < high.constant):
-        raise CircuitError("limit-order", "the lower end of `limit` must lie below the upper one", hint="limit(x, low, high)")
+        raise CircuitError(
+            "limit-order", "the lower end of `limit` must lie below the upper one", hint="limit(x, low, high)"
+        )
     if x.is_constant:
         return Sum(constant_limit(x.constant, low.constant, high.constant), {})
     knee = LIMIT_KNEE * (high.constant - low.constant)

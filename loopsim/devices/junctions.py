@@ -41,12 +41,20 @@ class Diode:
     saturation_current: Scalar = quantity("A", 1e-40, 1.0, "saturation current at 25 degC", 1e-14)
     ideality: Scalar = quantity("", 0.5, 10.0, "ideality factor", 1.0)
     series_resistance: Scalar = quantity("ohm", 1e-9, 1e9, "ohmic resistance in series with the junction")
-    junction_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance across the junction, taken as constant")
+    junction_capacitance: Scalar = quantity(
+        "F", 0.0, 1.0, "capacitance across the junction, taken as constant"
+    )
     transit_time: Scalar = quantity("s", 0.0, 1.0, "stored charge over forward current")
     breakdown_voltage: Scalar = quantity("V", 0.1, 1e5, "reverse voltage at which breakdown_current flows")
-    breakdown_current: Scalar = quantity("A", 1e-15, 1e3, "reverse current at the breakdown voltage; matters only with it", 1e-3)
-    bandgap_voltage: Scalar = quantity("V", 0.1, 10.0, "activation energy of the saturation current over e", 1.12)
-    saturation_exponent: Scalar = quantity("", -20.0, 20.0, "power of the absolute temperature in the saturation current", 3.0)
+    breakdown_current: Scalar = quantity(
+        "A", 1e-15, 1e3, "reverse current at the breakdown voltage; matters only with it", 1e-3
+    )
+    bandgap_voltage: Scalar = quantity(
+        "V", 0.1, 10.0, "activation energy of the saturation current over e", 1.12
+    )
+    saturation_exponent: Scalar = quantity(
+        "", -20.0, 20.0, "power of the absolute temperature in the saturation current", 3.0
+    )
 
     def contribution(self, ambient: Scalar) -> Contribution:
         scale = self.ideality * thermal_voltage(ambient)
@@ -72,7 +80,10 @@ class Diode:
             # linear
             unknowns.append(Unknown("diffusion_current", "A"))
             conductance.append(("diffusion_current", "diffusion_current", 1.0))
-            capacitance += [(anode, "diffusion_current", self.transit_time), ("to", "diffusion_current", -self.transit_time)]
+            capacitance += [
+                (anode, "diffusion_current", self.transit_time),
+                ("to", "diffusion_current", -self.transit_time),
+            ]
             outputs = (*outputs, ("diffusion_current", -saturation))
         terms = [Term(Kind.EXPONENTIAL, difference(anode, "to", 1.0 / scale), outputs)]
         source: tuple[Share, ...] = ()
@@ -80,13 +91,21 @@ class Diode:
             term, source = self._breakdown(anode, thermal_voltage(ambient))
             terms.append(term)
         return Contribution(
-            tuple(unknowns), tuple(conductance), tuple(capacitance), source, terms=tuple(terms), branches=tuple(branches)
+            tuple(unknowns),
+            tuple(conductance),
+            tuple(capacitance),
+            source,
+            terms=tuple(terms),
+            branches=tuple(branches),
         )
 
     def _breakdown(self, anode: Symbol, thermal: Scalar) -> tuple[Term, tuple[Share, ...]]:
         """The reverse branch, and the constant that makes it nil at v = 0."""
         current, reach = self.breakdown_current, self.breakdown_voltage / thermal
         term = Term(
-            Kind.EXPONENTIAL, difference("to", anode, 1.0 / thermal), through("to", anode, current), offset=-reach
+            Kind.EXPONENTIAL,
+            difference("to", anode, 1.0 / thermal),
+            through("to", anode, current),
+            offset=-reach,
         )
         return term, through("to", anode, current * np.expm1(-reach))

@@ -61,7 +61,9 @@ class Switch:
         offset: Scalar = 0.0
         if self.control is not None:
             if self.close_time is not None or self.open_time is not None:
-                raise CircuitError("field-clash", "a switch has a control net or times, not both", hint="drop one of them")
+                raise CircuitError(
+                    "field-clash", "a switch has a control net or times, not both", hint="drop one of them"
+                )
             net: Symbol = ("net", self.control)
             control, offset = ((net, 1.0 / self.width),), -self.threshold / self.width
             branches = (*branches, Branch(net, GROUND, "sense"))
@@ -71,9 +73,16 @@ class Switch:
             control = (("control", 1.0),)
             supply, timed = self._times()
         term = Term(
-            Kind.SATURATION, control, through("from", "to", half), offset, difference("from", "to"), factor_offset=0.0
+            Kind.SATURATION,
+            control,
+            through("from", "to", half),
+            offset,
+            difference("from", "to"),
+            factor_offset=0.0,
         )
-        return Contribution(unknowns, conductance, source=supply, terms=(term,), timed=timed, branches=branches)
+        return Contribution(
+            unknowns, conductance, source=supply, terms=(term,), timed=timed, branches=branches
+        )
 
     def _times(self) -> tuple[tuple[Share, ...], tuple[Timed, ...]]:
         """The control's value at time 0 and its changes: -FULL open, +FULL closed."""

@@ -31,14 +31,17 @@ class Resistor:
     polarised: ClassVar[bool] = False
 
     resistance: Scalar = needed("ohm", 1e-9, 1e18, "resistance at 25 degC")
-    temperature_coefficient: Scalar = quantity("1/K", -0.1, 0.1, "relative change of the resistance per kelvin")
+    temperature_coefficient: Scalar = quantity(
+        "1/K", -0.1, 0.1, "relative change of the resistance per kelvin"
+    )
 
     def contribution(self, ambient: Scalar) -> Contribution:
         resistance = self.resistance
         if self.temperature_coefficient is not None:
             resistance = resistance * (1.0 + self.temperature_coefficient * (ambient - REFERENCE))
         return Contribution(
-            conductance=across("from", "to", 1.0 / resistance), branches=(Branch("from", "to", "conductance"),)
+            conductance=across("from", "to", 1.0 / resistance),
+            branches=(Branch("from", "to", "conductance"),),
         )
 
 
@@ -53,7 +56,8 @@ class Conductance:
 
     def contribution(self, ambient: Scalar) -> Contribution:
         return Contribution(
-            conductance=across("from", "to", self.conductance), branches=(Branch("from", "to", "conductance"),)
+            conductance=across("from", "to", self.conductance),
+            branches=(Branch("from", "to", "conductance"),),
         )
 
 
@@ -68,7 +72,8 @@ class Capacitor:
 
     def contribution(self, ambient: Scalar) -> Contribution:
         return Contribution(
-            capacitance=across("from", "to", self.capacitance), branches=(Branch("from", "to", "capacitance"),)
+            capacitance=across("from", "to", self.capacitance),
+            branches=(Branch("from", "to", "capacitance"),),
         )
 
 

@@ -63,7 +63,9 @@ class CurrentSource:
     pins: ClassVar[tuple[str, ...]] = TWO
     polarised: ClassVar[bool] = True
 
-    current: Value = needed("A", -LARGEST, LARGEST, "current through the source along its arrow", form="source")
+    current: Value = needed(
+        "A", -LARGEST, LARGEST, "current through the source along its arrow", form="source"
+    )
 
     def contribution(self, ambient: Scalar) -> Contribution:
         supply, timed = _put_in(self.current, through("from", "to", -1.0))
@@ -79,7 +81,8 @@ def _enter(formula: Sum, rows: tuple[Share, ...]) -> Contribution:
     unknowns: list[Unknown] = []
 
     def enter(total: Sum, targets: tuple[Share, ...]) -> None:
-        source.extend((row, -(weight * total.constant)) for row, weight in targets)
+        if not (isinstance(total.constant, float) and total.constant == 0.0):
+            source.extend((row, -(weight * total.constant)) for row, weight in targets)
         for column, coefficient in total.coefficients.items():
             conductance.extend((row, column, weight * coefficient) for row, weight in targets)
         for term in total.terms:
@@ -92,7 +95,9 @@ def _enter(formula: Sum, rows: tuple[Share, ...]) -> Contribution:
                 enter(inner, ((name, -1.0),))
                 control.append((name, 1.0))
             outputs = tuple((row, weight * term.scale) for row, weight in targets)
-            terms.append(Term(term.kind, tuple(control), outputs, term.control.constant, parameters=term.parameters))
+            terms.append(
+                Term(term.kind, tuple(control), outputs, term.control.constant, parameters=term.parameters)
+            )
 
     enter(formula, rows)
     return Contribution(

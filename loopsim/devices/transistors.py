@@ -28,14 +28,24 @@ class BipolarNpn:
 
     saturation_current: Scalar = quantity("A", 1e-40, 1.0, "transport saturation current at 25 degC", 1e-14)
     forward_gain: Scalar = quantity("", 1e-3, 1e9, "collector over base current, forward", 100.0)
-    reverse_gain: Scalar = quantity("", 1e-6, 1e9, "emitter over base current with collector and emitter exchanged", 1.0)
+    reverse_gain: Scalar = quantity(
+        "", 1e-6, 1e9, "emitter over base current with collector and emitter exchanged", 1.0
+    )
     ideality: Scalar = quantity("", 0.5, 10.0, "ideality factor of both junctions", 1.0)
     early_voltage: Scalar = quantity("V", 0.1, 1e9, "Early voltage")
-    base_emitter_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance between base and emitter, taken as constant")
-    base_collector_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance between base and collector, taken as constant")
+    base_emitter_capacitance: Scalar = quantity(
+        "F", 0.0, 1.0, "capacitance between base and emitter, taken as constant"
+    )
+    base_collector_capacitance: Scalar = quantity(
+        "F", 0.0, 1.0, "capacitance between base and collector, taken as constant"
+    )
     transit_time: Scalar = quantity("s", 0.0, 1.0, "charge stored in the base over forward transport current")
-    bandgap_voltage: Scalar = quantity("V", 0.1, 10.0, "activation energy of the saturation current over e", 1.12)
-    saturation_exponent: Scalar = quantity("", -20.0, 20.0, "power of the absolute temperature in the saturation current", 3.0)
+    bandgap_voltage: Scalar = quantity(
+        "V", 0.1, 10.0, "activation energy of the saturation current over e", 1.12
+    )
+    saturation_exponent: Scalar = quantity(
+        "", -20.0, 20.0, "power of the absolute temperature in the saturation current", 3.0
+    )
 
     def contribution(self, ambient: Scalar) -> Contribution:
         p = self.polarity
@@ -68,20 +78,46 @@ class BipolarNpn:
                 Term(
                     Kind.EXPONENTIAL,
                     forward,
-                    (("collector", transport), ("base", base_forward), ("emitter", -transport - base_forward), *diffusion),
+                    (
+                        ("collector", transport),
+                        ("base", base_forward),
+                        ("emitter", -transport - base_forward),
+                        *diffusion,
+                    ),
                 ),
                 Term(
                     Kind.EXPONENTIAL,
                     reverse,
-                    (("collector", -transport - base_reverse), ("base", base_reverse), ("emitter", transport)),
+                    (
+                        ("collector", -transport - base_reverse),
+                        ("base", base_reverse),
+                        ("emitter", transport),
+                    ),
                 ),
             )
         else:
-            rise: tuple[Share, ...] = (("base", -p / self.early_voltage), ("collector", p / self.early_voltage))
+            rise: tuple[Share, ...] = (
+                ("base", -p / self.early_voltage),
+                ("collector", p / self.early_voltage),
+            )
             terms = (
-                Term(Kind.EXPONENTIAL, forward, (("collector", transport), ("emitter", -transport)), factor=rise),
-                Term(Kind.EXPONENTIAL, reverse, (("collector", -transport), ("emitter", transport)), factor=rise),
-                Term(Kind.EXPONENTIAL, forward, (("base", base_forward), ("emitter", -base_forward), *diffusion)),
+                Term(
+                    Kind.EXPONENTIAL,
+                    forward,
+                    (("collector", transport), ("emitter", -transport)),
+                    factor=rise,
+                ),
+                Term(
+                    Kind.EXPONENTIAL,
+                    reverse,
+                    (("collector", -transport), ("emitter", transport)),
+                    factor=rise,
+                ),
+                Term(
+                    Kind.EXPONENTIAL,
+                    forward,
+                    (("base", base_forward), ("emitter", -base_forward), *diffusion),
+                ),
                 Term(Kind.EXPONENTIAL, reverse, (("base", base_reverse), ("collector", -base_reverse))),
             )
         branches = (
@@ -115,14 +151,28 @@ class MosfetN:
     polarised: ClassVar[bool] = True
     polarity: ClassVar[float] = 1.0
 
-    threshold: Scalar = quantity("V", -100.0, 100.0, "gate voltage at which the channel forms; positive if off at 0 V", 0.7)
-    transconductance: Scalar = quantity("A/V^2", 1e-15, 1e6, "mobility, oxide capacitance, width over length multiplied", 1e-3)
+    threshold: Scalar = quantity(
+        "V", -100.0, 100.0, "gate voltage at which the channel forms; positive if off at 0 V", 0.7
+    )
+    transconductance: Scalar = quantity(
+        "A/V^2", 1e-15, 1e6, "mobility, oxide capacitance, width over length multiplied", 1e-3
+    )
     slope_factor: Scalar = quantity("", 1.0, 10.0, "gate voltage over channel voltage in weak inversion", 1.3)
-    channel_modulation: Scalar = quantity("1/V", 0.0, 10.0, "relative rise of the current per volt of drain voltage")
-    gate_source_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance between gate and source, taken as constant")
-    gate_drain_capacitance: Scalar = quantity("F", 0.0, 1.0, "capacitance between gate and drain, taken as constant")
-    threshold_drift: Scalar = quantity("V/K", -0.1, 0.1, "change of the threshold per kelvin, mostly negative")
-    mobility_exponent: Scalar = quantity("", -10.0, 10.0, "transconductance falls with this power of the absolute temperature")
+    channel_modulation: Scalar = quantity(
+        "1/V", 0.0, 10.0, "relative rise of the current per volt of drain voltage"
+    )
+    gate_source_capacitance: Scalar = quantity(
+        "F", 0.0, 1.0, "capacitance between gate and source, taken as constant"
+    )
+    gate_drain_capacitance: Scalar = quantity(
+        "F", 0.0, 1.0, "capacitance between gate and drain, taken as constant"
+    )
+    threshold_drift: Scalar = quantity(
+        "V/K", -0.1, 0.1, "change of the threshold per kelvin, mostly negative"
+    )
+    mobility_exponent: Scalar = quantity(
+        "", -10.0, 10.0, "transconductance falls with this power of the absolute temperature"
+    )
 
     def contribution(self, ambient: Scalar) -> Contribution:
         p, n = self.polarity, self.slope_factor
@@ -158,16 +208,19 @@ class MosfetN:
             ),
         )
         capacitance: tuple[Entry, ...] = ()
+        coupled: tuple[Branch, ...] = ()
         if self.gate_source_capacitance is not None:
             capacitance += across("gate", "source", self.gate_source_capacitance)
+            coupled += (Branch("gate", "source", "capacitance"),)
         if self.gate_drain_capacitance is not None:
             capacitance += across("gate", "drain", self.gate_drain_capacitance)
+            coupled += (Branch("gate", "drain", "capacitance"),)
         branches = (
             Branch("drain", "source", "conductance"),
             Branch("gate", "source", "sense"),
             Branch("body", "source", "sense"),
         )
-        return Contribution(capacitance=capacitance, terms=terms, branches=branches)
+        return Contribution(capacitance=capacitance, terms=terms, branches=branches + coupled)
 
 
 @dataclass(frozen=True)

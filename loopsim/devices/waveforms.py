@@ -59,16 +59,24 @@ class Square:
     high: Scalar = needed("signal", -LARGEST, LARGEST, "upper value")
     period: Scalar = needed("s", SHORTEST, LONGEST, "from one rise to the next")
     low: Scalar = quantity("signal", -LARGEST, LARGEST, "lower value", 0.0)
-    width: Scalar = quantity("s", 0.0, LONGEST, "time at the upper value; unless given, rise and fall lie half a period apart")
-    rise: Scalar = quantity("s", SHORTEST, LONGEST, "duration of the rise; a thousandth of the period unless given")
-    fall: Scalar = quantity("s", SHORTEST, LONGEST, "duration of the fall; a thousandth of the period unless given")
+    width: Scalar = quantity(
+        "s", 0.0, LONGEST, "time at the upper value; unless given, rise and fall lie half a period apart"
+    )
+    rise: Scalar = quantity(
+        "s", SHORTEST, LONGEST, "duration of the rise; a thousandth of the period unless given"
+    )
+    fall: Scalar = quantity(
+        "s", SHORTEST, LONGEST, "duration of the fall; a thousandth of the period unless given"
+    )
     delay: Scalar = quantity("s", 0.0, LONGEST, "when the first rise begins", 0.0)
 
     def __post_init__(self) -> None:
         rise, width, fall = self.shape
         if not everywhere(rise + width + fall <= self.period * (1.0 + 1e-12)) or not everywhere(width >= 0.0):
             raise CircuitError(
-                "waveform-times", "rise, width and fall of a square wave take longer than its period", hint="lengthen the period"
+                "waveform-times",
+                "rise, width and fall of a square wave take longer than its period",
+                hint="lengthen the period",
             )
 
     @property
@@ -94,10 +102,15 @@ class Square:
         count = float(np.max(np.maximum((end - self.delay) / self.period - first, -1.0))) + 2.0
         if 4.0 * count > MAX_CORNERS:
             raise CircuitError(
-                "waveform-times", f"a square wave makes {4.0 * count:.0f} corners within this time", hint="shorten the run"
+                "waveform-times",
+                f"a square wave makes {4.0 * count:.0f} corners within this time",
+                hint="shorten the run",
             )
         cycles = np.arange(max(0, int(count)))
-        starts = np.asarray(self.delay + first * self.period)[..., None] + cycles * np.asarray(self.period)[..., None]
+        starts = (
+            np.asarray(self.delay + first * self.period)[..., None]
+            + cycles * np.asarray(self.period)[..., None]
+        )
         return _times([starts + np.asarray(offset)[..., None] for offset in offsets], start, end)
 
 
@@ -128,9 +141,15 @@ class Points:
 
     def __post_init__(self) -> None:
         if not self.times or len(self.times) != len(self.values):
-            raise CircuitError("waveform-times", "a waveform of points needs a time and a value for each point")
+            raise CircuitError(
+                "waveform-times", "a waveform of points needs a time and a value for each point"
+            )
         if not all(everywhere(a < b) for a, b in pairwise(self.times)):
-            raise CircuitError("waveform-times", "the points of a waveform must ascend in time", hint="a jump needs a short ramp")
+            raise CircuitError(
+                "waveform-times",
+                "the points of a waveform must ascend in time",
+                hint="a jump needs a short ramp",
+            )
 
     def value(self, t: float) -> Scalar:
         total = self.values[0]

@@ -47,7 +47,10 @@ def is_affine(circuit: Circuit, let: str) -> bool:
     """Whether the let moves nothing but s (and supply), and those in a straight line: then s(let) follows from its values at
     two lets."""
     traced = _known(circuit, let).traced
-    return all(let not in roots or (name in ("s", "supply") and roots[let] == AFFINE) for name, roots in traced.items())
+    return all(
+        let not in roots or (name in ("s", "supply") and roots[let] == AFFINE)
+        for name, roots in traced.items()
+    )
 
 
 def _known(circuit: Circuit, let: str) -> Plan:
@@ -91,7 +94,9 @@ def _outputs(entry: PartPlan, contribution: Contribution, laid_out: Plan, x: Arr
     return found
 
 
-def _into(pin: str, entry: PartPlan, given: Contribution, laid_out: Plan, x: Array, psi: list[Scalar]) -> Scalar:
+def _into(
+    pin: str, entry: PartPlan, given: Contribution, laid_out: Plan, x: Array, psi: list[Scalar]
+) -> Scalar:
     """What the part takes out of the balance at one of its pins."""
     total: Scalar = 0.0
     for row, column, value in given.conductance:
@@ -105,5 +110,3 @@ def _into(pin: str, entry: PartPlan, given: Contribution, laid_out: Plan, x: Arr
             if row == pin:
                 total = total + weight * output
     return total
-
-

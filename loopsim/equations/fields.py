@@ -67,7 +67,9 @@ def field_value(
     return in_range(number(value, values, curves, what, part.span), spec, what, part.span)
 
 
-def _waveform(part: Part, spec: FieldSpec, value: Waveform, values: Mapping[str, Scalar], curves: Mapping[str, Curve]) -> Any:
+def _waveform(
+    part: Part, spec: FieldSpec, value: Waveform, values: Mapping[str, Scalar], curves: Mapping[str, Curve]
+) -> Any:
     if value.form not in WAVEFORMS:
         hint = f"there are {', '.join(WAVEFORMS)}"
         raise CircuitError("unknown-waveform", f"there is no waveform `{value.form}`", part.span, hint)
@@ -76,13 +78,20 @@ def _waveform(part: Part, spec: FieldSpec, value: Waveform, values: Mapping[str,
     for name, tree in value.fields.items():
         what = f"`{part.name}`: {value.form} `{name}`"
         if name not in specs:
-            raise CircuitError("unknown-field", f"{what} is no field of it", part.span, f"its fields are {', '.join(specs)}")
+            raise CircuitError(
+                "unknown-field", f"{what} is no field of it", part.span, f"its fields are {', '.join(specs)}"
+            )
         given[name] = in_range(number(tree, values, curves, what, part.span), specs[name], what, part.span)
     for name, entry in specs.items():
         if entry.required and name not in given:
-            raise CircuitError("field-missing", f"`{part.name}`: {value.form} needs `{name}`", part.span, entry.help)
+            raise CircuitError(
+                "field-missing", f"`{part.name}`: {value.form} needs `{name}`", part.span, entry.help
+            )
     what = f"a point of `{part.name}`"
-    points = [(number(t, values, curves, what, part.span), number(v, values, curves, what, part.span)) for t, v in value.points]
+    points = [
+        (number(t, values, curves, what, part.span), number(v, values, curves, what, part.span))
+        for t, v in value.points
+    ]
     return waveform(value.form, given, points)
 
 

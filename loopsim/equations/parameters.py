@@ -46,7 +46,11 @@ def names_in(tree: Expression, curves: Mapping[str, Curve]) -> frozenset[str]:
 
 def names_in_curve(curve: Curve, curves: Mapping[str, Curve]) -> frozenset[str]:
     """Every let that the numbers of a curve read."""
-    return frozenset().union(*(names_in(value, curves) for value in curve.values)) if curve.values else frozenset()
+    return (
+        frozenset().union(*(names_in(value, curves) for value in curve.values))
+        if curve.values
+        else frozenset()
+    )
 
 
 def _curves_in(tree: Expression) -> frozenset[str]:
@@ -106,7 +110,9 @@ def evaluated(
     """`known` with the parameters `names` (in order) worked out anew, or taken from `settings` where they are set."""
     values = dict(known)
     for name in names:
-        values[name] = settings[name] if name in settings else formula_value(plan.formulas[name], values, plan.curves)
+        values[name] = (
+            settings[name] if name in settings else formula_value(plan.formulas[name], values, plan.curves)
+        )
     _check_ambient(values[AMBIENT], plan.formulas[AMBIENT].span)
     return values
 
@@ -130,7 +136,9 @@ def number(
     except (ZeroDivisionError, OverflowError, ValueError):
         value = math.nan
     except KeyError as missing:
-        raise CircuitError("formula-value", f"{what} reads {missing}, which has no value here", span) from None
+        raise CircuitError(
+            "formula-value", f"{what} reads {missing}, which has no value here", span
+        ) from None
     if not is_finite(value):
         hint = "a division by zero, or a root of a negative number?"
         raise CircuitError("formula-value", f"{what} has no finite value", span, hint)
@@ -160,7 +168,9 @@ def curve_values(curve: Curve, values: Mapping[str, Scalar], curves: Mapping[str
     try:
         return polynomial_curve(numbers) if curve.form == "polynomial" else points_curve(numbers)
     except CircuitError as fault:
-        raise CircuitError(fault.code, f"curve `{curve.name}`: {fault.message}", curve.span, fault.hint) from None
+        raise CircuitError(
+            fault.code, f"curve `{curve.name}`: {fault.message}", curve.span, fault.hint
+        ) from None
 
 
 def checked_settings(plan: ParameterPlan, settings: Mapping[str, Any]) -> dict[str, Scalar]:
@@ -190,5 +200,8 @@ def checked_settings(plan: ParameterPlan, settings: Mapping[str, Any]) -> dict[s
 def _check_ambient(value: Scalar, span: Span | None) -> None:
     if not everywhere((value >= AMBIENT_LOW) & (value <= AMBIENT_HIGH)):
         raise CircuitError(
-            "field-range", f"`ambient` must lie within {AMBIENT_LOW:g} degC .. {AMBIENT_HIGH:g} degC", span, "it is in degC"
+            "field-range",
+            f"`ambient` must lie within {AMBIENT_LOW:g} degC .. {AMBIENT_HIGH:g} degC",
+            span,
+            "it is in degC",
         )

@@ -25,7 +25,6 @@ Key: TypeAlias = tuple[str, str]
 _COEFFICIENT = FieldSpec("coefficient", "", None, -1.0, 1.0, (), "coupling coefficient")
 
 
-
 @dataclass(frozen=True, eq=False)
 class PartPlan:
     """part; device: its class; specs: of its fields; roots: every parameter that moves it; split: its current was made an
@@ -56,21 +55,29 @@ def part_plan(part: Part, circuit: Circuit, nets: frozenset[str], parameters: Pa
     device, specs = DEVICES[part.device], field_specs(part.device)
     for pin in device.pins:
         if pin not in part.pins:
-            raise CircuitError("pin-missing", f"`{part.name}`: pin `{pin}` of {part.device} is not connected", part.span)
+            raise CircuitError(
+                "pin-missing", f"`{part.name}`: pin `{pin}` of {part.device} is not connected", part.span
+            )
         if part.pins[pin] not in nets:
             raise CircuitError("unknown-net", f"`{part.name}`: there is no net `{part.pins[pin]}`", part.span)
     for pin in part.pins:
         if pin not in device.pins:
             hint = f"its pins are {', '.join(device.pins)}"
-            raise CircuitError("unknown-pin", f"`{part.name}`: {part.device} has no pin `{pin}`", part.span, hint)
+            raise CircuitError(
+                "unknown-pin", f"`{part.name}`: {part.device} has no pin `{pin}`", part.span, hint
+            )
     for name in part.fields:
         if name not in specs:
             near = difflib.get_close_matches(name, specs, 1)
             hint = f"did you mean `{near[0]}`?" if near else f"its fields are {', '.join(specs)}"
-            raise CircuitError("unknown-field", f"`{part.name}`: {part.device} has no field `{name}`", part.span, hint)
+            raise CircuitError(
+                "unknown-field", f"`{part.name}`: {part.device} has no field `{name}`", part.span, hint
+            )
     for name, spec in specs.items():
         if spec.required and name not in part.fields:
-            raise CircuitError("field-missing", f"`{part.name}`: {part.device} needs `{name}`", part.span, spec.help)
+            raise CircuitError(
+                "field-missing", f"`{part.name}`: {part.device} needs `{name}`", part.span, spec.help
+            )
     roots: set[str] = set()
     for value in part.fields.values():
         for name in names_in_field(value, circuit.curves):
@@ -84,7 +91,9 @@ def check_names(circuit: Circuit) -> None:
     """Nets, parts and curves that formulas name must be there."""
     nets, names = {"gnd", *circuit.nets}, {part.name for part in circuit.parts}
     if len(names) != len(circuit.parts):
-        double = sorted(part.name for part in circuit.parts if sum(other.name == part.name for other in circuit.parts) > 1)
+        double = sorted(
+            part.name for part in circuit.parts if sum(other.name == part.name for other in circuit.parts) > 1
+        )
         raise CircuitError("duplicate-part", f"two parts are called `{double[0]}`", circuit.parts[-1].span)
     for part in circuit.parts:
         for field_name, value in part.fields.items():
@@ -93,12 +102,18 @@ def check_names(circuit: Circuit) -> None:
             for tree in trees(value):
                 for reference in references(tree):
                     if isinstance(reference, NetRef) and reference.name not in nets:
-                        raise CircuitError("unknown-net", f"`{part.name}`: there is no net `{reference.name}`", part.span)
+                        raise CircuitError(
+                            "unknown-net", f"`{part.name}`: there is no net `{reference.name}`", part.span
+                        )
                     if isinstance(reference, CurrentRef) and reference.part not in names:
-                        raise CircuitError("unknown-part", f"`{part.name}`: there is no part `{reference.part}`", part.span)
+                        raise CircuitError(
+                            "unknown-part", f"`{part.name}`: there is no part `{reference.part}`", part.span
+                        )
                 for name in curve_names(tree):
                     if name not in circuit.curves:
-                        raise CircuitError("unknown-curve", f"`{part.name}`: there is no curve `{name}`", part.span)
+                        raise CircuitError(
+                            "unknown-curve", f"`{part.name}`: there is no curve `{name}`", part.span
+                        )
 
 
 def currents_read(contributions: Sequence[Contribution]) -> set[str]:
@@ -142,14 +157,18 @@ def device_of(entry: PartPlan, values: Mapping[str, Scalar], curves: Mapping[str
     return entry.device(**given)
 
 
-def part_contribution(entry: PartPlan, values: Mapping[str, Scalar], curves: Mapping[str, Curve]) -> Contribution:
+def part_contribution(
+    entry: PartPlan, values: Mapping[str, Scalar], curves: Mapping[str, Curve]
+) -> Contribution:
     """What a part adds to the equations at some values; mistakes get its name and place."""
     try:
         contribution = device_of(entry, values, curves).contribution(values[AMBIENT])
     except CircuitError as fault:
         if fault.span is not None or fault.code == "field-range":
             raise
-        raise CircuitError(fault.code, f"`{entry.part.name}`: {fault.message}", entry.part.span, fault.hint) from None
+        raise CircuitError(
+            fault.code, f"`{entry.part.name}`: {fault.message}", entry.part.span, fault.hint
+        ) from None
     return with_current(contribution) if entry.split else contribution
 
 
@@ -171,7 +190,9 @@ def coupling_plan(coupling: Coupling, circuit: Circuit, parameters: ParameterPla
             raise CircuitError("unknown-inductor", f"`{name}` is no inductor of this circuit", coupling.span)
         found.append(position)
     if found[0] == found[1]:
-        raise CircuitError("unknown-inductor", f"`{coupling.first}` cannot be coupled to itself", coupling.span)
+        raise CircuitError(
+            "unknown-inductor", f"`{coupling.first}` cannot be coupled to itself", coupling.span
+        )
     names = names_in(coupling.coefficient, circuit.curves)
     for position in found:
         names |= names_in(_inductance(circuit.parts[position]), circuit.curves)
@@ -192,7 +213,9 @@ def coupling_slots(entry: CouplingPlan, values: Mapping[str, Scalar], curves: Ma
     """M = k sqrt(L1 L2), which each branch law takes from the other current."""
     coupling = entry.coupling
     what = f"the coupling of `{coupling.first}` and `{coupling.second}`"
-    k = in_range(number(coupling.coefficient, values, curves, what, coupling.span), _COEFFICIENT, what, coupling.span)
+    k = in_range(
+        number(coupling.coefficient, values, curves, what, coupling.span), _COEFFICIENT, what, coupling.span
+    )
     product = 1.0
     for part in entry.inductors:
         product = product * number(_inductance(part), values, curves, f"`{part.name}`", part.span)

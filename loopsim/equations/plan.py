@@ -51,7 +51,6 @@ from loopsim.equations.traced import AFFINE, OTHER, Traced, degrees_of
 _CACHE = "_equations_plan"  # attribute of a Circuit in which its plan is kept
 
 
-
 @dataclass(frozen=True, eq=False)
 class Batched:
     """A waveform whose numbers are arrays (batch,), with the values as columns (batch, 1) so that they meet a row of unknowns."""
@@ -96,7 +95,8 @@ class Plan:
     def vectors(self) -> dict[str, Array]:
         """The nominal slots of each array."""
         return {
-            name: np.array([value for block in self.nominal_blocks for value in block[name]], dtype=float) for name in ARRAYS
+            name: np.array([value for block in self.nominal_blocks for value in block[name]], dtype=float)
+            for name in ARRAYS
         }
 
     @cached_property
@@ -124,7 +124,8 @@ class Plan:
     def changed(self, settings: Mapping[str, Any]) -> tuple[dict[str, Array], dict[int, tuple[Timed, ...]]]:
         """Slots of every array that settings move, (slots,) or (batch, slots), and the waveforms of parts that they move."""
         given = checked_settings(self.parameters, settings)
-        if not given:
+        nominal = self.parameters.nominal
+        if all(isinstance(value, float) and value == nominal[name] for name, value in given.items()):
             return {}, {}
         names, positions = self._affected(given)
         values = evaluated(self.parameters, names, self.parameters.nominal, given)
@@ -158,7 +159,8 @@ class Plan:
         if not vectors and not waves:
             return base
         arrays = {
-            name: self.layouts[name].gather(vectors[name]) if name in vectors else getattr(base, name) for name in ARRAYS
+            name: self.layouts[name].gather(vectors[name]) if name in vectors else getattr(base, name)
+            for name in ARRAYS
         }
         timed = base.timed
         if waves:
@@ -175,7 +177,12 @@ class Plan:
 
     def _system(self, arrays: Mapping[str, Array], timed: tuple[TimedSource, ...]) -> System:
         return System(
-            unknowns=self.unknowns, kinds=self.kinds, owners=self.owners, timed=timed, row_units=self.row_units, **arrays
+            unknowns=self.unknowns,
+            kinds=self.kinds,
+            owners=self.owners,
+            timed=timed,
+            row_units=self.row_units,
+            **arrays,
         )
 
     def _timed_sources(self, waves: Iterable[tuple[Timed, ...]]) -> tuple[TimedSource, ...]:
@@ -188,7 +195,9 @@ class Plan:
                     if position is not None:
                         column[position] += weight
                 batched = isinstance(entry.waveform.value(0.0), np.ndarray)
-                found.append(TimedSource(read_only(column), Batched(entry.waveform) if batched else entry.waveform))
+                found.append(
+                    TimedSource(read_only(column), Batched(entry.waveform) if batched else entry.waveform)
+                )
         return tuple(found)
 
     @cached_property
@@ -197,7 +206,9 @@ class Plan:
         values: dict[str, Scalar] = {}
         for name in self.parameters.order:
             formula = self.parameters.formulas[name]
-            values[name] = number(formula.value, values, self.parameters.curves, name, formula.span) + Traced({name: AFFINE})
+            values[name] = number(formula.value, values, self.parameters.curves, name, formula.span) + Traced(
+                {name: AFFINE}
+            )
         found: dict[str, dict[str, int]] = {name: {} for name in (*ARRAYS, "timed")}
         for j in range(len(self.parts) + len(self.couplings)):
             block, waves = self.block(j, values)
@@ -219,7 +230,9 @@ def plan(circuit: Circuit) -> Plan:
     kept = vars(circuit).get(_CACHE)
     if kept is None:
         kept = make_plan(circuit)
-        vars(circuit)[_CACHE] = kept  # a frozen dataclass forbids setattr; the plan is no part of what the circuit is
+        vars(circuit)[_CACHE] = (
+            kept  # a frozen dataclass forbids setattr; the plan is no part of what the circuit is
+        )
     assert isinstance(kept, Plan)
     return kept
 
@@ -249,7 +262,9 @@ def make_plan(circuit: Circuit) -> Plan:
         units += [unknown.row_unit for unknown in contribution.unknowns]
     index = {unknown: i for i, unknown in enumerate(unknowns)}
     n, m = len(unknowns), row
-    width = max((len(term.parameters) for contribution in contributions for term in contribution.terms), default=0)
+    width = max(
+        (len(term.parameters) for contribution in contributions for term in contribution.terms), default=0
+    )
 
     def places(entry: PartPlan, contribution: Contribution) -> dict[str, list[int]]:
         def at(symbol: Symbol) -> int:
@@ -270,7 +285,9 @@ def make_plan(circuit: Circuit) -> Plan:
         unknowns=tuple(unknowns),
         index=index,
         row_units=tuple(units),
-        kinds=np.array([int(term.kind) for contribution in contributions for term in contribution.terms], dtype=np.int64),
+        kinds=np.array(
+            [int(term.kind) for contribution in contributions for term in contribution.terms], dtype=np.int64
+        ),
         owners=tuple(entry.part.name for entry, contribution in pairs for _ in contribution.terms),
         layouts={name: layout_of(shapes[name], [place[name] for place in found]) for name in ARRAYS},
         nominal_blocks=(

@@ -22,7 +22,6 @@ Values: TypeAlias = dict[str, list[Scalar]]
 ARRAYS = ("C", "G", "B", "W", "c", "V", "d", "s", "supply", "parameters")
 
 
-
 @dataclass(frozen=True, eq=False)
 class Layout:
     """Where the slots of one array stand. positions: (slots,) flat, -1 for gnd; order, starts, targets: how they are summed;
@@ -106,7 +105,9 @@ def same(new: list[Scalar], old: list[Scalar]) -> bool:
 
 def filled(nominal: Array, entries: Sequence[tuple[int, int, list[Scalar]]]) -> Array:
     """The nominal slots with some stretches replaced; (batch, slots) where any new value is an array."""
-    length = next((len(v) for _, _, block in entries for v in block if isinstance(v, np.ndarray) and v.ndim), None)
+    length = next(
+        (len(v) for _, _, block in entries for v in block if isinstance(v, np.ndarray) and v.ndim), None
+    )
     if length is None:
         vector = nominal.copy()
         for start, stop, block in entries:

@@ -141,10 +141,14 @@ def _pattern(system: SparseSystem) -> Pattern:
     cells, places = np.unique(flat, return_inverse=True)
     counts = np.bincount(cells // max(system.n, 1), minlength=system.n)
     indptr = np.concatenate([[0], np.cumsum(counts)])
-    return Pattern(cells % max(system.n, 1), indptr, places.ravel(), np.concatenate(products), np.concatenate(which))
+    return Pattern(
+        cells % max(system.n, 1), indptr, places.ravel(), np.concatenate(products), np.concatenate(which)
+    )
 
 
-def _pairs(B: scipy.sparse.csc_array, right: scipy.sparse.csr_array) -> tuple[Index, Index, Array, Array, Index]:
+def _pairs(
+    B: scipy.sparse.csc_array, right: scipy.sparse.csr_array
+) -> tuple[Index, Index, Array, Array, Index]:
     """Every (i, j) with B[i, k] and right[k, j] present: i, j, the two numbers, and k."""
     left, other = np.diff(B.indptr).astype(np.int64), np.diff(right.indptr).astype(np.int64)
     count = left * other

@@ -93,7 +93,9 @@ def check(circuit: Circuit) -> None:
     for finding in findings(circuit):
         if finding.fatal:
             part = next((part for part in circuit.parts if part.name in finding.parts), None)
-            raise CircuitError(finding.code, finding.message, part.span if part else None, _HINTS.get(finding.code, ""))
+            raise CircuitError(
+                finding.code, finding.message, part.span if part else None, _HINTS.get(finding.code, "")
+            )
 
 
 _HINTS = {
@@ -108,7 +110,9 @@ def _graph(circuit: Circuit) -> _Graph:
     laid_out = plan(circuit)
     edges: list[_Edge] = []
     for entry in laid_out.parts:
-        branches: Sequence[Branch] = part_contribution(entry, laid_out.parameters.nominal, circuit.curves).branches
+        branches: Sequence[Branch] = part_contribution(
+            entry, laid_out.parameters.nominal, circuit.curves
+        ).branches
         for branch in branches:
             ends = resolve(entry.part, branch.first), resolve(entry.part, branch.second)
             edges.append(_Edge(entry.part.name, *ends, branch.way, branch.controlled))
@@ -138,7 +142,9 @@ def _floating(graph: _Graph) -> list[Finding]:
     """
     joined: nx.Graph[Key] = nx.Graph()
     joined.add_nodes_from(graph.nodes)
-    joined.add_edges_from((edge.first, edge.second) for edge in graph.edges if edge.way in ("conductance", "voltage"))
+    joined.add_edges_from(
+        (edge.first, edge.second) for edge in graph.edges if edge.way in ("conductance", "voltage")
+    )
     found = []
     for group in nx.connected_components(joined):
         if GROUND in group:
@@ -150,7 +156,9 @@ def _floating(graph: _Graph) -> list[Finding]:
         nets = tuple(name for name in graph.circuit.nets if ("net", name) in group)
         currents = graph.part_names(edge.part for edge in crossing if edge.way == "current")
         capacitors = graph.part_names(edge.part for edge in crossing if edge.way == "capacitance")
-        touching = graph.part_names(part.name for part in graph.circuit.parts if set(part.pins.values()) & set(nets))
+        touching = graph.part_names(
+            part.name for part in graph.circuit.parts if set(part.pins.values()) & set(nets)
+        )
         ways = {edge.way for edge in graph.edges if edge.first in group or edge.second in group}
         inputs = touching if ways == {"sense"} else ()
         found.append(_floating_finding(nets, currents, capacitors, touching, inputs))
@@ -173,8 +181,13 @@ def _floating_finding(
         text = f"{what}: joined to the rest only by capacitors {_listed(capacitors)}, so that nothing sets a voltage at rest"
         return Finding("floating-net", text, nets, capacitors, True)
     if inputs:
-        return Finding("floating-net", f"{what}: only inputs of {_listed(inputs)} are joined to it", nets, inputs, True)
-    return Finding("floating-net", f"{what}: no path leads from there to gnd", nets, touching, True)
+        return Finding(
+            "floating-net", f"{what}: only inputs of {_listed(inputs)} are joined to it", nets, inputs, True
+        )
+    text = f"{what}: no path for direct current leads from there to gnd"
+    if touching:
+        text += f"; {_listed(touching)} {'is' if len(touching) == 1 else 'are'} joined to it"
+    return Finding("floating-net", text, nets, touching, True)
 
 
 def _voltage_loops(graph: _Graph) -> list[Finding]:
@@ -188,7 +201,11 @@ def _voltage_loops(graph: _Graph) -> list[Finding]:
         if edge.way != "voltage":
             continue
         if edge.first == edge.second or nx.has_path(forest, edge.first, edge.second):
-            path = [edge.first] if edge.first == edge.second else nx.shortest_path(forest, edge.first, edge.second)
+            path = (
+                [edge.first]
+                if edge.first == edge.second
+                else nx.shortest_path(forest, edge.first, edge.second)
+            )
             loop = [edge, *(owners[frozenset(pair)] for pair in pairwise(path))]
             read = any(("current", entry.part) in graph.looked_at for entry in loop)
             if not (read and any(entry.controlled for entry in loop)):
@@ -226,7 +243,9 @@ def _undetermined(graph: _Graph) -> list[Finding]:
         return []
     names = [name for _, name in free]
     nets = tuple(name for kind, name in free if kind == "net")
-    parts = graph.part_names(name.rsplit(".", 1)[0] if kind == "internal" else name for kind, name in free if kind != "net")
+    parts = graph.part_names(
+        name.rsplit(".", 1)[0] if kind == "internal" else name for kind, name in free if kind != "net"
+    )
     return [Finding("undetermined", f"no equation determines {_listed(names)}", nets, parts, True)]
 
 
@@ -238,7 +257,9 @@ def _short_circuited(graph: _Graph) -> list[Finding]:
         if len(nets) == 1 and not (part.name in prescribing and len(part.pins) == 2):
             net = next(iter(nets))
             text = f"all pins of `{part.name}` are joined to `{net}`, so that it does nothing"
-            found.append(Finding("short-circuited", text, () if net == "gnd" else (net,), (part.name,), False))
+            found.append(
+                Finding("short-circuited", text, () if net == "gnd" else (net,), (part.name,), False)
+            )
     return found
 
 
@@ -246,7 +267,13 @@ def _single_connections(graph: _Graph) -> list[Finding]:
     touched = Counter(net for part in graph.circuit.parts for net in part.pins.values())
     pins = {part.name: set(part.pins.values()) for part in graph.circuit.parts}
     # a formula or the control of a switch reads a net where its part has no pin
-    touched.update({edge.first[1] for edge in graph.edges if edge.way == "sense" and edge.first[1] not in pins[edge.part]})
+    touched.update(
+        {
+            edge.first[1]
+            for edge in graph.edges
+            if edge.way == "sense" and edge.first[1] not in pins[edge.part]
+        }
+    )
     owner = {net: part for part in graph.circuit.parts for net in part.pins.values()}
     found = []
     for net in graph.circuit.nets:
@@ -257,15 +284,19 @@ def _single_connections(graph: _Graph) -> list[Finding]:
     return found
 
 
-
-
 def _no_current(graph: _Graph) -> list[Finding]:
     """Parts with two pins whose current can only be zero at rest: the only way between two halves of the circuit."""
-    carries = [edge for edge in graph.edges if edge.way in ("conductance", "voltage", "current") and edge.first != edge.second]
+    carries = [
+        edge
+        for edge in graph.edges
+        if edge.way in ("conductance", "voltage", "current") and edge.first != edge.second
+    ]
     count = Counter(frozenset((edge.first, edge.second)) for edge in carries)
     joined: nx.Graph[Key] = nx.Graph()
     joined.add_edges_from((edge.first, edge.second) for edge in carries)
-    bridges: set[frozenset[Key]] = {frozenset((a, b)) for a, b in cast("Iterable[tuple[Key, Key]]", nx.bridges(joined))}
+    bridges: set[frozenset[Key]] = {
+        frozenset((a, b)) for a, b in cast("Iterable[tuple[Key, Key]]", nx.bridges(joined))
+    }
     alone = {pair for pair in bridges if count[pair] == 1}
     two = {part.name for part in graph.circuit.parts if len(part.pins) == 2}
     resistive = [edge for edge in carries if edge.way == "conductance" and edge.part in two]

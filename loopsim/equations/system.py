@@ -116,7 +116,9 @@ class System:
         slope = self.apply(SLOPE, w)
         if self.has_products:
             value = self.apply(VALUE, w)
-            return self.G + self.B @ ((slope * self.factor(x))[..., None] * self.W + value[..., None] * self.V)
+            return self.G + self.B @ (
+                (slope * self.factor(x))[..., None] * self.W + value[..., None] * self.V
+            )
         return self.G + self.B @ (slope[..., None] * self.W)
 
     def second_directional(self, x: Array, v: Array) -> Array:
@@ -153,8 +155,8 @@ def lurie(
 ) -> System:
     """A System from bare arrays, for problems that are published as equations: C x' + G x + B (phi(W x + c) (V x + d)) = s.
 
-    G: (..., n, n); kinds: (m,), one of `loopsim.devices.phi.Kind` each. What is left out is zero, d is one, W and B are the identity
-    where m = n, supply is s. names: of the unknowns, as nets; x1, x2, ... without. ValueError where shapes do not meet.
+    G: (..., n, n); kinds: (m,), one of `loopsim.devices.phi.Kind` each. What is left out is zero, d is one, W and B are the
+    identity where m = n, supply is s. names: of the unknowns, as nets; x1, x2, ... without. ValueError where shapes do not meet.
     """
     conductances = np.asarray(G, dtype=float)
     n = conductances.shape[-1]

@@ -24,8 +24,8 @@ class Traced(NDArrayOperatorsMixin):
         if ufunc is np.multiply:
             both = given[0].keys() & given[1].keys()
             return Traced({**_merged(given), **dict.fromkeys(both, OTHER)})
-        if ufunc in (np.true_divide, np.floor_divide) and not given[1]:
-            return Traced(given[0] if ufunc is np.true_divide else dict.fromkeys(given[0], OTHER))
+        if ufunc is np.true_divide:
+            return Traced({**given[0], **dict.fromkeys(given[1], OTHER)})
         return Traced(dict.fromkeys(_merged(given), OTHER))
 
 

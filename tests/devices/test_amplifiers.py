@@ -15,14 +15,20 @@ def _inputs(plus, minus, **rails):
     return {"plus": plus, "minus": minus, "high": 15.0, "low": -15.0, **rails}
 
 
-def _open_loop(plus, minus, *, device="opamp", rails=(15.0, -15.0), load=None, **fields) -> tuple[float, Circuit]:
+def _open_loop(
+    plus, minus, *, device="opamp", rails=(15.0, -15.0), load=None, **fields
+) -> tuple[float, Circuit]:
     """Output voltage of an amplifier whose inputs and rails are held, and the circuit."""
     bench = CircuitBuilder("open_loop")
     for name, value in (("plus", plus), ("minus", minus), ("high", rails[0]), ("low", rails[1])):
         bench.let(name, value)
         bench.chain("gnd", f"hold_{name}", name, device="voltage_source", voltage=let(name))
-    bench.part("u1", device, {"plus": "plus", "minus": "minus", "out": "out", "high": "high", "low": "low"}, **fields)
-    bench.chain("out", "load", load[1] if load else "gnd", device="resistor", resistance=load[0] if load else 1e4)
+    bench.part(
+        "u1", device, {"plus": "plus", "minus": "minus", "out": "out", "high": "high", "low": "low"}, **fields
+    )
+    bench.chain(
+        "out", "load", load[1] if load else "gnd", device="resistor", resistance=load[0] if load else 1e4
+    )
     circuit = bench.circuit()
     system = assemble(circuit)
     x = _start(system, rails)
@@ -48,7 +54,11 @@ def test_offset_adds_to_the_difference_and_bias_flows_into_both_inputs():
     out, _ = _open_loop(0.0, 0.0, gain=1e3, input_offset=2e-3)
     assert out == pytest.approx(2.0, rel=1e-9)
     found = currents(
-        "opamp", {"plus": 0.5, "minus": 0.2, "out": 0.0, "high": 9.0, "low": -9.0}, input_bias=3e-9, input_resistance=1e6, output_resistance=50.0
+        "opamp",
+        {"plus": 0.5, "minus": 0.2, "out": 0.0, "high": 9.0, "low": -9.0},
+        input_bias=3e-9,
+        input_resistance=1e6,
+        output_resistance=50.0,
     )
     assert found["plus"] == pytest.approx(3e-9 + 0.3e-6, rel=1e-12)
     assert found["minus"] == pytest.approx(3e-9 - 0.3e-6, rel=1e-12)
@@ -85,11 +95,12 @@ def test_output_resistance_divides_the_output():
 
 
 def _trip_point(knee, clamp_ratio) -> float:
-    """Where the lower branch of a comparator with hysteresis ends: its input goes through 12 kohm and the output back through 33 kohm to
-    `plus`, `minus` at gnd, rails such that V_sat = 8.95 V, gain 1e5.
+    """Where the lower branch of a comparator with hysteresis ends: its input goes through 12 kohm and the output back
+    through 33 kohm to `plus`, `minus` at gnd, rails such that V_sat = 8.95 V, gain 1e5.
 
-    The output v parametrises the characteristic: plus = input stage's answer to v, input = plus + (plus - v) 12 / 33; its extreme value
-    is the fold. Found by golden section on that closed form of the circuit, the stage's answer taken from the assembled equations.
+    The output v parametrises the characteristic: plus = input stage's answer to v, input = plus + (plus - v) 12 / 33; its
+    extreme value is the fold. Found by golden section on that closed form of the circuit, the stage's answer taken from the
+    assembled equations.
     """
     bench = CircuitBuilder("trip")
     bench.let("out", 0.0)
@@ -152,7 +163,11 @@ def test_gain_bandwidth_sets_the_pole_and_slew_rate_the_fastest_change():
     gain, bandwidth, slew = 1e4, 2e6, 3e6
     _, circuit = _open_loop(0.0, 0.0, gain=gain, gain_bandwidth=bandwidth, slew_rate=slew)
     system = assemble(circuit)
-    row, out, plus = system.index["internal", "u1.output_current"], system.index["net", "out"], system.index["net", "plus"]
+    row, out, plus = (
+        system.index["internal", "u1.output_current"],
+        system.index["net", "out"],
+        system.index["net", "plus"],
+    )
     x = _start(system, (15.0, -15.0))
     jacobian = system.jacobian(x)
     # pole at bandwidth / gain, far from the clamps
@@ -176,7 +191,13 @@ def test_push_pull_comparator_goes_to_its_rails():
 
 
 def test_open_collector_sinks_through_its_resistance_or_leaves_the_output_to_the_pull_up():
-    fields = {"device": "comparator", "output": "open_collector", "sink_resistance": 50.0, "rails": (5.0, 0.0), "load": (950.0, "high")}
+    fields = {
+        "device": "comparator",
+        "output": "open_collector",
+        "sink_resistance": 50.0,
+        "rails": (5.0, 0.0),
+        "load": (950.0, "high"),
+    }
     on, _ = _open_loop(0.0, 0.01, **fields)
     off, _ = _open_loop(0.01, 0.0, **fields)
     assert on == pytest.approx(5.0 * 50.0 / 1000.0, rel=1e-9)
@@ -204,7 +225,13 @@ def test_a_delay_keeps_the_gain(gain):
 @pytest.mark.parametrize("output", ["push_pull", "open_collector"])
 def test_the_output_changes_after_the_propagation_delay(output):
     delay = 400e-9
-    fields = {"device": "comparator", "output": output, "rails": (5.0, 0.0), "load": (2e3, "high"), "propagation_delay": delay}
+    fields = {
+        "device": "comparator",
+        "output": output,
+        "rails": (5.0, 0.0),
+        "load": (2e3, "high"),
+        "propagation_delay": delay,
+    }
     _, circuit = _open_loop(-0.5, 0.0, **fields)
     system = assemble(circuit)
     start = _start(system, (5.0, 0.0))
@@ -218,7 +245,9 @@ def test_the_output_changes_after_the_propagation_delay(output):
     while abs(x[out] - before[out]) < 2.4 and t < 5 * delay:
         old = x
         for _ in range(30):
-            step = np.linalg.solve(after.C / h + after.jacobian(x), -(after.C @ (x - old) / h + after.residual(x)))
+            step = np.linalg.solve(
+                after.C / h + after.jacobian(x), -(after.C @ (x - old) / h + after.residual(x))
+            )
             x = x + np.clip(step, -0.5, 0.5)
             if np.max(np.abs(step)) < 1e-12:
                 break

@@ -26,7 +26,14 @@ BANWELL = [
 @pytest.mark.parametrize("ambient", [-20.0, 25.0, 60.0])
 @pytest.mark.parametrize("volts", [-3.0, -0.01, 0.0, 0.01, 0.35, 0.62, 0.75])
 def test_current_follows_the_exponential_law(volts, ambient):
-    found = currents("diode", {"from": volts, "to": 0.0}, ambient, saturation_current=2e-14, ideality=1.4, saturation_exponent=0.0)
+    found = currents(
+        "diode",
+        {"from": volts, "to": 0.0},
+        ambient,
+        saturation_current=2e-14,
+        ideality=1.4,
+        saturation_exponent=0.0,
+    )
     ratio = 1 / mpmath.mpf("298.15") - 1 / (mpmath.mpf(ambient) + mpmath.mpf("273.15"))
     k_over_e = mpmath.mpf("8.61733326214517744e-5")
     saturation = mpmath.mpf("2e-14") * mpmath.exp(mpmath.mpf("1.12") / (mpmath.mpf("1.4") * k_over_e) * ratio)
@@ -51,7 +58,9 @@ def test_a_diode_behind_a_resistor_meets_the_lambert_w_form(source, ohms, satura
 @pytest.mark.parametrize(("source", "ohms", "saturation", "scale", "amperes", "volts"), BANWELL[:5])
 def test_series_resistance_is_a_resistor_in_front(source, ohms, saturation, scale, amperes, volts):
     fields = {"saturation_current": saturation, "ideality": scale / VT, "series_resistance": ohms}
-    assert currents("diode", {"from": source, "to": 0.0}, **fields)["from"] == pytest.approx(amperes, rel=1e-9)
+    assert currents("diode", {"from": source, "to": 0.0}, **fields)["from"] == pytest.approx(
+        amperes, rel=1e-9
+    )
 
 
 def test_breakdown_carries_its_current_at_its_voltage_and_none_at_rest():
@@ -75,7 +84,9 @@ def test_effects_that_are_not_given_leave_no_trace():
 
 def test_stored_charge_is_transit_time_times_forward_current():
     tau, capacitance = 4e-9, 3e-12
-    system = assemble(probed("diode", {"from": 0.6, "to": 0.0}, transit_time=tau, junction_capacitance=capacitance))
+    system = assemble(
+        probed("diode", {"from": 0.6, "to": 0.0}, transit_time=tau, junction_capacitance=capacitance)
+    )
     x = solve(system)
     d = system.index["internal", "x.diffusion_current"]
     forward = 1e-14 * np.expm1(0.6 / VT)

@@ -75,7 +75,13 @@ def test_polynomial_and_points_may_stand_in_one_circuit():
     bench.let("v", 1.3)
     bench.chain("gnd", "hold", "a", device="voltage_source", voltage=let("v"))
     bench.chain("a", "p", "gnd", device="curve_conductance", curve=bench.curve("p", "polynomial", [1.0, 0.5]))
-    bench.chain("a", "q", "gnd", device="curve_conductance", curve=bench.curve("q", "points", [0.0, 0.0, 1.0, 2.0, 2.0, 2.5]))
+    bench.chain(
+        "a",
+        "q",
+        "gnd",
+        device="curve_conductance",
+        curve=bench.curve("q", "points", [0.0, 0.0, 1.0, 2.0, 2.0, 2.5]),
+    )
     circuit = bench.circuit()
     found = pin_currents(circuit, solve(assemble(circuit)))
     assert found["p"] == pytest.approx(1.3 + 0.5 * 1.69, rel=1e-13)
@@ -111,7 +117,14 @@ def test_a_switch_goes_smoothly_from_off_to_on():
     ],
 )
 def test_a_switch_changes_at_its_times(times, before, between, after):
-    circuit = probed("switch", {"from": 1.0, "to": 0.0}, on_resistance=1.0, off_resistance=1e6, transition_time=1e-6, **times)
+    circuit = probed(
+        "switch",
+        {"from": 1.0, "to": 0.0},
+        on_resistance=1.0,
+        off_resistance=1e6,
+        transition_time=1e-6,
+        **times,
+    )
     system = assemble(circuit)
     ohms = {"on": 1.0, "off": 1e6}
     for t, state in ((0.0, before), (0.9e-3, before), (2e-3, between), (4e-3, after)):
@@ -140,7 +153,9 @@ def test_a_switch_needs_one_way_to_be_told():
 
 def test_a_constant_power_load_draws_its_power_above_dropout_and_less_below():
     for v in (1.5, 4.0, 30.0, -12.0):
-        found = currents("constant_power_load", {"from": v, "to": 0.0}, power=20.0, dropout_voltage=1.5)["from"]
+        found = currents("constant_power_load", {"from": v, "to": 0.0}, power=20.0, dropout_voltage=1.5)[
+            "from"
+        ]
         assert found * v == pytest.approx(20.0, rel=1e-12)
     u = 0.4 / 1.5
     below = currents("constant_power_load", {"from": 0.4, "to": 0.0}, power=20.0, dropout_voltage=1.5)["from"]

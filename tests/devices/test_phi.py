@@ -46,7 +46,24 @@ LAWS = {
     Kind.RECIPROCAL: (_reciprocal, ()),
 }
 # no corner of ROOF and not |w| = 1, where second derivatives have two sides
-PLACES = [-300.0, -45.7, -19.3, -3.25, -1.2, -0.3, -1e-9, 1e-12, 0.03, 0.7, 1.9, 6.5, 21.0, 119.0, 120.5, 400.0]
+PLACES = [
+    -300.0,
+    -45.7,
+    -19.3,
+    -3.25,
+    -1.2,
+    -0.3,
+    -1e-9,
+    1e-12,
+    0.03,
+    0.7,
+    1.9,
+    6.5,
+    21.0,
+    119.0,
+    120.5,
+    400.0,
+]
 
 
 @pytest.mark.parametrize("kind", list(Kind), ids=lambda kind: kind.name)
@@ -60,7 +77,11 @@ def test_value_slope_and_curvature_agree_with_long_arithmetic(kind):
             exact = [here, (after - before) / (2 * h), (after - 2 * here + before) / h**2]
         for table, wanted in zip((VALUE, SLOPE, CURVATURE), exact, strict=True):
             # the terms of a sum may cancel: the error is measured against their size
-            size = sum(abs(p) for p in parameters) * max(1.0, abs(w)) ** max(1, len(parameters)) if parameters else 0.0
+            size = (
+                sum(abs(p) for p in parameters) * max(1.0, abs(w)) ** max(1, len(parameters))
+                if parameters
+                else 0.0
+            )
             found = float(table[kind](np.float64(w), numbers))
             assert found == pytest.approx(float(wanted), rel=4e-14, abs=4e-16 * size + 1e-300), (kind, w)
 

@@ -8,7 +8,12 @@ from probing import currents
 from loopsim.devices.thermal import THERMAL, saturation_factor, thermal_voltage
 
 # k T / e, CODATA 2018, exact by definition, read from scipy.constants 1.17.1
-VOLTS = {0.0: 0.0235382458055496, 20.0: 0.0252617124579786, 25.0: 0.0256925791210858, 27.0: 0.0258649257863288}
+VOLTS = {
+    0.0: 0.0235382458055496,
+    20.0: 0.0252617124579786,
+    25.0: 0.0256925791210858,
+    27.0: 0.0258649257863288,
+}
 
 
 @pytest.mark.parametrize(("ambient", "volts"), VOLTS.items())
@@ -44,17 +49,22 @@ def test_a_silicon_diode_loses_about_two_millivolts_a_kelvin():
 
 def test_a_resistor_drifts_only_if_its_coefficient_is_given():
     at = {"from": 2.0, "to": 0.0}
-    assert currents("resistor", at, 75.0, resistance=1e3, temperature_coefficient=100e-6)["from"] == pytest.approx(
-        2.0 / (1e3 * 1.005), rel=1e-14
+    assert currents("resistor", at, 75.0, resistance=1e3, temperature_coefficient=100e-6)[
+        "from"
+    ] == pytest.approx(2.0 / (1e3 * 1.005), rel=1e-14)
+    assert (
+        currents("resistor", at, 75.0, resistance=1e3)["from"]
+        == currents("resistor", at, 25.0, resistance=1e3)["from"]
     )
-    assert currents("resistor", at, 75.0, resistance=1e3)["from"] == currents("resistor", at, 25.0, resistance=1e3)["from"]
 
 
 def test_threshold_and_mobility_drift_only_if_given():
     at = {"drain": 3.0, "gate": 2.0, "source": 0.0, "body": 0.0}
     # strong inversion, slope factor 1: K / 2 (v_GS - V_th)^2
     fields = {"threshold": 0.7, "transconductance": 1e-3, "slope_factor": 1.0}
-    drifting = currents("mosfet_n", at, 125.0, **fields, threshold_drift=-1e-3, mobility_exponent=1.5)["drain"]
+    drifting = currents("mosfet_n", at, 125.0, **fields, threshold_drift=-1e-3, mobility_exponent=1.5)[
+        "drain"
+    ]
     assert drifting == pytest.approx(0.5e-3 * (398.15 / 298.15) ** -1.5 * (2.0 - 0.6) ** 2, rel=1e-9)
     assert currents("mosfet_n", at, 125.0, **fields)["drain"] == pytest.approx(0.5e-3 * 1.3**2, rel=1e-9)
 

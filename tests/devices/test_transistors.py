@@ -12,7 +12,14 @@ VT = thermal_voltage(25.0)
 K_OVER_E = mpmath.mpf("8.61733326214517744e-5")
 BIPOLAR = {"saturation_current": 5e-15, "forward_gain": 180.0, "reverse_gain": 4.0, "ideality": 1.05}
 # collector, base, emitter: cut off, forward active, saturated, reverse active, both junctions reverse biased
-BIASES = [(5.0, 0.0, 0.0), (5.0, 0.65, 0.0), (0.08, 0.7, 0.0), (0.0, 0.62, 3.0), (2.0, -1.0, 1.0), (0.0, 0.0, 0.0)]
+BIASES = [
+    (5.0, 0.0, 0.0),
+    (5.0, 0.65, 0.0),
+    (0.08, 0.7, 0.0),
+    (0.0, 0.62, 3.0),
+    (2.0, -1.0, 1.0),
+    (0.0, 0.0, 0.0),
+]
 
 
 def _ebers_moll(c, b, e, ambient, early=None):
@@ -36,7 +43,9 @@ def _ebers_moll(c, b, e, ambient, early=None):
 @pytest.mark.parametrize("bias", BIASES)
 def test_npn_currents_follow_the_transport_form(bias, ambient, early):
     fields = BIPOLAR if early is None else {**BIPOLAR, "early_voltage": early}
-    found = currents("bipolar_npn", dict(zip(("collector", "base", "emitter"), bias, strict=True)), ambient, **fields)
+    found = currents(
+        "bipolar_npn", dict(zip(("collector", "base", "emitter"), bias, strict=True)), ambient, **fields
+    )
     wanted = _ebers_moll(*bias, ambient, early)
     size = max(abs(float(value)) for value in wanted)
     for pin, value in zip(("collector", "base", "emitter"), wanted, strict=True):
@@ -56,7 +65,8 @@ def test_early_voltage_is_where_the_output_lines_meet():
     # straight lines i_C(v_CB) at fixed v_BE meet i_C = 0 at v_CB = -V_A, up to the reverse current
     fields = {**BIPOLAR, "early_voltage": 50.0}
     first, second = (
-        currents("bipolar_npn", {"collector": v, "base": 0.65, "emitter": 0.0}, **fields)["collector"] for v in (2.65, 8.65)
+        currents("bipolar_npn", {"collector": v, "base": 0.65, "emitter": 0.0}, **fields)["collector"]
+        for v in (2.65, 8.65)
     )
     assert 2.0 - first * 6.0 / (second - first) == pytest.approx(-50.0, rel=1e-9)
 
@@ -70,7 +80,9 @@ def test_transistor_charges_stand_where_they_belong():
     )  # fmt: skip
     charge = dict(zip((name for _, name in system.unknowns), system.C @ solve(system), strict=True))
     forward = BIPOLAR["saturation_current"] * np.expm1(0.66 / (BIPOLAR["ideality"] * VT))
-    assert charge["at_base"] == pytest.approx(300e-12 * forward + 2e-12 * 0.66 + 1e-12 * (0.66 - 2.0), rel=1e-9)
+    assert charge["at_base"] == pytest.approx(
+        300e-12 * forward + 2e-12 * 0.66 + 1e-12 * (0.66 - 2.0), rel=1e-9
+    )
     assert charge["at_emitter"] == pytest.approx(-300e-12 * forward - 2e-12 * 0.66, rel=1e-9)
     assert charge["at_collector"] == pytest.approx(1e-12 * (2.0 - 0.66), rel=1e-9)
 
@@ -79,8 +91,12 @@ def test_a_pnp_stores_charge_of_the_other_sign():
     fields = {**BIPOLAR, "transit_time": 300e-12}
     charges = []
     for device, sign in (("bipolar_npn", 1.0), ("bipolar_pnp", -1.0)):
-        system = assemble(probed(device, {"collector": 2.0 * sign, "base": 0.66 * sign, "emitter": 0.0}, **fields))
-        charges.append(dict(zip((name for _, name in system.unknowns), system.C @ solve(system), strict=True)))
+        system = assemble(
+            probed(device, {"collector": 2.0 * sign, "base": 0.66 * sign, "emitter": 0.0}, **fields)
+        )
+        charges.append(
+            dict(zip((name for _, name in system.unknowns), system.C @ solve(system), strict=True))
+        )
     assert charges[1]["at_base"] == pytest.approx(-charges[0]["at_base"], rel=1e-12)
 
 
@@ -91,7 +107,8 @@ def test_differential_pair_shares_its_tail_current_by_a_hyperbolic_tangent():
     for _ in range(200):
         tail = 0.5 * (low + high)
         pair = [
-            currents("bipolar_npn", {"collector": 5.0, "base": base, "emitter": tail}, **fields)["collector"] for base in (VT, 0.0)
+            currents("bipolar_npn", {"collector": 5.0, "base": base, "emitter": tail}, **fields)["collector"]
+            for base in (VT, 0.0)
         ]
         low, high = (tail, high) if sum(pair) > 1e-3 else (low, tail)
     assert (pair[0] - pair[1]) / sum(pair) == pytest.approx(0.462117157260009759, rel=1e-9)
@@ -127,7 +144,9 @@ def _charge_sheet(drain, gate, source, body, modulation, ambient=25.0):
 @pytest.mark.parametrize("channel", CHANNELS)
 def test_mosfet_current_follows_the_charge_sheet(channel, ambient, modulation):
     fields = MOS if modulation is None else {**MOS, "channel_modulation": modulation}
-    found = currents("mosfet_n", dict(zip(("drain", "gate", "source", "body"), channel, strict=True)), ambient, **fields)
+    found = currents(
+        "mosfet_n", dict(zip(("drain", "gate", "source", "body"), channel, strict=True)), ambient, **fields
+    )
     wanted = float(_charge_sheet(*channel, modulation or 0.0, ambient))
     assert found["drain"] == pytest.approx(wanted, rel=1e-9, abs=1e-22)
     assert found["source"] == -found["drain"]
@@ -149,13 +168,18 @@ def test_exchanging_drain_and_source_turns_the_current_round_exactly(device, cha
 def test_a_p_channel_is_an_n_channel_with_every_sign_turned(channel):
     volts = dict(zip(("drain", "gate", "source", "body"), channel, strict=True))
     one = currents("mosfet_n", volts, **MOS, channel_modulation=0.05)
-    other = currents("mosfet_p", {pin: -value for pin, value in volts.items()}, **MOS, channel_modulation=0.05)
+    other = currents(
+        "mosfet_p", {pin: -value for pin, value in volts.items()}, **MOS, channel_modulation=0.05
+    )
     assert other == {pin: -value for pin, value in one.items()}
 
 
 def test_weak_inversion_falls_a_decade_per_slope_factor_times_60_millivolts():
     # common practice: n V_T ln 10 a decade; V_T ln 10 is 59.16 mV at 25 degC
-    volts = [{"drain": 1.0, "gate": gate, "source": 0.0, "body": 0.0} for gate in (-0.2, -0.2 - MOS["slope_factor"] * VT * np.log(10.0))]
+    volts = [
+        {"drain": 1.0, "gate": gate, "source": 0.0, "body": 0.0}
+        for gate in (-0.2, -0.2 - MOS["slope_factor"] * VT * np.log(10.0))
+    ]
     upper, lower = (currents("mosfet_n", at, **MOS)["drain"] for at in volts)
     assert upper / lower == pytest.approx(10.0, rel=1e-4)
 

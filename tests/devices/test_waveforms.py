@@ -1,5 +1,7 @@
 """Sources in time: values and corners."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
@@ -16,7 +18,10 @@ def test_a_sine_rests_at_its_phase_before_the_delay():
 
 
 def test_a_square_wave_keeps_its_times():
-    wave = waveform("square", {"low": -1.0, "high": 3.0, "period": 10.0, "width": 4.0, "rise": 1.0, "fall": 2.0, "delay": 5.0})
+    wave = waveform(
+        "square",
+        {"low": -1.0, "high": 3.0, "period": 10.0, "width": 4.0, "rise": 1.0, "fall": 2.0, "delay": 5.0},
+    )
     times = [0.0, 5.0, 5.5, 6.0, 9.9, 10.0, 11.0, 12.0, 14.9, 15.5, 26.5]
     values = [-1.0, -1.0, 1.0, 3.0, 3.0, 3.0, 1.0, -1.0, -1.0, 1.0, 3.0]
     assert [float(wave.value(t)) for t in times] == pytest.approx(values, abs=1e-12)
@@ -37,7 +42,9 @@ def test_a_ramp_and_points_are_straight_between_and_constant_outside():
     assert [float(ramp.value(t)) for t in (0.0, 2.0, 3.0, 6.0, 9.0)] == [1.0, 1.0, 2.0, 5.0, 5.0]
     assert ramp.corners(0.0, 10.0) == [2.0, 6.0]
     line = waveform("points", {}, [(1.0, 0.0), (2.0, 4.0), (4.0, -2.0)])
-    assert [float(line.value(t)) for t in (0.0, 1.5, 2.0, 3.0, 5.0)] == pytest.approx([0.0, 2.0, 4.0, 1.0, -2.0])
+    assert [float(line.value(t)) for t in (0.0, 1.5, 2.0, 3.0, 5.0)] == pytest.approx(
+        [0.0, 2.0, 4.0, 1.0, -2.0]
+    )
     assert line.corners(0.0, 3.0) == [1.0, 2.0]
     with pytest.raises(CircuitError, match="ascend"):
         waveform("points", {}, [(1.0, 0.0), (1.0, 4.0)])
@@ -49,11 +56,19 @@ def test_between_its_corners_a_waveform_of_lines_is_straight():
         shape = rng.uniform(0.05, 0.3, 3)
         wave = waveform(
             "square",
-            {"high": 2.0, "low": -1.0, "period": 1.0, "rise": shape[0], "width": shape[1], "fall": shape[2], "delay": rng.uniform(0, 2)},
+            {
+                "high": 2.0,
+                "low": -1.0,
+                "period": 1.0,
+                "rise": shape[0],
+                "width": shape[1],
+                "fall": shape[2],
+                "delay": rng.uniform(0, 2),
+            },
         )
         start = rng.uniform(0, 3)
         corners = [start, *wave.corners(start, start + 2.5), start + 2.5]
-        for a, b in zip(corners[:-1], corners[1:], strict=True):
+        for a, b in pairwise(corners):
             if b - a > 1e-9:
                 middle = wave.value(0.5 * (a + b))
                 ends = wave.value(a + 1e-12), wave.value(b - 1e-12)
@@ -65,7 +80,10 @@ def test_a_batch_of_waveforms_is_a_row_of_single_ones():
     delay = np.array([0.0, 0.1, 0.2])
     together = waveform("sine", {"amplitude": amplitude, "frequency": 3.0, "delay": delay})
     for t in (0.0, 0.05, 0.15, 0.7):
-        singles = [waveform("sine", {"amplitude": a, "frequency": 3.0, "delay": d}).value(t) for a, d in zip(amplitude, delay, strict=True)]
+        singles = [
+            waveform("sine", {"amplitude": a, "frequency": 3.0, "delay": d}).value(t)
+            for a, d in zip(amplitude, delay, strict=True)
+        ]
         assert np.array_equal(together.value(t), singles)
     assert together.corners(0.0, 1.0) == [0.0, 0.1, 0.2]
     assert list(WAVEFORMS) == ["sine", "square", "ramp", "points"]
