@@ -37,28 +37,35 @@ def pattern(system: System) -> NDArray[np.bool_]:
     return np.asarray((system.G != 0.0) | (through > 0.0))
 
 
-def blocks(system: System) -> tuple[Block, ...]:
-    """The groups in the order in which they can be solved. AnalysisError `singular` where no row answers for some unknown."""
-    entries = pattern(system)
+def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.int64], NDArray[np.int64]]]:
+    """(unknowns, rows that answer for them) in an order in which each needs only earlier ones, by `entries`: (n, n), which must hold the
+    pattern of the DC equations. AnalysisError `singular` where no row answers for some unknown."""
     n = system.n
-    match = maximum_bipartite_matching(csr_array(entries), perm_type="row") if n else np.zeros(0, dtype=np.int64)
+    match = maximum_bipartite_matching(csr_array(pattern(system)), perm_type="row") if n else np.zeros(0, dtype=np.int64)
     if np.any(match < 0):
         lost = [f"{kind} {name}" for (kind, name), row in zip(system.unknowns, match, strict=True) if row < 0]
         raise AnalysisError("singular", f"no equation determines {', '.join(lost)}", hint="look for a loop of sources or a floating net")
     # match[j]: the row that answers for unknown j
     graph = nx.DiGraph()
     graph.add_nodes_from(range(n))
-    needs = entries[match]
-    targets, sources = np.nonzero(needs)
+    targets, sources = np.nonzero(entries[match])
     graph.add_edges_from(zip(sources.tolist(), targets.tolist(), strict=True))
     condensed = nx.condensation(graph)
-    moves = (system.W != 0.0) | (system.V != 0.0)
     found = []
     for group in nx.lexicographical_topological_sort(condensed):
         unknowns = np.array(sorted(condensed.nodes[group]["members"]), dtype=np.int64)
-        rows = match[unknowns].astype(np.int64)
+        found.append((unknowns, match[unknowns].astype(np.int64)))
+    return found
+
+
+def blocks(system: System) -> tuple[Block, ...]:
+    """The groups in the order in which they can be solved at DC. AnalysisError `singular` where no row answers for some unknown."""
+    entries = pattern(system)
+    moves = (system.W != 0.0) | (system.V != 0.0)
+    found = []
+    for unknowns, rows in groups(system, entries):
         used = np.flatnonzero(np.any(system.B[rows] != 0.0, axis=0))
         moved = np.any(moves[np.ix_(used, unknowns)], axis=1)
-        everything = np.flatnonzero(np.any(needs[unknowns], axis=0))
+        everything = np.flatnonzero(np.any(entries[rows], axis=0))
         found.append(Block(unknowns, rows, np.setdiff1d(everything, unknowns), used[moved], used[~moved]))
     return tuple(found)
