@@ -23,6 +23,7 @@ from loopsim.equations.system import System
 from loopsim.numerics.spectrum import Spectrum, determinant_signs, spectra
 
 Array: TypeAlias = NDArray[np.float64]
+Groups: TypeAlias = list[tuple[NDArray[np.int64], NDArray[np.int64]]]
 
 STABLE = "stable"
 ANY_STRAYS = "unstable, whatever the strays"
@@ -45,21 +46,24 @@ def judge(system: System, x: Array) -> list[Verdict]:
         return []
     jacobians = np.broadcast_to(system.jacobian(x), (len(x), system.n, system.n))
     wrong = _wrong_sign(system, jacobians)
-    own = _spectra(system, jacobians, system.C)
-    dynamic = bool(np.any(system.C != 0.0))
     candidates = _stray_nets(system)
+    everything = pattern(system) | (system.C != 0.0)
+    everything[candidates, candidates] = True
+    order = groups(system, everything)
+    own = _spectra(order, jacobians, system.C)
+    dynamic = bool(np.any(system.C != 0.0))
     trials = _trials(system, candidates, TRIALS if not dynamic else 3)
-    strayed = [_spectra(system, jacobians, matrix) for matrix in trials]
+    strayed = [_spectra(order, jacobians, matrix) for matrix in trials]
     return [
         _verdict(system, jacobians[i], bool(wrong[i]), own[i], [trial[i] for trial in strayed], trials, candidates, dynamic)
         for i in range(len(x))
     ]
 
 
-def _spectra(system: System, jacobians: Array, dynamics: Array) -> list[Spectrum]:
+def _spectra(order: Groups, jacobians: Array, dynamics: Array) -> list[Spectrum]:
     """Eigenvalues of the whole circuit, group by group of what needs what: nets that sources hold fixed then hide no constraint."""
     parts: list[list[Spectrum]] = []
-    for unknowns, rows in groups(system, pattern(system) | (dynamics != 0.0)):
+    for unknowns, rows in order:
         block = dynamics[np.ix_(rows, unknowns)]
         if np.any(block != 0.0):
             parts.append(spectra(jacobians[:, rows[:, None], unknowns[None, :]], block))

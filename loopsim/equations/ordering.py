@@ -8,12 +8,12 @@ as soon as it is not exactly zero.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from heapq import heapify, heappop, heappush
 
-import networkx as nx
 import numpy as np
 from numpy.typing import NDArray
 from scipy.sparse import csr_array
-from scipy.sparse.csgraph import maximum_bipartite_matching
+from scipy.sparse.csgraph import connected_components, maximum_bipartite_matching
 
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError
@@ -45,16 +45,30 @@ def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.
     if np.any(match < 0):
         lost = [f"{kind} {name}" for (kind, name), row in zip(system.unknowns, match, strict=True) if row < 0]
         raise AnalysisError("singular", f"no equation determines {', '.join(lost)}", hint="look for a loop of sources or a floating net")
-    # match[j]: the row that answers for unknown j
-    graph = nx.DiGraph()
-    graph.add_nodes_from(range(n))
-    targets, sources = np.nonzero(entries[match])
-    graph.add_edges_from(zip(sources.tolist(), targets.tolist(), strict=True))
-    condensed = nx.condensation(graph)
+    # match[j]: the row that answers for unknown j; unknown j needs every unknown of that row
+    count, labels = connected_components(csr_array(entries[match]), directed=True, connection="strong")
+    members: list[list[int]] = [[] for _ in range(count)]
+    for j, label in enumerate(labels.tolist()):
+        members[label].append(j)
+    heads, tails = np.nonzero(entries[match])
+    needs: list[set[int]] = [set() for _ in range(count)]
+    serves: list[set[int]] = [set() for _ in range(count)]
+    for head, tail in zip(labels[heads].tolist(), labels[tails].tolist(), strict=True):
+        if head != tail:
+            needs[head].add(tail)
+            serves[tail].add(head)
+    # smallest unknown first among the groups that are ready, so that the order follows the circuit's own
+    ready = [(members[k][0], k) for k in range(count) if not needs[k]]
+    heapify(ready)
     found = []
-    for group in nx.lexicographical_topological_sort(condensed):
-        unknowns = np.array(sorted(condensed.nodes[group]["members"]), dtype=np.int64)
+    while ready:
+        _, k = heappop(ready)
+        unknowns = np.array(members[k], dtype=np.int64)
         found.append((unknowns, match[unknowns].astype(np.int64)))
+        for other in serves[k]:
+            needs[other].discard(k)
+            if not needs[other]:
+                heappush(ready, (members[other][0], other))
     return found
 
 

@@ -30,17 +30,18 @@ class Spectrum:
 
 
 def equilibrate(matrix: Array) -> tuple[Array, Array]:
-    """Row and column factors (powers of two, so exact) that bring the largest entries of each towards 1; 1 for empty ones."""
+    """Row and column factors (powers of two, so exact) that bring the largest entries of each towards 1; 1 for empty ones.
+
+    matrix: (..., r, c); factors: (..., r), (..., c).
+    """
     size = np.abs(matrix)
-    rows = np.ones(size.shape[-2])
-    columns = np.ones(size.shape[-1])
+    rows = np.ones(size.shape[:-1])
+    columns = np.ones((*size.shape[:-2], size.shape[-1]))
     for _ in range(3):
-        scaled = size * rows[:, None] * columns
-        top = scaled.max(axis=-1, initial=0.0)
-        rows = rows / np.where(top > 0.0, np.sqrt(top), 1.0)
-        scaled = size * rows[:, None] * columns
-        top = scaled.max(axis=-2, initial=0.0)
-        columns = columns / np.where(top > 0.0, np.sqrt(top), 1.0)
+        top = (size * columns[..., None, :]).max(axis=-1, initial=0.0)
+        rows = np.where(top > 0.0, np.sqrt(rows / np.where(top > 0.0, top, 1.0)), 1.0)
+        top = (size * rows[..., :, None]).max(axis=-2, initial=0.0)
+        columns = np.where(top > 0.0, np.sqrt(columns / np.where(top > 0.0, top, 1.0)), 1.0)
     return np.exp2(np.round(np.log2(rows))), np.exp2(np.round(np.log2(columns)))
 
 
@@ -49,16 +50,12 @@ def determinant_signs(matrices: Array) -> NDArray[np.int64]:
     batch, n, _ = matrices.shape
     if n == 0:
         return np.ones(batch, dtype=np.int64)
-    signs = np.zeros(batch, dtype=np.int64)
-    scaled = np.empty_like(matrices)
-    for i, matrix in enumerate(matrices):
-        rows, columns = equilibrate(matrix)
-        scaled[i] = matrix * rows[:, None] * columns
+    rows, columns = equilibrate(matrices)
+    scaled = matrices * rows[:, :, None] * columns[:, None, :]
     sign, _ = np.linalg.slogdet(scaled)
-    condition = np.linalg.svd(scaled, compute_uv=False)
-    clear = condition[:, -1] > SINGULAR * 1e-3 * condition[:, 0]
-    signs[clear] = np.sign(sign[clear]).astype(np.int64)
-    return signs
+    sigma = np.linalg.svd(scaled, compute_uv=False)
+    clear = sigma[:, -1] > SINGULAR * 1e-3 * sigma[:, 0]
+    return np.where(clear, np.sign(sign), 0.0).astype(np.int64)
 
 
 def spectra(jacobians: Array, dynamics: Array) -> list[Spectrum]:
@@ -71,23 +68,19 @@ def spectra(jacobians: Array, dynamics: Array) -> list[Spectrum]:
     left, sigma, right = np.linalg.svd(dynamics * rows[:, None] * columns)
     rank = int(np.count_nonzero(sigma > RANK * sigma[0]))
     # x = columns * right.T y, equations times left.T rows
-    a = -(left.T @ (jacobians * rows[:, None] * columns) @ right.T)
+    a = -(left.T @ (jacobians * rows[:, None] * columns[None, :]) @ right.T)
     a11, a12, a21, a22 = a[:, :rank, :rank], a[:, :rank, rank:], a[:, rank:, :rank], a[:, rank:, rank:]
     e = sigma[:rank]
     if rank == n:
         return _ordinary(a11 / e[:, None])
-    regular = np.zeros(batch, dtype=bool)
-    reduced = np.zeros((batch, rank, rank))
-    for i in range(batch):
-        r, c = equilibrate(a22[i])
-        block = a22[i] * r[:, None] * c
-        singular = np.linalg.svd(block, compute_uv=False)
-        if singular[-1] > SINGULAR * singular[0]:
-            inner = np.linalg.solve(block, a21[i] * r[:, None])
-            reduced[i] = (a11[i] - (a12[i] * c) @ inner) / e[:, None]
-            regular[i] = True
+    r, c = equilibrate(a22)
+    block = a22 * r[:, :, None] * c[:, None, :]
+    singular = np.linalg.svd(block, compute_uv=False)
+    regular = singular[:, -1] > SINGULAR * singular[:, 0]
+    inner = np.linalg.solve(block[regular], a21[regular] * r[regular][:, :, None])
+    reduced = (a11[regular] - (a12[regular] * c[regular][:, None, :]) @ inner) / e[:, None]
     found: list[Spectrum] = [none] * batch
-    for i, spectrum in zip(np.flatnonzero(regular), _ordinary(reduced[regular]), strict=True):
+    for i, spectrum in zip(np.flatnonzero(regular), _ordinary(reduced), strict=True):
         found[i] = spectrum
     for i in np.flatnonzero(~regular):
         found[i] = _constrained(a11[i], a12[i], a21[i], a22[i], e)
