@@ -84,3 +84,51 @@ def junction_network(seed: int) -> Circuit:
         saturation, ideality = 10 ** random.uniform(-15, -8), random.uniform(1, 2)
         build.chain(a, f"d{k}", b, device="diode", saturation_current=saturation, ideality=ideality)
     return build.circuit()
+
+
+def any_network(seed: int) -> Circuit:
+    """Two to six nets with every device that has a law of its own, values over many decades, supplies up to 30 V: nothing is known about
+    the count, so it is what a proof and a search are compared on."""
+    random = np.random.default_rng([34, seed])
+    build = CircuitBuilder(f"mixture_{seed}")
+    nets = [f"n{k}" for k in range(int(random.integers(2, 6)))]
+    build.chain("gnd", "rail", "vcc", device="voltage_source", voltage=random.uniform(1.0, 30.0))
+    places = ["gnd", "vcc", *nets]
+
+    def somewhere(*pins: str) -> dict[str, str]:
+        chosen = random.choice(places, len(pins), replace=len(pins) > len(places))
+        return dict(zip(pins, (str(net) for net in chosen), strict=True))
+
+    for k, net in enumerate(nets):
+        build.chain(net, f"g{k}", str(random.choice(["gnd", "vcc"])), device="resistor", resistance=10 ** random.uniform(1, 7))
+    for k in range(int(random.integers(1, 4))):
+        a, b = (str(x) for x in random.choice(places, 2, replace=False))
+        build.chain(a, f"r{k}", b, device="resistor", resistance=10 ** random.uniform(0, 7))
+    for k in range(int(random.integers(2, 7))):
+        what = int(random.integers(0, 6))
+        if what == 0:
+            a, b = (str(x) for x in random.choice(places, 2, replace=False))
+            build.chain(a, f"d{k}", b, device="diode", saturation_current=10 ** random.uniform(-18, -6),
+                        series_resistance=10 ** random.uniform(-1, 2), breakdown_voltage=random.uniform(2, 20))
+        elif what == 1:
+            fields = {"early_voltage": random.uniform(10, 200)} if random.random() < 0.5 else {}
+            build.part(f"q{k}", str(random.choice(["bipolar_npn", "bipolar_pnp"])), somewhere("collector", "base", "emitter"),
+                       saturation_current=10 ** random.uniform(-17, -12), forward_gain=10 ** random.uniform(1, 3), **fields)
+        elif what == 2:
+            fields = {"channel_modulation": random.uniform(0.01, 0.2)} if random.random() < 0.5 else {}
+            build.part(f"m{k}", str(random.choice(["mosfet_n", "mosfet_p"])), somewhere("drain", "gate", "source", "body"),
+                       threshold=random.uniform(0.3, 2), transconductance=10 ** random.uniform(-4, 0), **fields)
+        elif what == 3:
+            pins = somewhere("plus", "minus") | {"out": str(random.choice(nets)), "high": "vcc", "low": "gnd"}
+            build.part(f"u{k}", "opamp", pins, gain=10 ** random.uniform(2, 6), output_resistance=10 ** random.uniform(1, 3),
+                       headroom=random.uniform(0, 0.3), input_offset=random.normal() * 1e-3)
+        elif what == 4:
+            a, b = (str(x) for x in random.choice(places, 2, replace=False))
+            scale = 10 ** random.uniform(-4, -1)
+            form = build.curve(f"curve{k}", "polynomial", [scale * c for c in (11.8, -10.5, 2.5)])
+            build.chain(a, f"c{k}", b, device="curve_conductance", curve=form)
+        else:
+            a, b = (str(x) for x in random.choice(places, 2, replace=False))
+            build.chain(a, f"p{k}", b, device="constant_power_load", power=10 ** random.uniform(-3, 1),
+                        dropout_voltage=random.uniform(0.2, 2))
+    return build.circuit()
