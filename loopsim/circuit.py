@@ -5,7 +5,7 @@ The language layer builds it from text; programs may build it from data. Analyse
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
@@ -13,7 +13,9 @@ from loopsim.errors import Span
 from loopsim.expressions import Expression
 
 if TYPE_CHECKING:
+    from loopsim.analyses.cycle import Cycle
     from loopsim.analyses.results import States
+    from loopsim.analyses.transient import Transient
 
 
 @dataclass(frozen=True, slots=True)
@@ -172,3 +174,46 @@ class Circuit:
         from loopsim.analyses.states import states
 
         return states(self, settings=lets, box=box, budget=budget)
+
+    def transient(
+        self,
+        duration: float,
+        *,
+        start: Any = "off",
+        watch: Any = (),
+        nudge: float = 0.0,
+        tolerance: float = 1e-5,
+        ramp: float | None = None,
+        max_step: float | None = None,
+        progress: Callable[[float], None] | None = None,
+        tell: Callable[[str], None] | None = None,
+        **lets: Any,
+    ) -> "Transient":
+        """How it moves for `duration` [s] with the named lets set [SI]; see `loopsim.analyses.transient.transient`."""
+        from loopsim.analyses.transient import transient
+
+        return transient(
+            self, duration, start=start, watch=watch, nudge=nudge, tolerance=tolerance, ramp=ramp, settings=lets,
+            max_step=max_step, progress=progress, tell=tell,
+        )  # fmt: skip
+
+    def cycle(
+        self,
+        *,
+        start: Any = "off",
+        nudge: float = 0.0,
+        watch: Any = (),
+        tolerance: float = 1e-8,
+        duration: float | None = None,
+        budget: float = 60.0,
+        progress: Callable[[float], None] | None = None,
+        tell: Callable[[str], None] | None = None,
+        **lets: Any,
+    ) -> "Cycle":
+        """The oscillation that a start leads to, with the named lets set [SI]; see `loopsim.analyses.cycle.cycle`."""
+        from loopsim.analyses.cycle import cycle
+
+        return cycle(
+            self, start=start, nudge=nudge, watch=watch, tolerance=tolerance, duration=duration, settings=lets, budget=budget,
+            progress=progress, tell=tell,
+        )  # fmt: skip

@@ -36,6 +36,7 @@ NODES = {
 }  # fmt: skip
 DENSE_LIMIT = 12  # unknowns up to which full L U with pivoting costs no more than the sparse one
 FULL_LIMIT = 24  # unknowns of all stages together up to which Newton with every stage's own Jacobian pays
+LOOKS = 8  # stretches of a step in which a crossing is looked for
 RECORD_ROOM = 4_000_000  # numbers in one stretch of the record: 32 MB
 FIRST_ROOM = 256  # steps in the first stretch, doubled from stretch to stretch
 
@@ -500,3 +501,32 @@ def sparse_factors(eq: Equations, x: Array, step: float, method: Tableau) -> Fac
         row_order=np.argsort(new_row).astype(np.int64),
         column_order=np.argsort(new_column).astype(np.int64),
     )
+
+
+def crossings(path: Path, column: int, level: float) -> tuple[Array, NDArray[np.int64]]:
+    """Times at which a kept unknown crosses `level`, and the direction of each (1 up, -1 down), by bisection on the polynomials.
+
+    A step is looked at in LOOKS stretches; a pair of crossings inside one of them is not seen.
+    """
+    if not len(path.times):
+        return np.zeros(0), np.zeros(0, dtype=np.int64)
+    coefficients = path.polynomials[:, :, column]
+    base = path.starts[:, column] - level
+
+    def value(steps: NDArray[np.int64], q: Array) -> Array:
+        total = np.zeros(len(q))
+        for a in range(coefficients.shape[1] - 1, -1, -1):
+            total = (total + coefficients[steps, a]) * q
+        return np.asarray(base[steps] + total)
+
+    looks = np.linspace(0.0, 1.0, LOOKS + 1)
+    every = np.arange(len(base))
+    above = np.column_stack([value(every, np.full(len(base), q)) >= 0.0 for q in looks])
+    steps, pieces = np.nonzero(above[:, 1:] != above[:, :-1])
+    low, high = looks[pieces], looks[pieces + 1]
+    rising = above[steps, pieces + 1]
+    for _ in range(50):
+        middle = 0.5 * (low + high)
+        beyond = (value(steps, middle) >= 0.0) == rising
+        low, high = np.where(beyond, low, middle), np.where(beyond, middle, high)
+    return path.times[steps] + high * path.steps[steps], np.where(rising, 1, -1).astype(np.int64)
