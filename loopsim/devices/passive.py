@@ -15,9 +15,10 @@ from loopsim.devices.contribution import (
     difference,
     through,
 )
-from loopsim.devices.curves import CurveValues
+from loopsim.devices.curves import CurveValues, everywhere
 from loopsim.devices.fields import Scalar, named, needed, quantity
 from loopsim.devices.thermal import REFERENCE
+from loopsim.errors import CircuitError
 
 TWO = ("from", "to")
 
@@ -38,7 +39,11 @@ class Resistor:
     def contribution(self, ambient: Scalar) -> Contribution:
         resistance = self.resistance
         if self.temperature_coefficient is not None:
-            resistance = resistance * (1.0 + self.temperature_coefficient * (ambient - REFERENCE))
+            drift = 1.0 + self.temperature_coefficient * (ambient - REFERENCE)
+            if not everywhere(drift > 0.0):
+                text = "the temperature coefficient turns the resistance negative at this temperature"
+                raise CircuitError("field-range", text, hint="a linear coefficient holds near 25 degC only")
+            resistance = resistance * drift
         return Contribution(
             conductance=across("from", "to", 1.0 / resistance),
             branches=(Branch("from", "to", "conductance"),),

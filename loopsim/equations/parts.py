@@ -164,7 +164,7 @@ def part_contribution(
     try:
         contribution = device_of(entry, values, curves).contribution(values[AMBIENT])
     except CircuitError as fault:
-        if fault.span is not None or fault.code == "field-range":
+        if fault.span is not None or f"`{entry.part.name}" in fault.message:
             raise
         raise CircuitError(
             fault.code, f"`{entry.part.name}`: {fault.message}", entry.part.span, fault.hint

@@ -20,13 +20,14 @@ from loopsim.circuit import Circuit
 from loopsim.devices.phi import SLOPE, VALUE
 from loopsim.equations.plan import plan
 from loopsim.equations.slots import Layout
+from loopsim.equations.system import System
 from loopsim.errors import CircuitError
 
 Array: TypeAlias = NDArray[np.float64]
 Index: TypeAlias = NDArray[np.int64]
 
-# unknowns from which a Newton step with these arrays is faster than with dense ones (tests/benchmarks/sparse_or_dense.py;
-# see docs)
+# unknowns from which a Newton step with these arrays is faster than with dense ones: about 85 on a ladder, 130 on a square
+# grid (tests/benchmarks/sparse_or_dense.py)
 SPARSE_FROM = 120
 
 
@@ -157,6 +158,13 @@ def _pairs(
     a = B.indptr[:-1][k] + within // np.maximum(other[k], 1)
     b = right.indptr[:-1][k] + within % np.maximum(other[k], 1)
     return B.indices[a].astype(np.int64), right.indices[b].astype(np.int64), B.data[a], right.data[b], k
+
+
+def assemble_by_size(circuit: Circuit, settings: Mapping[str, Any] | None = None) -> System | SparseSystem:
+    """One member of the system in the form that is faster for its size: sparse from SPARSE_FROM unknowns on."""
+    if len(plan(circuit).unknowns) < SPARSE_FROM:
+        return plan(circuit).assemble(settings or {})
+    return assemble_sparse(circuit, settings)
 
 
 def assemble_sparse(circuit: Circuit, settings: Mapping[str, Any] | None = None) -> SparseSystem:

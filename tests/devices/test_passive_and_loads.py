@@ -163,6 +163,12 @@ def test_a_constant_power_load_draws_its_power_above_dropout_and_less_below():
     assert below * 0.4 < 20.0
 
 
+def test_a_drift_that_turns_a_resistance_negative_is_refused():
+    circuit = probed("resistor", {"from": 1.0, "to": 0.0}, resistance=1e3, temperature_coefficient=-0.01)
+    with pytest.raises(CircuitError, match="`x`: the temperature coefficient"):
+        assemble(circuit, {"ambient": 130.0})
+
+
 def test_ranges_are_checked_with_the_name_of_the_field():
     with pytest.raises(CircuitError) as fault:
         assemble(probed("resistor", {"from": 1.0, "to": 0.0}, resistance=-5.0))

@@ -43,7 +43,10 @@ NESTED = operation("tanh", operation("+", net("a"), operation("*", 2.0, operatio
 CASES = [
     (LINEAR, lambda v: 3 * (v["a"] - v["b"]) + 0.5),
     (operation("negative", operation("/", net("a"), 4.0)), lambda v: -v["a"] / 4),
-    (operation("*", operation("tanh", operation("*", net("a"), 2.0)), 5.0), lambda v: 5 * np.tanh(2 * v["a"])),
+    (
+        operation("*", operation("tanh", operation("*", net("a"), 2.0)), 5.0),
+        lambda v: 5 * np.tanh(2 * v["a"]),
+    ),
     (operation("-", operation("atan", net("b")), operation("^", 2.0, 3.0)), lambda v: np.arctan(v["b"]) - 8),
     (NESTED, lambda v: np.tanh(v["a"] + 2 * np.arctan(v["b"]))),
     (operation("*", 1e3, current("probe")), lambda _: 2.0),

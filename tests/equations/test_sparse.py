@@ -9,7 +9,8 @@ from test_balance import random_circuit
 
 from loopsim.build import CircuitBuilder
 from loopsim.equations.assemble import assemble
-from loopsim.equations.sparse import assemble_sparse
+from loopsim.equations.sparse import SPARSE_FROM, SparseSystem, assemble_by_size, assemble_sparse
+from loopsim.equations.system import System
 from loopsim.errors import CircuitError
 
 
@@ -57,6 +58,14 @@ def test_a_circuit_without_nonlinear_rows_has_a_jacobian_too():
     b.chain("a", "r", "gnd", device="resistor", resistance=4.0)
     system = assemble_sparse(b.circuit())
     assert system.factor(np.zeros(2)).solve(system.s) == pytest.approx([2.0, 0.5])
+
+
+def test_the_size_decides_between_dense_and_sparse():
+    assert isinstance(assemble_by_size(KILN), System)
+    b = CircuitBuilder("long")
+    for j in range(SPARSE_FROM):
+        b.chain(f"n{j}" if j else "gnd", f"r{j}", f"n{j + 1}", device="resistor", resistance=1.0)
+    assert isinstance(assemble_by_size(b.circuit()), SparseSystem)
 
 
 def test_a_batch_is_refused():
