@@ -35,3 +35,8 @@ def cell_width(text: str) -> int:
 def padded(text: str, width: int) -> str:
     """`text` with blanks behind it up to `width` columns."""
     return text + " " * (width - cell_width(text))
+
+
+def printable_lines(text: str) -> str:
+    """`text` with every line made printable; its line ends stay."""
+    return "\n".join(printable(line) for line in text.split("\n"))

@@ -10,7 +10,7 @@ JSON = Option("--json", "", "one JSON document on standard output (docs/referenc
 CSV = Option("--csv", "FILE", "write the table to FILE, numbers in SI units with all their digits")
 PLOT = Option("--plot", "FILE", "draw it; the suffix decides: svg, png or pdf (extra `plot`)", values.picture)
 BOX = Option("--box", "VOLTS", "look at all net voltages within +/- VOLTS (1 kV)", values.positive_volts)
-BUDGET = Option("--budget", "SECONDS", "stop proving after SECONDS and say what is left (60 s)", values.positive_seconds)
+BUDGET = Option("--budget", "SECONDS", "stop after SECONDS and say what is left (60 s)", values.positive_seconds)
 SEED = Option("--seed", "N", "start of the random numbers, where a verb draws any (0)", values.whole)
 JOBS = Option("--jobs", "N", "worker processes, where a verb uses any (one a core)", values.count)
 WATCH = Option("--watch", "NET,...", "the nets to show", values.names)
@@ -34,6 +34,57 @@ STATES = Verb(
     "complete: proved that there are no others within the box. found: search only. undecided: places left over.",
 )
 
+START = Option("--start", "START", "off (supplies come up), the letter of a state, or net=volts,... (off)", values.start)
+NUDGE = Option("--nudge", "VOLTS", "leave the start along its fastest growth; the sign chooses the side", values.volts)
+TOLERANCE = Option("--tolerance", "SHARE", "wanted error over amplitude (1e-5, a cycle 1e-8)", values.share)
+
+TRANSIENT = Verb(
+    "transient",
+    "FILE",
+    "response in time, and the state it ends in",
+    (
+        ("loopsim transient circuits/comparators/cistern_pump.loop --for 1ms", "from supplies off, as they come up"),
+        ("loopsim transient cistern_pump.loop --for 1ms --start B --nudge 1mV", "leaving the unstable state upwards"),
+        ("loopsim transient cistern_pump.loop --for 1ms --csv run.csv --plot run.svg", "as a table and as a picture"),
+    ),
+    (
+        Option("--for", "TIME", "how long to follow it", values.positive_seconds),
+        START,
+        NUDGE,
+        Option("--ramp", "TIME", "how long supplies take to come up (a hundredth of --for)", values.positive_seconds),
+        WATCH,
+        TOLERANCE,
+        SET,
+        JSON,
+        CSV,
+        PLOT,
+    ),
+    "loopsim.cli.motion:run_transient",
+)
+
+CYCLE = Verb(
+    "cycle",
+    "FILE",
+    "sustained oscillation: period, frequency, duty, swing, multipliers",
+    (
+        ("loopsim cycle circuits/oscillators/cistern_blinker.loop", "the oscillation that starts with the supplies"),
+        ("loopsim cycle cistern_blinker.loop --start out=1V --plot cycle.svg", "from another start, drawn"),
+    ),
+    (
+        START,
+        NUDGE,
+        Option("--for", "TIME", "look for it for at most this long (until it repeats)", values.positive_seconds),
+        WATCH,
+        TOLERANCE,
+        BUDGET,
+        SET,
+        JSON,
+        CSV,
+        PLOT,
+    ),
+    "loopsim.cli.motion:run_cycle",
+)
+
 INSPECT = Verb(
     "inspect",
     "FILE",
@@ -55,7 +106,7 @@ TIDY = Verb(
     "loopsim.cli.tidy:run",
 )
 
-VERBS = {verb.name: verb for verb in (STATES, INSPECT, TIDY)}
+VERBS = {verb.name: verb for verb in (STATES, TRANSIENT, CYCLE, INSPECT, TIDY)}
 
 # Named in the design, not built yet: asked for, they get an answer that says so.
 PLANNED = {

@@ -15,6 +15,11 @@ from loopsim.errors import AnalysisError, CircuitError, InternalError, LoopsimEr
 from loopsim.output.engineering import engineering
 from loopsim.printable import printable
 
+# codes of AnalysisError that say what was asked wrongly; the others say that an answer was not reached
+ASKED_WRONGLY = frozenset(
+    {"box", "driven", "duration", "not-recorded", "nudge", "ramp", "singular", "start", "time", "tolerance", "unknown-net"}
+)
+
 LIBRARIES = ("numpy", "scipy", "networkx", "lark", "matplotlib", "tqdm", "numba", "dask", "distributed")
 
 
@@ -38,7 +43,9 @@ def explain(error: BaseException, words: Sequence[str]) -> tuple[str, Exit]:
             return str(error), Exit.MISTAKE
         case AnalysisError():
             last = ", ".join(f"{printable(net)} = {engineering(volts, 'V')}" for net, volts in error.last_good.items())
-            return printable(str(error)) + (f"\n    last good state: {last}" if last else ""), Exit.UNDECIDED
+            return printable(str(error)) + (f"\n    last good state: {last}" if last else ""), (
+                Exit.MISTAKE if error.code in ASKED_WRONGLY else Exit.UNDECIDED
+            )
         case InternalError():
             return _report(error, words), Exit.INTERNAL
         case LoopsimError():

@@ -5,8 +5,11 @@ from __future__ import annotations
 import contextlib
 import difflib
 import os
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
+from loopsim.cli.options import nearest
+from loopsim.cli.values import quantity
 from loopsim.errors import CircuitError, LoopsimError, Span
 from loopsim.printable import printable
 
@@ -60,6 +63,22 @@ def read_circuit(path: str) -> Circuit:
     return load(path)
 
 
+
+
+def settings(circuit: Circuit, pairs: Sequence[tuple[str, str]]) -> dict[str, float]:
+    """The values of `--set` words [SI; degC for `ambient`]; CircuitError for an unknown let or a value that it cannot have."""
+    found: dict[str, float] = {}
+    for name, text in pairs:
+        parameter = circuit.parameters.get(name)
+        if parameter is None:
+            lets = [known for known in circuit.parameters if "." not in known]
+            hint = nearest(name, circuit.parameters) or f"its lets: {', '.join(lets)}"
+            raise CircuitError("unknown-let", f"{circuit.name} has no let `{name}`", hint=hint)
+        try:
+            found[name] = quantity(text, parameter.unit)
+        except ValueError as reason:
+            raise CircuitError("wrong-value", f"--set {name}={text}: {reason}") from None
+    return found
 
 
 def write_file(path: str, text: str) -> tuple[str, ...]:

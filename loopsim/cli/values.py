@@ -88,3 +88,29 @@ def picture(text: str) -> str:
     if not text.lower().endswith((".svg", ".png", ".pdf")):
         raise ValueError("the suffix decides the kind of picture: svg, png or pdf")
     return text
+
+
+def start(text: str) -> str | dict[str, float]:
+    """`off`, the letter of a state, or net=volts,net=volts,... as a mapping."""
+    if "=" not in text:
+        return text.strip()
+    found: dict[str, float] = {}
+    for item in text.split(","):
+        net, equals, value = item.partition("=")
+        if not equals or not net.strip():
+            raise ValueError(f"`{item}`: write it as off, a letter, or net=volts,net=volts")
+        found[net.strip()] = quantity(value, "V")
+    return found
+
+
+def volts(text: str) -> float:
+    """Volts of either sign."""
+    return quantity(text, "V")
+
+
+def share(text: str) -> float:
+    """A pure number above zero and below one."""
+    value = quantity(text, "")
+    if not 0.0 < value < 1.0:
+        raise ValueError("has to lie between 0 and 1")
+    return value

@@ -1,0 +1,69 @@
+"""Real documents against the JSON Schemas in docs/reference/schema."""
+
+import json
+from pathlib import Path
+from typing import Any
+
+import jsonschema
+import pytest
+
+from loopsim.cli import main
+from loopsim.cli.catalogue import VERBS
+
+ROOT = Path(__file__).parent.parent
+SCHEMAS = ROOT / "docs/reference/schema"
+JSON_VERBS = sorted(name for name, verb in VERBS.items() if any(option.name == "--json" for option in verb.options))
+
+
+def schema(verb: str) -> dict[str, Any]:
+    return json.loads((SCHEMAS / f"{verb}.json").read_text(encoding="utf-8"))
+
+
+def answer(words: list[str], capsys: pytest.CaptureFixture[str]) -> dict[str, Any]:
+    """What the command prints with --json, NaN and Infinity refused."""
+    capsys.readouterr()
+    main([*words, "--json"])
+
+    def refuse(word: str) -> None:
+        raise AssertionError(f"{word} in JSON")
+
+    return json.loads(capsys.readouterr().out, parse_constant=refuse)
+
+
+@pytest.mark.parametrize("verb", JSON_VERBS)
+def test_every_verb_that_speaks_json_has_a_schema_of_its_own(verb: str) -> None:
+    found = schema(verb)
+    jsonschema.Draft202012Validator.check_schema(found)
+    assert found["properties"]["verb"] == {"const": verb}
+    assert found["additionalProperties"] is False
+
+
+def test_no_schema_is_left_without_a_verb() -> None:
+    assert sorted(path.stem for path in SCHEMAS.glob("*.json")) == JSON_VERBS
+
+
+@pytest.mark.parametrize("path", sorted((ROOT / "circuits").rglob("*.loop")), ids=lambda path: path.stem)
+def test_states_and_inspect_of_every_circuit_answer_by_their_schema(path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    if path.parent.name == "parts":
+        pytest.skip("a parts file is no circuit")
+    for verb in ("states", "inspect"):
+        document = answer([verb, str(path), "--budget", "5"] if verb == "states" else [verb, str(path)], capsys)
+        jsonschema.validate(document, schema(verb), cls=jsonschema.Draft202012Validator)
+        assert document["file"] == str(path)
+
+
+def test_a_schema_refuses_what_it_should(capsys: pytest.CaptureFixture[str]) -> None:
+    document = answer(["states", str(ROOT / "circuits/comparators/cistern_pump.loop")], capsys)
+    found = schema("states")
+    for change in (
+        {"extra": 1},
+        {"schema": "loopsim/2"},
+        {"verb": "inspect"},
+        {"complete": "yes"},
+        {"undecided": -1},
+        {"complete": True, "undecided": 1},
+        {"states": [{**document["states"][0], "stable": "maybe"}]},
+        {"states": [{**document["states"][0], "nets": {"out": None}}]},
+    ):
+        with pytest.raises(jsonschema.ValidationError):
+            jsonschema.validate({**document, **change}, found, cls=jsonschema.Draft202012Validator)
