@@ -25,7 +25,9 @@ class CurveValues:
 def everywhere(condition: Any) -> bool:
     """Whether a comparison holds for every member of a batch. What is neither a truth value nor an array of them is not
     judged."""
-    return bool(np.all(condition)) if isinstance(condition, bool | np.bool_ | np.ndarray) else True
+    if isinstance(condition, bool):
+        return condition
+    return bool(np.all(condition)) if isinstance(condition, np.bool_ | np.ndarray) else True
 
 
 def polynomial_curve(coefficients: Sequence[Scalar]) -> CurveValues:

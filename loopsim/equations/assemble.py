@@ -12,11 +12,12 @@ from loopsim.circuit import Circuit
 from loopsim.devices.contribution import Contribution, Symbol
 from loopsim.devices.fields import Scalar
 from loopsim.devices.phi import VALUE
-from loopsim.equations.parameters import unknown_let
+from loopsim.equations.parameters import number, unknown_let
 from loopsim.equations.parts import PartPlan, part_contribution, resolve
 from loopsim.equations.plan import Plan, plan
 from loopsim.equations.system import System
 from loopsim.equations.traced import AFFINE
+from loopsim.errors import CircuitError
 
 Array: TypeAlias = NDArray[np.float64]
 
@@ -35,6 +36,42 @@ def parameter_values(circuit: Circuit, settings: Mapping[str, Any] | None = None
     """Every let and every toleranced value [SI; degC for `ambient`], the set ones as set and those that depend on them
     accordingly."""
     return plan(circuit).values(settings or {})
+
+
+def let_range(
+    circuit: Circuit, let: str, settings: Mapping[str, Any] | None = None
+) -> tuple[float, float] | None:
+    """The range a let is traced over (`in LO .. HI`) [SI; degC for `ambient`], None where none is stated.
+
+    Its ends may be formulas of other lets, taken at `settings`. CircuitError `let-range` where the first end is not below
+    the second.
+    """
+    parameter = _known(circuit, let).parameters.formulas[let]
+    if parameter.low is None or parameter.high is None:
+        return None
+    values = parameter_values(circuit, settings)
+    low, high = (
+        float(number(end, values, circuit.curves, f"the range of `{let}`", parameter.span))
+        for end in (parameter.low, parameter.high)
+    )
+    if not low < high:
+        raise CircuitError(
+            "let-range", f"the range of `{let}` begins at {low:g} and ends at {high:g}", parameter.span
+        )
+    return low, high
+
+
+def tolerance_limits(
+    circuit: Circuit, settings: Mapping[str, Any] | None = None
+) -> dict[str, tuple[float, float]]:
+    """Smallest and largest value of every toleranced quantity [SI] whose nominal value `settings` does not replace."""
+    found, given = plan(circuit), settings or {}
+    values = found.values(given)
+    return {
+        name: parameter.tolerance.limits(float(values[name]))
+        for name, parameter in found.parameters.formulas.items()
+        if parameter.tolerance is not None and name not in given
+    }
 
 
 def dependence(circuit: Circuit, let: str) -> frozenset[str]:

@@ -9,7 +9,15 @@ from probing import solve
 
 from loopsim.build import CircuitBuilder, current, let, net, operation, waveform
 from loopsim.circuit import Circuit, Curve, Tolerance
-from loopsim.equations.assemble import assemble, dependence, is_affine, parameter_values, pin_currents
+from loopsim.equations.assemble import (
+    assemble,
+    dependence,
+    is_affine,
+    let_range,
+    parameter_values,
+    pin_currents,
+    tolerance_limits,
+)
 from loopsim.equations.plan import plan
 from loopsim.errors import CircuitError
 from loopsim.expressions import LetRef, Number
@@ -212,6 +220,30 @@ def test_affine_lets_are_told_apart():
     # the promise: s is a straight line in the let
     s = [assemble(circuit, {"straight": value}).s for value in (0.0, 1.0, 4.0)]
     assert np.allclose(s[2], s[0] + 4.0 * (s[1] - s[0]), rtol=1e-14)
+
+
+def test_ranges_and_limits_are_worked_out_from_their_formulas():
+    b = CircuitBuilder("ranges")
+    b.let("supply", 9.0, tolerance=Tolerance(-0.1, 0.2, relative=True))
+    b.let(
+        "level",
+        4.5,
+        low=operation("negative", 1.0),
+        high=let("supply"),
+        tolerance=Tolerance(-0.5, 0.25, relative=False),
+    )
+    b.let("wrong", 1.0, low=2.0, high=2.0)
+    b.chain("gnd", "v", "n", device="voltage_source", voltage=let("supply"))
+    circuit = b.circuit()
+    assert let_range(circuit, "level") == (-1.0, 9.0)
+    assert let_range(circuit, "level", {"supply": 12.0}) == (-1.0, 12.0)
+    assert let_range(circuit, "supply") is None
+    with pytest.raises(CircuitError, match="begins at 2"):
+        let_range(circuit, "wrong")
+    limits = tolerance_limits(circuit)
+    assert limits["supply"] == pytest.approx((8.1, 10.8))
+    assert limits["level"] == (4.0, 4.75)
+    assert list(tolerance_limits(circuit, {"supply": 9.0})) == ["level"]
 
 
 def test_supply_is_the_share_of_independent_sources():
