@@ -70,6 +70,18 @@ def states(circuit: Circuit, settings: Mapping[str, Any] | None = None, *, box: 
         watch=watch,
         notes=_notes(listed),
         remainder=found.remainder,
+        chosen=worth_showing(circuit, settings),
+        units={name: parameter.unit for name, parameter in circuit.parameters.items()},
+    )
+
+
+def worth_showing(circuit: Circuit, settings: Mapping[str, Any] | None = None) -> tuple[str, ...]:
+    """Settings to print in a heading, in the circuit's order: what was set, and the lets that are made to be varied."""
+    given = settings or {}
+    return tuple(
+        name
+        for name, parameter in circuit.parameters.items()
+        if name in given or (name != "ambient" and parameter.low is not None)
     )
 
 

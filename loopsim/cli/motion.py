@@ -88,4 +88,4 @@ def _none(request: Request, circuit: str, answer: AnalysisError) -> Answer:
         empty |= {"verdict": "no cycle", "multipliers": [], "exact": False, "swing": {}, "duty": {}, "times": [], "nets": {}}
         whole = document("cycle", {**empty, "notes": [answer.message]}, circuit=circuit, file=request.paths[0])
         return Answer(document_text(whole))
-    return Answer(f"{printable(circuit)}: no cycle: {printable(answer.message)}\n")
+    return Answer(f"no cycle: {printable(answer.message)}\n")
