@@ -82,7 +82,7 @@ def all_points(system: System, box: float, deadline: float = np.inf) -> Points:
             if not seen[key].complete:
                 undecided += len(seen[key].clusters) + len(seen[key].left)
                 remainder += _describe(system, block, seen[key])
-        counts = np.array([len(f.x) for f in found])[member]
+        counts = np.array([len(f.x) for f in found], dtype=np.int64)[member]
         if counts.sum() > MAX_POINTS:
             raise AnalysisError("too-many-states", f"more than {MAX_POINTS} operating points", hint="split the circuit into its parts")
         parent = np.repeat(np.arange(len(member)), counts)
