@@ -34,6 +34,11 @@ class PhiRows:
             found.append((int(kind), rows if len(present) > 1 else slice(None), parameters))
         return tuple(found)
 
+    @cached_property
+    def rising(self) -> NDArray[np.bool_]:
+        """(m,) rows whose function rises everywhere."""
+        return np.isin(self.kinds, sorted(phi_enclosure.MONOTONE))
+
     def take(self, rows: NDArray[np.int64]) -> PhiRows:
         """The same functions at other positions; rows: (k,) indices."""
         return PhiRows(self.kinds[rows], self.parameters[rows])

@@ -45,6 +45,7 @@ def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.
     if np.any(match < 0):
         lost = [f"{kind} {name}" for (kind, name), row in zip(system.unknowns, match, strict=True) if row < 0]
         raise AnalysisError("singular", f"no equation determines {', '.join(lost)}", hint="look for a loop of sources or a floating net")
+    own = np.diag(pattern(system))
     # match[j]: the row that answers for unknown j; unknown j needs every unknown of that row
     count, labels = connected_components(csr_array(entries[match]), directed=True, connection="strong")
     members: list[list[int]] = [[] for _ in range(count)]
@@ -64,7 +65,11 @@ def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.
     while ready:
         _, k = heappop(ready)
         unknowns = np.array(members[k], dtype=np.int64)
-        found.append((unknowns, match[unknowns].astype(np.int64)))
+        rows = match[unknowns].astype(np.int64)
+        if np.array_equal(np.sort(rows), unknowns) and np.all(own[unknowns]):
+            # the balances of the very nets: each answers for its own
+            rows = unknowns
+        found.append((unknowns, rows))
         for other in serves[k]:
             needs[other].discard(k)
             if not needs[other]:

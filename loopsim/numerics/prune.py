@@ -11,7 +11,7 @@ matrix over the box (A. Neumaier, Interval Methods for Systems of Equations, 199
 from __future__ import annotations
 
 import time
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from typing import Protocol, TypeAlias
 
@@ -19,6 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from loopsim.numerics.enclosure import HUGE, TINY, UNIT, divide_clear, down, gamma, middle, multiply, radius, scale, up
+from loopsim.numerics.newton import newton
 
 Array: TypeAlias = NDArray[np.float64]
 Index: TypeAlias = NDArray[np.int64]
@@ -37,6 +38,8 @@ MAX_CLUSTERS = 400  # more undecided tiny boxes than this mean a continuum of so
 class Rows(Protocol):
     """The scalar functions of all rows (loopsim.devices.phi_rows.PhiRows)."""
 
+    @property
+    def rising(self) -> NDArray[np.bool_]: ...
     def take(self, rows: Index) -> "Rows": ...
     def value(self, w: Array) -> Array: ...
     def slope(self, w: Array) -> Array: ...
@@ -81,6 +84,29 @@ class Problem:
             return np.zeros(0, dtype=np.int64)
         plain = ~np.any(self.V != 0.0, axis=1) & (self.d_low == 1.0) & (self.d_high == 1.0)
         return np.flatnonzero(~plain)
+
+    @cached_property
+    def monotone(self) -> bool:
+        """Whether every slope matrix anywhere is positive definite, so that there is at most one solution at all: G is, and every row is a
+        rising function of the very difference that its current flows across (R. J. Duffin 1947; Sandberg and Willson 1969, from memory).
+
+        The entries of such a row of W, and of its column of B, are equal in size to the last bit, so their product is exactly symmetric.
+        """
+        if self.m == 0 or len(self.product) or not np.all(self.rows.rising) or not np.array_equal(self.G, self.G.T):
+            return False
+        for k in range(self.m):
+            w, b = self.W[k], self.B[:, k]
+            used = w != 0.0
+            if not np.array_equal(used, b != 0.0) or len(np.unique(np.abs(w[used]))) > 1 or len(np.unique(np.abs(b[used]))) > 1:
+                return False
+            if not np.array_equal(np.sign(w), np.sign(b)):
+                return False
+        room = 4.0 * (self.n + 2) * self.n * UNIT * float(np.max(np.abs(self.G), initial=0.0))
+        try:
+            np.linalg.cholesky(self.G - room * np.eye(self.n))
+        except np.linalg.LinAlgError:
+            return False
+        return True
 
     @cached_property
     def layout(self) -> "Layout":
@@ -757,6 +783,10 @@ def search(
     """Every solution with x in [low, high]: (n,) each. deadline: time.monotonic() after which the rest is left. scale: (n,) size of each
     unknown for the word small (default 1)."""
     began = time.monotonic()
+    if problem.monotone:
+        only = _only_point(problem, 0.5 * (low + high))
+        if only is not None:
+            return replace(only, seconds=time.monotonic() - began)
     state = _Search(problem, np.ones(problem.n) if scale is None else scale)
     queue: list[Boxes] = [boxes_over(problem, low[None].astype(float), high[None].astype(float))]
     ended = False
@@ -775,6 +805,27 @@ def search(
         x, spread, np.concatenate(clusters) if clusters else np.zeros((0, 2, n)), np.concatenate(left) if left else np.zeros((0, 2, n)),
         state.boxes, time.monotonic() - began,
     )
+
+
+def _only_point(problem: Problem, start: Array) -> Found | None:
+    """The one solution of a monotone problem, wherever it lies; None where it was not reached."""
+    c, _, _, _, s, _ = problem.centres
+
+    def residual(x: Array) -> Array:
+        return _times(problem.G, x) + _times(problem.B, problem.rows.value(_times(problem.W, x) + c)) - s
+
+    def jacobian(x: Array) -> Array:
+        return np.asarray(problem.G + problem.B @ (problem.rows.slope(_times(problem.W, x) + c)[..., None] * problem.W))
+
+    root = newton(residual, jacobian, np.stack([np.zeros_like(start), start]))
+    if not root.converged.any():
+        return None
+    with np.errstate(all="ignore"):
+        certified = certify(problem, root.x[root.converged][:1])
+    if not certified.good[0]:
+        return None
+    none = np.zeros((0, 2, problem.n))
+    return Found(certified.x, certified.spread, none, none, 1, 0.0)
 
 
 def _take(queue: list[Boxes]) -> Boxes:
