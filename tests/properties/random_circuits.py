@@ -87,8 +87,8 @@ def junction_network(seed: int) -> Circuit:
 
 
 def any_network(seed: int) -> Circuit:
-    """Two to six nets with every device that has a law of its own, values over many decades, supplies up to 30 V: nothing is known about
-    the count, so it is what a proof and a search are compared on."""
+    """Two to six nets with every device that has a law of its own, values over many decades, supplies up to 30 V: nothing is
+    known about the count, so it is what a proof and a search are compared on."""
     random = np.random.default_rng([34, seed])
     build = CircuitBuilder(f"mixture_{seed}")
     nets = [f"n{k}" for k in range(int(random.integers(2, 6)))]

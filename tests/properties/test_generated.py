@@ -6,26 +6,29 @@ from array_systems import assert_points, solve
 from generated import MAKERS, case
 
 
-def check(seed):
+def decided(seed, budget):
+    """Whether the list was proved complete; if so, or if not, no point in it may be wrong, and a complete list misses none."""
     made, box = case(seed)
-    found = solve(made.system, box, budget=20.0)
+    found = solve(made.system, box, budget=budget)
     assert len(found.x) <= made.count, f"{made.family}: {len(found.x)} points where {made.count} are"
-    assert found.complete, f"{made.family}: not decided within the budget"
-    assert len(found.x) == made.count, f"{made.family}, box {box:.3g}: {len(found.x)} of {made.count} points called complete"
-    if made.points is not None:
-        assert_points(found.x, made.points, 1e-7)
+    if found.complete:
+        assert len(found.x) == made.count, f"{made.family}, box {box:.3g}: {len(found.x)} of {made.count} called complete"
+        if made.points is not None:
+            assert_points(found.x, made.points, 1e-7)
+    return found.complete
 
 
 @pytest.mark.parametrize("seed", range(100))
 def test_known_counts(seed):
-    check(seed)
+    assert decided(seed, budget=30.0)
 
 
 @pytest.mark.slow
 @pytest.mark.parametrize("block", range(20))
-def test_known_counts_thousand(block):
-    for seed in range(1000 + 50 * block, 1050 + 50 * block):
-        check(seed)
+def test_known_counts_of_a_thousand(block):
+    """Undecided is an honest answer, but not a frequent one."""
+    open_ones = [seed for seed in range(1000 + 50 * block, 1050 + 50 * block) if not decided(seed, budget=10.0)]
+    assert len(open_ones) <= 2, open_ones
 
 
 def test_the_set_holds_every_family_and_many_counts():
@@ -36,18 +39,23 @@ def test_the_set_holds_every_family_and_many_counts():
     assert max(counts) > 15
 
 
-@pytest.mark.parametrize("seed", range(25))
-def test_a_point_outside_the_box_is_not_counted(seed):
-    """The box is part of what is proved: with the points on both sides of its edge exactly the inner ones are found."""
-    made, _ = case(seed * 5)  # hidden roots
-    assert made.points is not None
-    reach = np.sort(np.max(np.abs(made.points), axis=1))
-    if len(reach) < 2:
-        pytest.skip("one point has no two sides")
-    gaps = np.diff(reach)
-    cut = int(np.argmax(gaps))
-    if gaps[cut] < 1e-3:
-        pytest.skip("no gap to put the edge into")
-    found = solve(made.system, float(0.5 * (reach[cut] + reach[cut + 1])), budget=20.0)
-    assert found.complete
-    assert len(found.x) == cut + 1
+def edges():
+    """(case, half width of a box with points on both sides of its edge, how many are inside) for the hidden roots among the seeds."""
+    for seed in range(0, 150, 5):
+        made, _ = case(seed)
+        reach = np.sort(np.max(np.abs(made.points), axis=1)) if made.count > 1 else np.zeros(0)
+        gaps = np.diff(reach)
+        if len(gaps) and np.max(gaps) > 1e-3:
+            cut = int(np.argmax(gaps))
+            yield made, float(0.5 * (reach[cut] + reach[cut + 1])), cut + 1
+
+
+def test_a_point_outside_the_box_is_not_counted():
+    """The box is part of what is proved: with points on both sides of its edge exactly the inner ones are found."""
+    tried = 0
+    for made, box, inside in edges():
+        found = solve(made.system, box, budget=30.0)
+        assert found.complete
+        assert len(found.x) == inside
+        tried += 1
+    assert tried >= 15
