@@ -7,8 +7,8 @@ currents are determined only where prescribed voltages form no loop.
 
 from __future__ import annotations
 
-from collections import Counter
-from collections.abc import Iterable, Sequence
+from collections import Counter, defaultdict
+from collections.abc import Iterable, Mapping, Sequence, Set
 from dataclasses import dataclass
 from functools import cached_property
 from itertools import pairwise
@@ -18,8 +18,8 @@ import networkx as nx
 import scipy.sparse
 from scipy.sparse.csgraph import maximum_bipartite_matching
 
-from loopsim.circuit import Circuit
-from loopsim.devices.contribution import Branch
+from loopsim.circuit import Circuit, Part
+from loopsim.devices.contribution import Contribution
 from loopsim.equations.parts import Key, part_contribution, resolve
 from loopsim.equations.plan import plan
 from loopsim.equations.sparse import assemble_sparse
@@ -27,6 +27,9 @@ from loopsim.errors import CircuitError
 
 GROUND: Key = ("net", "gnd")
 SHOWN = 6  # names in one message
+ROUNDING = (
+    1e-12  # of the sum of magnitudes within one part: body and gate of a transistor cancel to a few 1e-16
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,10 +57,11 @@ class _Edge:
 
 @dataclass(frozen=True)
 class _Graph:
-    """All branches; order: position of every part and net, for stable messages."""
+    """All branches, and what every part contributes, for questions that the branches alone do not answer."""
 
     circuit: Circuit
     edges: tuple[_Edge, ...]
+    contributions: tuple[tuple[Part, Contribution], ...]
 
     @cached_property
     def nodes(self) -> tuple[Key, ...]:
@@ -66,15 +70,53 @@ class _Graph:
             found.update(dict.fromkeys(node for node in (edge.first, edge.second) if node[0] != "current"))
         return tuple(found)
 
-    @cached_property
-    def looked_at(self) -> frozenset[Key]:
-        """Nodes whose voltage, and ("current", part) whose current, something reads."""
-        return frozenset(edge.first for edge in self.edges if edge.way == "sense")
+    def is_settled(self, shift: Mapping[Key, float]) -> bool:
+        """Whether unknowns that move together by `shift` are held by some equation, and hold some equation themselves:
+        unless both are so, no value of the parts makes the equations regular."""
+        return self.is_felt(shift) and self.depends(shift)
+
+    def is_felt(self, shift: Mapping[Key, float]) -> bool:
+        """Whether any equation notices that the unknowns move together by `shift`."""
+        total: defaultdict[Key, float] = defaultdict(float)
+        for part, given in self.contributions:
+            rows: dict[Key, list[float]] = {}
+            for row, column, value in given.conductance:
+                rows.setdefault(resolve(part, row), []).append(shift.get(resolve(part, column), 0.0) * value)
+            for key, terms in rows.items():
+                total[key] += _settled(terms)
+            for line in (line for term in given.terms for line in (term.control, term.factor)):
+                if _settled([shift.get(resolve(part, symbol), 0.0) * value for symbol, value in line]):
+                    return True
+        return any(value for key, value in total.items() if key != GROUND)
+
+    def depends(self, combination: Mapping[Key, float]) -> bool:
+        """Whether the sum of the equations of these unknowns, weighted so, holds any unknown at all."""
+        total: defaultdict[Key, float] = defaultdict(float)
+        for part, given in self.contributions:
+            columns: dict[Key, list[float]] = {}
+            for row, column, value in given.conductance:
+                columns.setdefault(resolve(part, column), []).append(
+                    combination.get(resolve(part, row), 0.0) * value
+                )
+            for key, terms in columns.items():
+                total[key] += _settled(terms)
+            for term in given.terms:
+                if _settled(
+                    [combination.get(resolve(part, row), 0.0) * weight for row, weight in term.outputs]
+                ):
+                    return True
+        return any(value for key, value in total.items() if key != GROUND)
 
     def part_names(self, names: Iterable[str]) -> tuple[str, ...]:
         """In the circuit's order."""
         wanted = set(names)
         return tuple(part.name for part in self.circuit.parts if part.name in wanted)
+
+
+def _settled(terms: list[float]) -> float:
+    """Their sum, nil where it is no more than rounding."""
+    total = sum(terms)
+    return total if abs(total) > ROUNDING * sum(map(abs, terms)) else 0.0
 
 
 def findings(circuit: Circuit) -> tuple[Finding, ...]:
@@ -109,14 +151,14 @@ _HINTS = {
 def _graph(circuit: Circuit) -> _Graph:
     laid_out = plan(circuit)
     edges: list[_Edge] = []
+    contributions = []
     for entry in laid_out.parts:
-        branches: Sequence[Branch] = part_contribution(
-            entry, laid_out.parameters.nominal, circuit.curves
-        ).branches
-        for branch in branches:
+        contribution = part_contribution(entry, laid_out.parameters.nominal, circuit.curves)
+        contributions.append((entry.part, contribution))
+        for branch in contribution.branches:
             ends = resolve(entry.part, branch.first), resolve(entry.part, branch.second)
             edges.append(_Edge(entry.part.name, *ends, branch.way, branch.controlled))
-    return _Graph(circuit, tuple(edges))
+    return _Graph(circuit, tuple(edges), tuple(contributions))
 
 
 def _listed(names: Sequence[str]) -> str:
@@ -138,40 +180,33 @@ def _floating(graph: _Graph) -> list[Finding]:
     """Groups of nets that no conductance and no prescribed voltage joins to gnd.
 
     A current that follows other voltages may still set them (a transconductor into a capacitor, in a loop): then the sum of
-    their balances depends on the unknowns, and their common voltage is looked at. Such a group is no fault.
+    their balances depends on some unknown, and some equation feels their common voltage. Such a group is no fault by itself,
+    but several of them may hang on each other only.
     """
     joined: nx.Graph[Key] = nx.Graph()
     joined.add_nodes_from(graph.nodes)
     joined.add_edges_from(
         (edge.first, edge.second) for edge in graph.edges if edge.way in ("conductance", "voltage")
     )
-    found = []
-    for group in nx.connected_components(joined):
-        if GROUND in group:
-            continue
-        open_ways = [edge for edge in graph.edges if edge.way in ("current", "capacitance")]
-        crossing = [edge for edge in open_ways if (edge.first in group) != (edge.second in group)]
-        if any(edge.way == "current" and edge.controlled for edge in crossing) and group & graph.looked_at:
-            continue
-        nets = tuple(name for name in graph.circuit.nets if ("net", name) in group)
-        currents = graph.part_names(edge.part for edge in crossing if edge.way == "current")
-        capacitors = graph.part_names(edge.part for edge in crossing if edge.way == "capacitance")
-        touching = graph.part_names(
-            part.name for part in graph.circuit.parts if set(part.pins.values()) & set(nets)
-        )
-        ways = {edge.way for edge in graph.edges if edge.first in group or edge.second in group}
-        inputs = touching if ways == {"sense"} else ()
-        found.append(_floating_finding(nets, currents, capacitors, touching, inputs))
-    return found
+    groups = [group for group in nx.connected_components(joined) if GROUND not in group]
+    loose = [group for group in groups if not graph.is_settled(dict.fromkeys(group, 1.0))]
+    held = set().union(*(group for group in groups if group not in loose))
+    if held and not graph.is_settled(dict.fromkeys(held, 1.0)):
+        loose.append(held)
+    return [_floating_finding(graph, group) for group in loose]
 
 
-def _floating_finding(
-    nets: tuple[str, ...],
-    currents: tuple[str, ...],
-    capacitors: tuple[str, ...],
-    touching: tuple[str, ...],
-    inputs: tuple[str, ...],
-) -> Finding:
+def _floating_finding(graph: _Graph, group: Set[Key]) -> Finding:
+    """What joins the group to the rest, if anything."""
+    nets = tuple(name for name in graph.circuit.nets if ("net", name) in group)
+    crossing = [edge for edge in graph.edges if (edge.first in group) != (edge.second in group)]
+    currents = graph.part_names(edge.part for edge in crossing if edge.way == "current")
+    capacitors = graph.part_names(edge.part for edge in crossing if edge.way == "capacitance")
+    touching = graph.part_names(
+        part.name for part in graph.circuit.parts if set(part.pins.values()) & set(nets)
+    )
+    ways = {edge.way for edge in graph.edges if edge.first in group or edge.second in group}
+    inputs = touching if ways == {"sense"} else ()
     what = f"net {_listed(nets)}" if len(nets) == 1 else f"nets {_listed(nets)}"
     if currents:
         beside = f" and capacitors {_listed(capacitors)}" if capacitors else ""
@@ -192,7 +227,7 @@ def _floating_finding(
 
 def _voltage_loops(graph: _Graph) -> list[Finding]:
     """Loops of prescribed voltages (inductors count, at DC). The current round a loop is free, so the loop is a fault,
-    unless something reads a current of it and a value of it follows other unknowns: then the two may settle each other."""
+    unless some equation feels that current and the sum of the loop's laws depends on some unknown."""
     forest: nx.Graph[Key] = nx.Graph()
     forest.add_nodes_from(graph.nodes)
     owners: dict[frozenset[Key], _Edge] = {}
@@ -207,12 +242,28 @@ def _voltage_loops(graph: _Graph) -> list[Finding]:
                 else nx.shortest_path(forest, edge.first, edge.second)
             )
             loop = [edge, *(owners[frozenset(pair)] for pair in pairwise(path))]
-            read = any(("current", entry.part) in graph.looked_at for entry in loop)
-            if not (read and any(entry.controlled for entry in loop)):
+            if not graph.is_settled(_round_the_loop(graph, loop, path)):
                 found.append(_loop_finding(graph, loop, path))
             continue
         forest.add_edge(edge.first, edge.second)
         owners[frozenset((edge.first, edge.second))] = edge
+    return found
+
+
+def _round_the_loop(graph: _Graph, loop: Sequence[_Edge], path: Sequence[Key]) -> dict[Key, float]:
+    """A current of 1 A round a loop: the unknown current of every branch. The first branch closes the path, against its arrow."""
+    names = {part.name: {unknown.name for unknown in given.unknowns} for part, given in graph.contributions}
+
+    def current(entry: _Edge) -> Key:
+        return (
+            ("current", entry.part)
+            if "current" in names[entry.part]
+            else ("internal", f"{entry.part}.output_current")
+        )
+
+    found = {current(loop[0]): -1.0}
+    for entry, start in zip(loop[1:], path[:-1], strict=True):
+        found[current(entry)] = 1.0 if entry.first == start else -1.0
     return found
 
 

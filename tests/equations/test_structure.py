@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from loopsim.build import CircuitBuilder, current, net, operation
+from loopsim.circuit import Circuit
 from loopsim.equations.assemble import assemble
 from loopsim.equations.structure import check, findings
 from loopsim.errors import CircuitError
@@ -138,6 +139,62 @@ def test_a_fatal_fault_makes_the_equations_singular(case):
         jacobian = jacobian / np.maximum(np.max(np.abs(jacobian), axis=0, keepdims=True), 1e-300)
     singular = np.linalg.svd(jacobian, compute_uv=False)
     assert singular[-1] < 1e-12 * singular[0]
+
+
+def random_network(seed: int) -> Circuit:
+    """Linear parts and op-amps at random places, with values of a like size, so that a singular Jacobian stands out."""
+    rng = np.random.default_rng(seed)
+    b = CircuitBuilder(f"network{seed}")
+    nets = ["gnd", *(f"n{j}" for j in range(rng.integers(2, 6)))]
+    b.chain("gnd", "first", "n0", device="resistor", resistance=1.0)
+    for j in range(int(rng.integers(len(nets), 2 * len(nets) + 2))):
+        start, end, x, y = (
+            str(net) for net in (*rng.choice(nets, 2, replace=False), *rng.choice(nets, 2, replace=False))
+        )
+        device = str(rng.choice(DEVICES, p=SHARES))
+        value = float(rng.uniform(0.5, 2.0))
+        if device == "opamp":
+            pins = {"plus": x, "minus": y, "out": end if end != "gnd" else start, "high": start, "low": end}
+            b.part(f"p{j}", "opamp", pins, gain=3.0, knee=1.0, clamp_ratio=1.0)
+        elif device.startswith("controlled"):
+            reading = current("first") if rng.random() < 0.2 else operation("-", net(x), net(y))
+            formula = operation("*", value, reading)
+            if all(
+                name in ("gnd", *(n for part in b.circuit().parts for n in part.pins.values()))
+                for name in (x, y)
+            ):
+                b.chain(start, f"p{j}", end, device=device, formula=formula)
+        else:
+            b.chain(start, f"p{j}", end, device=device, **{FIELD[device]: value})
+    return b.circuit()
+
+
+FIELD = {
+    "resistor": "resistance", "capacitor": "capacitance", "inductor": "inductance", "voltage_source": "voltage",
+    "current_source": "current",
+}  # fmt: skip
+DEVICES = [*FIELD, "controlled_voltage_source", "controlled_current_source", "opamp"]
+SHARES = [0.45, 0.13, 0.08, 0.1, 0.08, 0.05, 0.07, 0.04]
+
+
+def test_findings_are_fatal_exactly_where_the_equations_are_singular():
+    counts = {True: 0, False: 0}
+    for seed in range(400):
+        circuit = random_network(seed)
+        system = assemble(circuit)
+        rng = np.random.default_rng(seed + 10**6)
+        regular = False
+        for _ in range(3):
+            values = np.linalg.svd(system.jacobian(rng.normal(0.0, 0.5, system.n)), compute_uv=False)
+            regular = regular or bool(values[-1] > 1e-11 * values[0])
+        fatal = [finding for finding in findings(circuit) if finding.fatal]
+        assert bool(fatal) != regular, (
+            seed,
+            fatal,
+            [(part.name, part.device, dict(part.pins)) for part in circuit.parts],
+        )
+        counts[regular] += 1
+    assert min(counts.values()) > 50
 
 
 def test_a_sound_circuit_has_no_findings():
