@@ -75,3 +75,9 @@ def test_laid_out_in_the_standard_way(path):
 
     text = path.read_text(encoding="utf-8")
     assert tidy(text) == text
+
+
+def test_the_page_of_circuits_names_every_file():
+    page = (ROOT / "docs" / "reference" / "circuits.md").read_text(encoding="utf-8")
+    listed = set(re.findall(r"^\| `([a-z_/]+\.loop)` \|", page, re.MULTILINE))
+    assert listed == {path.relative_to(LIBRARY).as_posix() for path in CIRCUITS}

@@ -40,7 +40,7 @@ def test_the_set_holds_every_family_and_many_counts():
 
 
 def edges():
-    """(case, half width of a box with points on both sides of its edge, how many are inside) for the hidden roots among the seeds."""
+    """(case, half width of a box with points on both sides of its edge, how many are inside) for hidden roots."""
     for seed in range(0, 150, 5):
         made, _ = case(seed)
         reach = np.sort(np.max(np.abs(made.points), axis=1)) if made.count > 1 else np.zeros(0)
