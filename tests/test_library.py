@@ -1,12 +1,15 @@
 """Every shipped circuit: it reads, it is laid out in the standard way, its values are preferred ones, and its requirements
 hold."""
 
+import itertools
 import re
 from pathlib import Path
 
 import pytest
 
 import loopsim
+from loopsim.equations.assemble import parameter_values
+from loopsim.expressions import evaluate
 
 ROOT = Path(__file__).parents[1]
 LIBRARY = ROOT / "circuits"
@@ -81,3 +84,49 @@ def test_the_page_of_circuits_names_every_file():
     page = (ROOT / "docs" / "reference" / "circuits.md").read_text(encoding="utf-8")
     listed = set(re.findall(r"^\| `([a-z_/]+\.loop)` \|", page, re.MULTILINE))
     assert listed == {path.relative_to(LIBRARY).as_posix() for path in CIRCUITS}
+
+
+def bindings(requirement, values):
+    """Every combination of the `at` values [SI]."""
+    names = [let for let, _ in requirement.at]
+    choices = [[float(evaluate(formula, values)) for formula in formulas] for _, formulas in requirement.at]
+    return [dict(zip(names, chosen, strict=True)) for chosen in itertools.product(*choices)]
+
+
+def limits(target, values):
+    """(low, high) of one entry of a relation [SI]."""
+    _, low, high = target
+    return float(evaluate(low, values)), float(evaluate(high, values))
+
+
+def holds(requirement, points, values):
+    """Whether a requirement on counts or values holds for a list of operating points."""
+    if requirement.in_stable_states:
+        points = [p for p in points if p.stable is True]
+    if requirement.measure == "values":
+        found = sorted(float(evaluate(requirement.target, values, dict(p.nets))) for p in points)
+    else:
+        wanted = {"states": (True, False, None), "stable states": (True,), "unstable states": (False,)}[requirement.measure]
+        found = [float(sum(p.stable in wanted for p in points))]
+    ranges = sorted(limits(target, values) for target in requirement.relation.targets)
+    if requirement.relation.form == "set":
+        near = all(any(low <= v <= high for low, high in ranges) for v in found)
+        return near and all(any(low <= v <= high for v in found) for low, high in ranges)
+    assert requirement.relation.form in ("equal", "range")
+    return bool(found) and all(low <= v <= high for v in found for low, high in ranges)
+
+
+@pytest.mark.parametrize("path", CIRCUITS, ids=name)
+def test_requirements_on_states_hold(path):
+    circuit = loopsim.load(str(path))
+    served = [r for r in circuit.requirements if r.measure in ("states", "stable states", "unstable states", "values")]
+    assert served
+    known = {}
+    for requirement in served:
+        for settings in bindings(requirement, parameter_values(circuit)):
+            key = tuple(sorted(settings.items()))
+            if key not in known:
+                known[key] = circuit.states(**settings)
+            points = known[key]
+            assert points.complete, f"{settings}: {points}"
+            assert holds(requirement, points, parameter_values(circuit, settings)), f"{requirement.text}\n{points}"
