@@ -8,7 +8,7 @@ import pytest
 from probing import solve
 
 from loopsim.build import CircuitBuilder, current, let, net, operation, waveform
-from loopsim.circuit import Circuit, Curve, Tolerance
+from loopsim.circuit import Circuit, Curve, Part, Tolerance
 from loopsim.equations.assemble import (
     assemble,
     dependence,
@@ -19,7 +19,7 @@ from loopsim.equations.assemble import (
     tolerance_limits,
 )
 from loopsim.equations.plan import plan
-from loopsim.errors import CircuitError
+from loopsim.errors import CircuitError, Span
 from loopsim.expressions import LetRef, Number
 
 ARRAYS = ("C", "G", "B", "W", "c", "V", "d", "s", "supply", "parameters")
@@ -395,3 +395,29 @@ def test_lets_may_be_given_in_any_order_and_depth():
     b.chain("gnd", "v", "n", device="voltage_source", voltage=let("a0"))
     b.chain("n", "r", "gnd", device="resistor", resistance=1.0)
     assert parameter_values(b.circuit())["a0"] == 400.0
+
+
+def test_a_mistake_in_a_part_carries_its_place():
+    place = Span("pump.loop", 7, 12, 19, "a -- r: -5 ohm -- gnd")
+    for fields in ({"resistance": Number(-5.0)}, {"resistance": Number(5.0), "colour": Number(1.0)}, {}):
+        part = Part("r", "resistor", {"from": "a", "to": "gnd"}, fields, place)
+        with pytest.raises(CircuitError) as fault:
+            assemble(Circuit("pump", nets=("a",), parts=(part,)))
+        assert fault.value.span == place
+        assert str(fault.value).startswith("pump.loop:7:12: ")
+    slewing = Part(
+        "u",
+        "opamp",
+        dict.fromkeys(("plus", "minus", "out", "high", "low"), "a"),
+        {"slew_rate": Number(1e6)},
+        place,
+    )
+    with pytest.raises(CircuitError) as fault:
+        assemble(Circuit("pump", nets=("a",), parts=(slewing,)))
+    assert (fault.value.code, fault.value.span) == ("field-missing", place)
+
+
+def test_an_empty_circuit_has_an_empty_system():
+    system = assemble(Circuit("empty"))
+    assert (system.n, system.m) == (0, 0)
+    assert system.residual(np.zeros(0)).shape == (0,)
