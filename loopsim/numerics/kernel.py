@@ -33,7 +33,8 @@ CONTROL_SIZE = 5
 SAFETY = 0.9  # factor on the predicted step
 SHRINK, GROW = 0.125, 8.0  # a step changes at most by these
 LANDING = 1.0 + 1e-9  # a step that would end this close to a corner ends on it
-BEND, TOO_BENT = 0.15, 0.3  # wanted and largest change of the Jacobian over a step; see docs/explanation/transient.md
+BEND, TOO_BENT = 0.25, 0.5  # wanted and largest change of the Jacobian over a step; see docs/explanation/transient.md
+ROUNDING = 0.1  # of the tolerance: changes of Newton that stop shrinking below it are rounding, which grows with C / h
 SHORT = 1e-9  # times the first step: shorter than any time constant that grows
 SMALL_PIVOT = 1e-9  # over the largest entry of its row: below it the sparse pivots are chosen anew
 SINE, LINEAR = 0, 1  # forms of a waveform
@@ -555,14 +556,16 @@ def newton_verdict(iteration: int, limit: int, full: bool, size: float, state: A
         if full:  # every iteration has its own Jacobian: the next change is in proportion to the square of this one
             state[RATE] = size / max(state[NEWTON_NORM], 1e-150) ** 2
             state[NEWTON_NORM] = size
-            if size <= 0.1 * control[NEWTON_LIMIT] or state[RATE] * size * size <= control[NEWTON_LIMIT]:
+            if size <= 0.1 * control[NEWTON_LIMIT] or (theta > 0.5 and size <= ROUNDING) or state[RATE] * size * size <= control[NEWTON_LIMIT]:
                 return 0.0
             return 0.25 if theta > 2.0 else -1.0
         if theta >= 0.99:
             # at the level of rounding the sizes no longer shrink, and are small enough all the same
-            return 0.5 if size > 0.1 * control[NEWTON_LIMIT] else 0.0
+            return 0.5 if size > max(ROUNDING, 0.1 * control[NEWTON_LIMIT]) else 0.0
         state[RATE] = theta / (1.0 - theta)
         left = state[RATE] * size * theta ** (limit - 1 - iteration) / control[NEWTON_LIMIT]
+        if size <= ROUNDING and (theta > 0.5 or iteration == limit - 1):
+            return 0.0
         if left >= 1.0:
             return 0.8 * max(1e-4, min(20.0, left)) ** (-1.0 / (4.0 + limit - 1 - iteration))
     state[NEWTON_NORM] = size
@@ -627,7 +630,7 @@ def advance(
     work_pair, pair = np.zeros(n, dtype=np.complex128), np.zeros(n, dtype=np.complex128)
     pieces, jac_stage = np.zeros((forms.size, 3)), np.zeros(jac.size)
     time, step = state[TIME], state[STEP]
-    recorded, rejected_last = 0, False
+    recorded, rejected_last, chosen = 0, False, False
     if counts[SIGN] == 0:  # the sign that the determinant has for short steps
         jacobian(
             x, W, W_columns, W_values, c, V, V_columns, V_values, d, kinds, parameters, base_jac, stamp_place, stamp_row, stamp_value,
@@ -650,8 +653,10 @@ def advance(
                 continue
             state[TIME], state[STEP] = time, step
             return TOO_SMALL, recorded
-        if counts[FRESH] != 0:  # a new start or a corner is behind: nothing of the last step's shape holds
+        if counts[FRESH] != 0 or not chosen:
             choose_pieces(forms, wave_starts, wave_data, time + 0.5 * step, pieces)
+            chosen = True
+        if counts[FRESH] != 0:  # a new start or a corner is behind: nothing of the last step's shape holds
             counts[FRESH] = 0
             state[POLYNOMIAL_STEP] = 0.0
         if not rejected_last:

@@ -11,7 +11,7 @@ matrix over the box (A. Neumaier, Interval Methods for Systems of Equations, 199
 from __future__ import annotations
 
 import time
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Protocol, TypeAlias
 
@@ -86,27 +86,24 @@ class Problem:
         return np.flatnonzero(~plain)
 
     @cached_property
-    def monotone(self) -> bool:
-        """Whether every slope matrix anywhere is positive definite, so that there is at most one solution at all: G is, and every row is a
-        rising function of the very difference that its current flows across (R. J. Duffin 1947; Sandberg and Willson 1969, from memory).
+    def passive(self) -> tuple[float, Array] | None:
+        """(least, losses (m,)): the symmetric part of every J = G + B diag(a) W with slopes a >= 0 is at least `least` - sum a losses; None
+        where that is of no use.
 
-        The entries of such a row of W, and of its column of B, are equal in size to the last bit, so their product is exactly symmetric.
+        True of rising two-terminal elements in a linear network that only takes power (R. J. Duffin 1947; I. W. Sandberg, A. N. Willson
+        1969, from memory): B_k is then d_k W_k, and what rounding left of the difference is the loss.
         """
-        if self.m == 0 or len(self.product) or not np.all(self.rows.rising) or not np.array_equal(self.G, self.G.T):
-            return False
-        for k in range(self.m):
-            w, b = self.W[k], self.B[:, k]
-            used = w != 0.0
-            if not np.array_equal(used, b != 0.0) or len(np.unique(np.abs(w[used]))) > 1 or len(np.unique(np.abs(b[used]))) > 1:
-                return False
-            if not np.array_equal(np.sign(w), np.sign(b)):
-                return False
-        room = 4.0 * (self.n + 2) * self.n * UNIT * float(np.max(np.abs(self.G), initial=0.0))
-        try:
-            np.linalg.cholesky(self.G - room * np.eye(self.n))
-        except np.linalg.LinAlgError:
-            return False
-        return True
+        if self.m == 0 or len(self.product) or not np.all(self.rows.rising):
+            return None
+        symmetric = 0.5 * (self.G + self.G.T)
+        least = float(np.linalg.eigvalsh(symmetric)[0]) - 16.0 * self.n * UNIT * float(np.linalg.norm(self.G))
+        size = np.sum(self.W * self.W, axis=1)
+        d = np.sum(self.B.T * self.W, axis=1) / np.where(size > 0.0, size, 1.0)
+        if least <= 0.0 or np.any(d < 0.0) or np.any((size == 0.0) & np.any(self.B != 0.0, axis=0)):
+            return None
+        line = d[:, None] * self.W
+        rest = np.linalg.norm(self.B.T - line, axis=1) + 4.0 * UNIT * (np.linalg.norm(self.B, axis=0) + np.linalg.norm(line, axis=1))
+        return least * (1.0 - 1e-9), rest * np.sqrt(size) * (1.0 + 1e-9)
 
     @cached_property
     def layout(self) -> "Layout":
@@ -641,7 +638,11 @@ def injective(problem: Problem, boxes: Boxes) -> NDArray[np.bool_]:
     if v_through is not None:
         image_v = _times(v_through, load) + _times(v, slack)
         good &= np.all(image_v * (1.0 + 8 * gamma(k)) < yv, axis=1)
-    return np.asarray(good & np.any(inverse != 0.0, axis=(1, 2)))
+    good &= np.any(inverse != 0.0, axis=(1, 2))
+    if problem.passive is not None:
+        least, losses = problem.passive
+        good |= (a_low >= 0.0).all(axis=1) & (np.maximum(a_high, 0.0) @ losses * (1.0 + 1e-9) < least)
+    return np.asarray(good)
 
 
 @dataclass(frozen=True, eq=False)
@@ -783,10 +784,6 @@ def search(
     """Every solution with x in [low, high]: (n,) each. deadline: time.monotonic() after which the rest is left. scale: (n,) size of each
     unknown for the word small (default 1)."""
     began = time.monotonic()
-    if problem.monotone:
-        only = _only_point(problem, 0.5 * (low + high))
-        if only is not None:
-            return replace(only, seconds=time.monotonic() - began)
     state = _Search(problem, np.ones(problem.n) if scale is None else scale)
     queue: list[Boxes] = [boxes_over(problem, low[None].astype(float), high[None].astype(float))]
     ended = False
@@ -807,25 +804,27 @@ def search(
     )
 
 
-def _only_point(problem: Problem, start: Array) -> Found | None:
-    """The one solution of a monotone problem, wherever it lies; None where it was not reached."""
-    c, _, _, _, s, _ = problem.centres
+def _damped_points(problem: Problem, start: Array) -> Array:
+    """Damped Newton from each start, for boxes proved one to one on which plain Newton did not settle. (b, n), NaN-free."""
+    c, _, d, _, s, _ = problem.centres
+    has_product = len(problem.product) > 0
+
+    def parts(x: Array) -> tuple[Array, Array]:
+        w = _times(problem.W, x) + c
+        return w, _times(problem.V, x) + d if has_product else np.ones_like(w)
 
     def residual(x: Array) -> Array:
-        return _times(problem.G, x) + _times(problem.B, problem.rows.value(_times(problem.W, x) + c)) - s
+        w, u = parts(x)
+        return _times(problem.G, x) + _times(problem.B, problem.rows.value(w) * u) - s
 
     def jacobian(x: Array) -> Array:
-        return np.asarray(problem.G + problem.B @ (problem.rows.slope(_times(problem.W, x) + c)[..., None] * problem.W))
+        w, u = parts(x)
+        lines = (problem.rows.slope(w) * u)[..., None] * problem.W
+        if has_product:
+            lines = lines + problem.rows.value(w)[..., None] * problem.V
+        return np.asarray(problem.G + problem.B @ lines)
 
-    root = newton(residual, jacobian, np.stack([np.zeros_like(start), start]))
-    if not root.converged.any():
-        return None
-    with np.errstate(all="ignore"):
-        certified = certify(problem, root.x[root.converged][:1])
-    if not certified.good[0]:
-        return None
-    none = np.zeros((0, 2, problem.n))
-    return Found(certified.x, certified.spread, none, none, 1, 0.0)
+    return newton(residual, jacobian, start).x
 
 
 def _take(queue: list[Boxes]) -> Boxes:
@@ -914,6 +913,9 @@ def _settle(state: _Search, boxes: Boxes) -> NDArray[np.bool_]:
         part = boxes.pick(candidates)
         points = newton_points(problem, middle(part.low[:, at.x], part.high[:, at.x]))
         certified = certify(problem, points)
+        if not certified.good.all():
+            points = np.where(certified.good[:, None], points, _damped_points(problem, middle(part.low[:, at.x], part.high[:, at.x])))
+            certified = certify(problem, points)
         joined = _join(part, start_points(problem, certified.x, certified.spread))
         # one to one over the hull of the box and the point: the point is the only solution either holds
         closed = certified.good & injective(problem, joined)
