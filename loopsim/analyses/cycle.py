@@ -95,9 +95,8 @@ class Cycle:
 
     def extremes(self, net: str) -> tuple[float, float]:
         """Lowest and highest voltage of a net in the period [V]."""
-        low, high = _extremes(self.path)
         column = self.columns[("net", net)]
-        return float(low[column]), float(high[column])
+        return tuple(float(sign * _top(self.path, column, sign)) for sign in (-1.0, 1.0))  # type: ignore[return-value]
 
     def swing(self, net: str) -> float:
         """Highest less lowest voltage [V]."""
@@ -247,22 +246,27 @@ def _same_cycle(one: Cycle, other: Cycle) -> bool:
     return True
 
 
-def repetition(path: Path, columns: Sequence[int], floor: float) -> float | None:
-    """Time between the last two passages through the middle of the swing in the same state, or None. columns: what must come back;
-    floor: swings below this do not count."""
-    if not len(path.times):
+def repetition(path: Path, nets: Sequence[int], floor: float) -> float | None:
+    """Time between the last two passages of the widest net through its middle in the same state, or None.
+
+    nets: columns that are nets; all columns must come back. floor: swings of nets below this [V] do not count.
+    """
+    if not len(path.times) or not len(nets):
         return None
-    times, low, high = _recent_extremes(path)
-    swings = (high - low)[list(columns)]
-    if not len(swings) or float(swings.max()) <= floor:
+    half, low, high = _recent_extremes(path)
+    swings = (high - low)[list(nets)]
+    if float(swings.max()) <= floor:
         return None
-    column = list(columns)[int(np.argmax(swings))]
+    column = list(nets)[int(np.argmax(swings))]
     passages, signs = crossings(path, column, 0.5 * (low + high)[column])
-    rises = passages[(signs > 0) & (passages >= times)]
+    rises = passages[(signs > 0) & (passages >= half)]
     if len(rises) < 3:
         return None
-    states = path.at(rises)[:, list(columns)]
-    apart = np.max(np.abs(states - states[-1]) / np.maximum(swings, floor), axis=1)
+    states = path.at(rises)
+    # a constant has no swing of its own to be measured by
+    scale = np.maximum(high - low, 1e-3 * np.maximum(np.abs(low), np.abs(high)))
+    scale[list(nets)] = np.maximum(scale[list(nets)], floor)
+    apart = np.max(np.abs(states - states[-1]) / np.maximum(scale, 1e-300), axis=1)
     same = np.flatnonzero(apart[:-1] <= SAME)
     if len(same) < 2:
         return None
@@ -290,6 +294,16 @@ def _extremes(path: Path, first: int = 0) -> tuple[Array, Array]:
         values = path.starts[first:] + total
         low, high = np.minimum(low, values.min(axis=0)), np.maximum(high, values.max(axis=0))
     return low, high
+
+
+def _top(path: Path, column: int, sign: float) -> float:
+    """Largest value of sign * unknown over the whole path: the best of a coarse grid, then a fine one around it."""
+    coarse = np.linspace(0.0, 1.0, 17)
+    times = (path.times[:, None] + path.steps[:, None] * coarse[:-1]).ravel()
+    times = np.append(times, path.end)
+    best = int(np.argmax(sign * path.at(times)[:, column]))
+    fine = np.linspace(times[max(best - 1, 0)], times[min(best + 1, len(times) - 1)], 1001)
+    return float(np.max(sign * path.at(fine)[:, column]))
 
 
 def _peaks(path: Path) -> Array:
@@ -333,6 +347,7 @@ def _search(
     begin, length, steps, nudges = 0.0, 10.0 * scale, 0, 0
     peak: Array | None = None
     while True:
+        length = length if duration is None else min(length, max(duration - begin, 1e-3 * duration))
         path = plan.solve(x, begin, begin + length, SEARCH_TOLERANCE, peak=peak)
         if path.outcome != 0:
             raise AnalysisError("step-too-small", f"the run that looks for a cycle stopped at {path.end:.6g} s")
@@ -358,7 +373,7 @@ def _search(
         steps += path.accepted
         begin, length = path.end, length * LENGTHEN
         peak = np.maximum(plan.floor, np.minimum(_peaks(path), np.abs(x) + 10.0 * plan.volts))
-        past = duration is not None and begin >= duration
+        past = duration is not None and begin >= duration * (1.0 - 1e-9)
         if past or steps > MAX_STEPS or time.monotonic() > deadline:
             raise AnalysisError("no-repetition", f"no state came back within {begin:.4g} s", hint="look longer, or use transient")
 

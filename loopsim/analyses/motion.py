@@ -81,8 +81,8 @@ def motion(system: System, x: Array, duration: float, ramp: float = 0.0) -> Moti
     volt_rows = np.array([unit == "V" for unit in system.row_units] or [False] * system.n)
     extents = np.abs(system.s) + sum((np.abs(timed.column) * _extent(timed.waveform) for timed in system.timed), np.zeros(system.n))
     nets = np.array([kind == "net" for kind, _ in system.unknowns])
-    volts = max(float(np.max(extents[volt_rows], initial=0.0)), float(np.max(np.abs(x[nets]), initial=0.0)))
-    volts = volts if volts > 0.0 else 1.0
+    volts = float(np.max(extents[volt_rows], initial=0.0))
+    volts = max(volts if volts > 0.0 else 1.0, float(np.max(np.abs(x[nets]), initial=0.0)))
     moving = np.abs(system.C).sum(axis=0) > 0.0
     current = np.array([kind == "current" for kind, _ in system.unknowns])
     floor = np.where(current, AMPERE_FLOOR * volts, VOLT_FLOOR * volts)
@@ -230,21 +230,29 @@ def newton(system: System, x: Array, s: Array, *, push: float = 0.0, anchor: Arr
     return None
 
 
-def held_start(circuit_nets: Mapping[str, float], system: System, s: Array, duration: float) -> Array:
-    """The state at time 0 in which the given nets have the given voltages and everything else is at rest around them, then let go:
-    capacitors keep their charge and inductors their current, the rest follows at once. AnalysisError `start` where that cannot be."""
-    nets = list(circuit_nets)
+def held_start(given: Mapping[str, float], system: System, s: Array, duration: float) -> Array:
+    """The state at time 0 in which the given nets have the given voltages, inductors carry nothing, and all else is at rest around
+    that; then it is let go: capacitors keep their charge and inductors their current, the rest follows at once.
+
+    AnalysisError `start` where that cannot be.
+    """
+    nets = list(given)
     places = [system.index[("net", net)] for net in nets]
-    n, k = system.n, len(nets)
-    volts = np.array([circuit_nets[net] for net in nets], dtype=float)
-    # a current into each held net makes up for what holds it
-    pick = np.zeros((n, k))
-    pick[places, np.arange(k)] = 1.0
+    volts = np.array([given[net] for net in nets], dtype=float)
+    coils = [j for j, (kind, _) in enumerate(system.unknowns) if kind == "current" and np.any(system.C[:, j] != 0.0)]
+    n, k = system.n, len(nets) + len(coils)
+    # a current into each held net and a voltage in each coil make up for what holds them
+    pick, hold = np.zeros((n, k)), np.zeros((k, n))
+    pick[places, np.arange(len(nets))] = 1.0
+    for i, j in enumerate(coils):
+        pick[:, len(nets) + i] = system.C[:, j] / np.max(np.abs(system.C[:, j]))
+    hold[np.arange(k), places + coils] = 1.0
+    wanted = np.concatenate([volts, np.zeros(len(coils))])
     x, feed = np.zeros(n), np.zeros(k)
     x[places] = volts
     for _ in range(2 * PATIENCE):
-        matrix = np.block([[system.jacobian(x), -pick], [pick.T, np.zeros((k, k))]])
-        right = -np.concatenate([system.residual(x, s) - pick @ feed, x[places] - volts])
+        matrix = np.block([[system.jacobian(x), -pick], [hold, np.zeros((k, k))]])
+        right = -np.concatenate([system.residual(x, s) - pick @ feed, hold @ x - wanted])
         try:
             step = np.linalg.solve(matrix, right)
         except np.linalg.LinAlgError:
@@ -255,14 +263,14 @@ def held_start(circuit_nets: Mapping[str, float], system: System, s: Array, dura
         if damping == 1.0 and largest <= 1e-10 * max(1.0, float(np.max(np.abs(x)))):
             break
     else:
-        raise AnalysisError("start", f"no state has {_listed(circuit_nets)} with the rest at rest around it")
+        raise AnalysisError("start", f"no state has {_listed(given)} with the rest at rest around it")
     off = np.abs(x[places] - volts)
     if np.any(off > 1e-6 * np.maximum(1.0, np.abs(volts))):
         worst = nets[int(np.argmax(off))]
-        raise AnalysisError("start", f"{worst} cannot start at {circuit_nets[worst]:g} V: a source holds it at {x[places[int(np.argmax(off))]]:.6g} V")
+        raise AnalysisError("start", f"{worst} cannot start at {given[worst]:g} V: a source holds it at {x[places[int(np.argmax(off))]]:.6g} V")
     released = newton(system, x, s, push=1.0 / (INSTANT * duration), anchor=x)
     if released is None:
-        raise AnalysisError("start", f"the circuit cannot be let go from {_listed(circuit_nets)}")
+        raise AnalysisError("start", f"the circuit cannot be let go from {_listed(given)}")
     return released
 
 
@@ -273,16 +281,15 @@ def _listed(nets: Mapping[str, float]) -> str:
 def growing_direction(system: System, x: Array) -> tuple[complex, Array] | None:
     """The fastest growing eigenvalue of C x' = -J x at a rest point [1/s] and its direction (real part, largest net 1), or None where
     nothing grows."""
-    values, vectors = scipy.linalg.eig(-system.jacobian(x), system.C)
     with np.errstate(all="ignore"):
+        values, vectors = scipy.linalg.eig(-system.jacobian(x), system.C)
         size = np.abs(values)
-        finite = np.isfinite(values) & (size < 1e30)
+        # an infinite eigenvalue comes out as a huge one whose direction stores nothing
+        stored = np.linalg.norm(system.C @ vectors, axis=0) * size
+        pushed = np.linalg.norm(system.jacobian(x) @ vectors, axis=0)
+        finite = np.isfinite(values) & (size < 1e30) & (np.abs(stored - pushed) <= 1e-6 * np.maximum(stored, pushed))
     nets = np.array([kind == "net" for kind, _ in system.unknowns])
-    # an infinite eigenvalue comes out as a huge one whose direction stores nothing
-    stored = np.linalg.norm(system.C @ vectors, axis=0) * size
-    pushed = np.linalg.norm(system.jacobian(x) @ vectors, axis=0)
-    finite &= np.abs(stored - pushed) <= 1e-6 * np.maximum(stored, pushed)
-    growing = np.flatnonzero(finite & (values.real > 1e-9 * size))
+    growing = np.flatnonzero(finite & (values.real > 1e-9 * np.where(finite, size, 0.0)))
     if not len(growing):
         return None
     best = growing[int(np.argmax(values[growing].real))]

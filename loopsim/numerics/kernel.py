@@ -21,7 +21,7 @@ from loopsim.numerics.compiled import compile_entry, compile_kernel, compile_tab
 DONE, FULL, TOO_SMALL, NOT_FINITE, PIVOT = 0, 1, 2, 3, 4
 
 # places in `state` (floats): what one call hands to the next
-TIME, STEP, LAST_STEP, LAST_ERROR, RATE, POLYNOMIAL_STEP, NEWTON_NORM = 0, 1, 2, 3, 4, 5, 6
+TIME, STEP, LAST_STEP, LAST_ERROR, RATE, POLYNOMIAL_STEP, NEWTON_NORM, THETA = 0, 1, 2, 3, 4, 5, 6, 7
 STATE_SIZE = 8
 # places in `counts` (integers)
 STEPS, REJECTED, NEWTON_FAILED, EVALUATIONS, FACTORS, CORNER, WORST, FIRST, FRESH, SIGN = 0, 1, 2, 3, 4, 5, 6, 7, 8, 9
@@ -547,12 +547,17 @@ def newton_norm(R: Any, scale: Any, weight: Any) -> float:
 def newton_verdict(iteration: int, limit: int, full: bool, size: float, state: Any, control: Any) -> float:
     """What the sizes of the changes say: 0 converged, negative go on, positive the factor on the step of a new try.
 
-    RATE holds theta / (1 - theta), the estimate of the change still to come over the last one; NEWTON_NORM the last size.
+    RATE holds theta / (1 - theta), the estimate of the change still to come over the last one (full: the factor on its square);
+    NEWTON_NORM the last size; THETA the last ratio of two sizes that rounding had no part in.
     """
     if not (size < 1e300):
         return 0.5
+    if iteration == 0:
+        state[THETA] = 0.0
     if iteration > 0:
         theta = size / max(state[NEWTON_NORM], 1e-300)
+        if state[NEWTON_NORM] > ROUNDING:
+            state[THETA] = theta
         if full:  # every iteration has its own Jacobian: the next change is in proportion to the square of this one
             state[RATE] = size / max(state[NEWTON_NORM], 1e-150) ** 2
             state[NEWTON_NORM] = size
@@ -763,7 +768,7 @@ def advance(
             step *= 0.1 if counts[FIRST] != 0 or not (size < 1e300) else 1.0 / error_factor(size, stages, iterations, limit)
             rejected_last = True
             continue
-        bend = state[RATE] / (1.0 + state[RATE])
+        bend = state[THETA]
         if full:
             bend = jacobian_change(jac, jac_stage, Z[stages - 1], scale, weight, lu, pivots, error)
             if bend > TOO_BENT:

@@ -31,6 +31,7 @@ SMALL = 1e-7  # relative width at which an undecided box is called a cluster: a 
 NEWTON_STEPS = 12  # from the middle of a box on which the slope matrices are all regular, 4 to 9 were seen
 INFLATIONS = 12  # Krawczyk with growing boxes: 1 to 3 were seen where it succeeds
 RECENT = 24  # proved regions that a box is compared with: only neighbours of the last few still appear
+FAR = 400.0  # width of a row's argument beyond which a cut of the argument itself comes first, for rows that grow without bound there
 MAX_PASSES = 60  # narrowing passes before a box is split all the same
 MAX_CLUSTERS = 400  # more undecided tiny boxes than this mean a continuum of solutions
 
@@ -39,7 +40,7 @@ class Rows(Protocol):
     """The scalar functions of all rows (loopsim.devices.phi_rows.PhiRows)."""
 
     @property
-    def rising(self) -> NDArray[np.bool_]: ...
+    def steep(self) -> NDArray[np.bool_]: ...
     def take(self, rows: Index) -> "Rows": ...
     def value(self, w: Array) -> Array: ...
     def slope(self, w: Array) -> Array: ...
@@ -93,7 +94,7 @@ class Problem:
         True of rising two-terminal elements in a linear network that only takes power (R. J. Duffin 1947; I. W. Sandberg, A. N. Willson
         1969, from memory): B_k is then d_k W_k, and what rounding left of the difference is the loss.
         """
-        if self.m == 0 or len(self.product) or not np.all(self.rows.rising):
+        if self.m == 0 or len(self.product):
             return None
         symmetric = 0.5 * (self.G + self.G.T)
         least = float(np.linalg.eigvalsh(symmetric)[0]) - 16.0 * self.n * UNIT * float(np.linalg.norm(self.G))
@@ -210,59 +211,122 @@ def differences(matrix: Array, low: Array, high: Array, n: int) -> tuple[Array, 
 
 @dataclass(frozen=True, eq=False)
 class NodalTable:
-    """For each unknown j with at least two terms of its own row moving with it: the terms (j, k) flattened to length t.
+    """For each quantity z (an unknown, or the argument of a row) with at least two terms of one equation moving with it: those terms,
+    flattened to length t.
 
-    unknowns: (u,); own: (u,) G_jj; off: (u, n) rest of the row; keep: (u, m) B of terms that do not move with x_j;
-    pair_unknown: (t,) position in `unknowns`; pair_row: (t,) row k; weight: (t,) B_jk; lever: (t,) W_kj; rest: (t, n) W_k without j;
-    factor_lever, factor_rest the same of V; gather: (t, u) 0/1 sum of terms per unknown.
+    columns: (u,) where z stands in a box; equation: (u,) the row of G used; own: (u,) coefficient of z itself in it; off: (u, n) G of the
+    rest; keep: (u, m) B of terms that do not move with z; pair_column: (t,) position in `columns`; pair_row: (t,) row k; weight: (t,) B;
+    lever: (t,) how w_k moves with z; rest: (t, n) what of x moves w_k besides; fuzz: (t, n) rounding of lever and rest, times |x|;
+    c_low, c_high: (t,) its constant; factor_lever, factor_rest the same of V; gather: (t, u) 0/1 sum of terms per quantity.
     """
 
-    unknowns: Index
+    columns: Index
+    equation: Index
     own: Array
     off: Array
     keep: Array
     pair_row: Index
-    pair_unknown: Index
+    pair_column: Index
     weight: Array
     lever: Array
     rest: Array
+    fuzz: Array
+    c_low: Array
+    c_high: Array
     factor_lever: Array
     factor_rest: Array
     gather: Array
     rows: Rows
 
 
+@dataclass(frozen=True, slots=True)
+class _Lever:
+    """One quantity of a NodalTable under construction: its column, its equation, and per row k: (lever, rest, fuzz, c_low, c_high)."""
+
+    column: int
+    equation: int
+    rows: tuple[int, ...]
+    levers: tuple[tuple[float, Array, Array, float, float], ...]
+
+
 def nodal_table(problem: Problem) -> NodalTable | None:
-    """Collect the pairs; an unknown whose row moves with it through one term only is served by hull consistency already."""
+    """Collect unknowns in their own equations and arguments that several rows share; one term alone is served by hull consistency."""
+    found = _own_unknowns(problem) + _shared_arguments(problem)
+    if not found:
+        return None
+    n = problem.n
+    equation = np.array([one.equation for one in found], dtype=np.int64)
+    columns = np.array([one.column for one in found], dtype=np.int64)
+    off, keep = problem.G[equation].copy(), problem.B[equation].copy()
+    own = np.zeros(len(found))
+    pairs = [(u, k, lever) for u, one in enumerate(found) for k, lever in zip(one.rows, one.levers, strict=True)]
+    which = np.array([u for u, _, _ in pairs], dtype=np.int64)
+    ks = np.array([k for _, k, _ in pairs], dtype=np.int64)
+    keep[which, ks] = 0.0
+    factor_lever, factor_rest = np.zeros(len(ks)), problem.V[ks].copy()
+    for u, one in enumerate(found):
+        if one.column < n:
+            own[u], off[u, one.column] = off[u, one.column], 0.0
+    for i, (u, k, _) in enumerate(pairs):
+        if found[u].column < n:
+            factor_lever[i], factor_rest[i, found[u].column] = problem.V[k, found[u].column], 0.0
+    gather = np.zeros((len(ks), len(found)))
+    gather[np.arange(len(ks)), which] = 1.0
+    parts = [lever for _, _, lever in pairs]
+    return NodalTable(
+        columns, equation, own, off, keep, ks, which, problem.B[equation[which], ks], np.array([p[0] for p in parts]),
+        np.stack([p[1] for p in parts]), np.stack([p[2] for p in parts]), np.array([p[3] for p in parts]),
+        np.array([p[4] for p in parts]), factor_lever, factor_rest, gather, problem.rows.take(ks),
+    )  # fmt: skip
+
+
+def _own_unknowns(problem: Problem) -> list[_Lever]:
+    """Unknowns in the equations that answer for them."""
     moves = (problem.W != 0.0) | (problem.V != 0.0)
-    pairs: list[tuple[int, int]] = []
-    unknowns = []
+    none = np.zeros(problem.n)
+    found = []
     for j in range(problem.n):
         ks = np.flatnonzero((problem.B[j] != 0.0) & moves[:, j])
         if len(ks) == 0 or len(ks) + (problem.G[j, j] != 0.0) < 2:
             continue
-        pairs += [(len(unknowns), int(k)) for k in ks]
-        unknowns.append(j)
-    if not unknowns:
-        return None
-    which = np.array([u for u, _ in pairs], dtype=np.int64)
-    ks = np.array([k for _, k in pairs], dtype=np.int64)
-    js = np.array(unknowns, dtype=np.int64)
-    off = problem.G[js].copy()
-    off[np.arange(len(js)), js] = 0.0
-    keep = problem.B[js].copy()
-    keep[which, ks] = 0.0
-    rest, factor_rest = problem.W[ks].copy(), problem.V[ks].copy()
-    here = np.arange(len(ks))
-    lever, factor_lever = rest[here, js[which]].copy(), factor_rest[here, js[which]].copy()
-    rest[here, js[which]] = 0.0
-    factor_rest[here, js[which]] = 0.0
-    gather = np.zeros((len(ks), len(js)))
-    gather[here, which] = 1.0
-    return NodalTable(
-        js, problem.G[js, js], off, keep, ks, which, problem.B[js[which], ks], lever, rest, factor_lever, factor_rest, gather,
-        problem.rows.take(ks),
-    )
+        levers = []
+        for k in ks:
+            rest = problem.W[k].copy()
+            rest[j] = 0.0
+            levers.append((float(problem.W[k, j]), rest, none, float(problem.c_low[k]), float(problem.c_high[k])))
+        found.append(_Lever(j, j, tuple(ks.tolist()), tuple(levers)))
+    return found
+
+
+def _shared_arguments(problem: Problem) -> list[_Lever]:
+    """Rows whose arguments are multiples of one difference (a pair of diodes back to back): none of them alone bounds it, together they do."""
+    found = []
+    taken: set[int] = set()
+    for first in range(problem.m):
+        if first in taken or np.count_nonzero(problem.W[first]) < 2:
+            continue
+        lead = int(np.argmax(np.abs(problem.W[first])))
+        group, levers = [], []
+        for k in range(first, problem.m):
+            ratio = float(problem.W[k, lead] / problem.W[first, lead])
+            line = ratio * problem.W[first]
+            fuzz = np.abs(problem.W[k] - line) + 4.0 * UNIT * (np.abs(problem.W[k]) + np.abs(line))
+            if ratio == 0.0 or np.any(fuzz > 1e-12 * np.abs(problem.W[k]).max()):
+                continue
+            # w_k = ratio (w_first - c_first) + c_k, up to the rounding of the ratio
+            ends = (problem.c_low[k] - ratio * problem.c_low[first], problem.c_high[k] - ratio * problem.c_high[first],
+                    problem.c_low[k] - ratio * problem.c_high[first], problem.c_high[k] - ratio * problem.c_low[first])  # fmt: skip
+            room = 8.0 * UNIT * (abs(problem.c_high[k]) + abs(problem.c_low[k]) + abs(ratio) * (abs(problem.c_low[first]) + abs(problem.c_high[first])))
+            group.append(k)
+            levers.append((ratio, np.zeros(problem.n), fuzz, float(min(ends) - room), float(max(ends) + room)))
+        if len(group) < 2:
+            continue
+        taken |= set(group)
+        equation = int(np.argmax(np.max(np.abs(problem.B[:, group]), axis=1)))
+        used = [i for i, k in enumerate(group) if problem.B[equation, k] != 0.0]
+        if len(used) >= 2:
+            found.append(_Lever(problem.n + first, equation, tuple(group[i] for i in used), tuple(levers[i] for i in used)))
+    return found
 
 
 @dataclass(frozen=True, eq=False)
@@ -402,7 +466,7 @@ def _others(t: Array) -> Array:
 
 
 def nodal(problem: Problem, boxes: Boxes) -> Boxes:
-    """Narrow each unknown by its own row with everything else at its extremes: slices of it in which the row cannot balance are cut off.
+    """Narrow each unknown by its own equation with everything else at its extremes: slices in which it cannot balance are cut off.
 
     A node equation is monotone in its own voltage for most nodes, where this solves it at both ends of everything else; slices serve the
     others too.
@@ -410,21 +474,24 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     table = problem.nodal
     if table is None:
         return boxes
-    j, t = table.unknowns, len(table.pair_row)
+    j, t = table.columns, len(table.pair_row)
     at = problem.layout
     x_low, x_high = boxes.low[:, at.x], boxes.high[:, at.x]
-    fixed_low, fixed_high = _affine(table.off, x_low, x_high, -problem.s_high[j], -problem.s_low[j])
+    i = table.equation
+    fixed_low, fixed_high = _affine(table.off, x_low, x_high, -problem.s_high[i], -problem.s_low[i])
     term_low, term_high = _affine(table.keep, boxes.low[:, at.p], boxes.high[:, at.p], np.zeros(len(j)), np.zeros(len(j)))
     fixed_low, fixed_high = down(fixed_low + term_low), up(fixed_high + term_high)
     k = table.pair_row
-    rest_low, rest_high = _affine(table.rest, x_low, x_high, problem.c_low[k], problem.c_high[k])
+    rest_low, rest_high = _affine(table.rest, x_low, x_high, table.c_low, table.c_high)
+    slack = np.maximum(np.abs(x_low), np.abs(x_high)) @ table.fuzz.T * (1.0 + gamma(problem.n))
+    rest_low, rest_high = down(rest_low - slack), up(rest_high + slack)
     has_product = len(problem.product) > 0
     if has_product:
         u_rest_low, u_rest_high = _affine(table.factor_rest, x_low, x_high, problem.d_low[k], problem.d_high[k])
-    own_low, own_high = x_low[:, j], x_high[:, j]
+    own_low, own_high = boxes.low[:, j], boxes.high[:, j]
     cuts = slices(own_low, own_high, SLICES)  # (q + 1, b, u)
     start, stop = cuts[:-1], cuts[1:]
-    ts, te = start[:, :, table.pair_unknown], stop[:, :, table.pair_unknown]
+    ts, te = start[:, :, table.pair_column], stop[:, :, table.pair_column]
     reach_low, reach_high = scale(table.lever, ts, te)
     w_low, w_high = down(rest_low + reach_low), up(rest_high + reach_high)
     # the interval of w itself is known too; a slice that misses it is empty, but stays here clipped and is left to the row test
@@ -972,8 +1039,13 @@ def _split(problem: Problem, boxes: Boxes, impact: Array) -> Boxes:
         low, high = x_low[b, j], x_high[b, j]
         cut = slices(low, high, 64)[31]
         alone = by_row & (np.count_nonzero(problem.W, axis=1) == 1)[k]
-        points = (problem.rows.split_points(w_low, w_high)[b, k] - problem.c_low[k]) / np.where(alone, problem.W[k, j], 1.0)
+        tangent = problem.rows.split_points(w_low, w_high)[b, k]
+        points = (tangent - problem.c_low[k]) / np.where(alone, problem.W[k, j], 1.0)
         cut = np.where(alone & (points > low) & (points < high), points, cut)
+        # a difference of two wide unknowns is cut itself: cutting either of them hardly narrows it
+        far = by_row & ~alone & problem.rows.steep[k] & ((w_high - w_low)[b, k] > FAR)
+        j = np.where(far, at.w.start + k, j)
+        cut = np.where(far, tangent, cut)
     one, two = Boxes(boxes.low, boxes.high.copy()), Boxes(boxes.low.copy(), boxes.high)
     one.high[b, j] = cut
     two.low[b, j] = cut
