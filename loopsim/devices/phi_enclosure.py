@@ -84,6 +84,8 @@ def slope_bounds(kind: int, low: Array, high: Array, p: Any) -> Pair:
     degree = len(p)
     while degree > 1 and not np.any(p[degree - 1]):
         degree -= 1
+    if degree <= 3:
+        return _quadratic(p[0], 2.0 * p[1] if degree > 1 else 0.0 * p[0], 3.0 * p[2] if degree > 2 else 0.0 * p[0], low, high)
     return _bernstein([(j + 1) * p[j] for j in range(degree)], low, high)
 
 
@@ -108,6 +110,17 @@ def _points_slope_bounds(low: Array, high: Array, p: Any) -> Pair:
         size = size + np.abs(change)
     error = size * ((len(p) + 2) * UNIT) + TINY
     return bottom - error, top + error
+
+
+def _quadratic(c0: Array, c1: Array, c2: Array, low: Array, high: Array) -> Pair:
+    """Range of c0 + c1 w + c2 w^2: at the ends and at the vertex, whose own rounding enters squared."""
+    vertex = np.where(c2 != 0.0, -0.5 * c1 / np.where(c2 != 0.0, c2, 1.0), low)
+    vertex = np.clip(np.nan_to_num(vertex, nan=0.0), low, high)
+    ends = [low, vertex, high]
+    values = [c0 + (c1 + c2 * t) * t for t in ends]
+    size = np.maximum(np.abs(low), np.abs(high))
+    error = (np.abs(c0) + (np.abs(c1) + np.abs(c2) * size) * size) * (10.0 * UNIT) + TINY
+    return np.minimum(np.minimum(values[0], values[1]), values[2]) - error, np.maximum(np.maximum(values[0], values[1]), values[2]) + error
 
 
 def _bernstein(a: list[Array], low: Array, high: Array) -> Pair:

@@ -35,9 +35,9 @@ class PhiRows:
         return tuple(found)
 
     @cached_property
-    def rising(self) -> NDArray[np.bool_]:
-        """(m,) rows whose function rises everywhere."""
-        return np.isin(self.kinds, sorted(phi_enclosure.MONOTONE))
+    def steep(self) -> NDArray[np.bool_]:
+        """(m,) rows that grow exponentially with their argument."""
+        return np.asarray(self.kinds == Kind.EXPONENTIAL)
 
     def take(self, rows: NDArray[np.int64]) -> PhiRows:
         """The same functions at other positions; rows: (k,) indices."""
