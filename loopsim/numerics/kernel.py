@@ -37,6 +37,7 @@ BEND, TOO_BENT = 0.25, 0.5  # wanted and largest change of the Jacobian over a s
 ROUNDING = 0.1  # of the tolerance: changes of Newton that stop shrinking below it are rounding, which grows with C / h
 SHORT = 1e-9  # times the first step: shorter than any time constant that grows
 SMALL_PIVOT = 1e-9  # over the largest entry of its row: below it the sparse pivots are chosen anew
+NOTHING = 1e-200  # far along a ladder numbers die away below what the processor handles at full speed
 SINE, LINEAR = 0, 1  # forms of a waveform
 
 
@@ -231,12 +232,12 @@ def solve_sparse(
         total = b[row_order[i]]
         for j in range(lu_start[i], lu_diagonal[i]):
             total -= lu[j] * work[lu_column[j]]
-        work[i] = total
+        work[i] = total if abs(total) > NOTHING else 0.0 * total
     for i in range(n - 1, -1, -1):
         total = work[i]
         for j in range(lu_diagonal[i] + 1, lu_start[i + 1]):
             total -= lu[j] * work[lu_column[j]]
-        work[i] = total * lu[lu_diagonal[i]]
+        work[i] = total * lu[lu_diagonal[i]] if abs(total) > NOTHING else 0.0 * total
     for i in range(n):
         b[column_order[i]] = work[i]
 

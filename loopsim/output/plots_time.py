@@ -1,0 +1,127 @@
+"""Pictures of what moves in time: one panel a net, one time axis for all, crossings and states marked.
+
+Colours are our own set, told apart by eyes of every kind and in grey: dark blue, ochre, green-blue, red-violet, grey.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from loopsim.errors import AnalysisError, MissingExtra
+from loopsim.output.engineering import engineering
+
+if TYPE_CHECKING:
+    from loopsim.analyses.cycle import Cycle
+    from loopsim.analyses.transient import Transient
+
+COLOURS = ("#1b3a6b", "#b8860b", "#2a7f79", "#8e2f5c", "#5f6368")
+PALE = "#9aa0a6"
+PANELS = 8  # nets in one picture; more would be too low to read
+SUFFIXES = ("svg", "png", "pdf")
+SCALES = ((1.0, "s"), (1e-3, "ms"), (1e-6, "us"), (1e-9, "ns"), (1e-12, "ps"))
+
+
+def plot_transient(run: Transient, path: str, nets: Sequence[str] = (), levels: Sequence[tuple[str, float, str]] = ()) -> None:
+    """Draw nets (the watched ones unless given) over time into `path`. levels: (net, volts, name) lines to mark, as of states;
+    crossings of a level are dots on the curve. MissingExtra without matplotlib."""
+    shown = _chosen(nets or run.watch or run.nets, run.nets)
+    times = run.fine_times()
+    values = run.at(times)
+    figure, panels = _panels(len(shown), f"{run.circuit}: {run.end}")
+    scale, unit = _time_scale(float(times[-1]))
+    for i, (net, panel) in enumerate(zip(shown, panels, strict=True)):
+        panel.plot(times / scale, values[net], color=COLOURS[i % len(COLOURS)], linewidth=1.4)
+        for other, volts, name in levels:
+            if other == net:
+                panel.axhline(volts, color=PALE, linewidth=0.8, linestyle=(0, (4, 3)))
+                panel.annotate(name, (1.0, volts), xycoords=("axes fraction", "data"), xytext=(4, -3), textcoords="offset points", fontsize=8)
+                dots = [crossing.time for crossing in run.crossings(net, volts)]
+                panel.plot(np.array(dots) / scale, [volts] * len(dots), "o", color=COLOURS[i % len(COLOURS)], markersize=3.5)
+        _label(panel, net, values[net])
+    if not run.completed:
+        for panel in panels:
+            panel.axvline(float(times[-1]) / scale, color=COLOURS[3], linewidth=1.0, linestyle=(0, (1, 2)))
+    panels[-1].set_xlabel(f"time in {unit}")
+    panels[-1].set_xlim(float(times[0]) / scale, (float(times[-1]) if not run.completed else run.duration) / scale)
+    _save(figure, path)
+
+
+def plot_cycle(found: Cycle, path: str, nets: Sequence[str] = ()) -> None:
+    """Draw two periods of nets (the watched ones unless given), the end of the first one marked, into `path`."""
+    shown = _chosen(nets or found.watch or found.nets, found.nets)
+    inner = _refined(found.times)
+    times = np.concatenate([inner, inner[1:] + found.period])
+    values = found.at(inner[:-1])
+    title = f"{found.circuit}: {found.verdict}, period {engineering(found.period, 's')}"
+    figure, panels = _panels(len(shown), title)
+    scale, unit = _time_scale(float(times[-1]))
+    for i, (net, panel) in enumerate(zip(shown, panels, strict=True)):
+        once = np.append(values[net], values[net][0])
+        twice = np.concatenate([once, once[1:]])
+        panel.plot(times / scale, twice, color=COLOURS[i % len(COLOURS)], linewidth=1.4)
+        panel.axvline(found.period / scale, color=PALE, linewidth=0.8, linestyle=(0, (4, 3)))
+        _label(panel, net, twice)
+    panels[-1].set_xlabel(f"time in {unit}")
+    panels[-1].set_xlim(0.0, 2.0 * found.period / scale)
+    _save(figure, path)
+
+
+def _refined(times: NDArray[np.float64], parts: int = 6) -> NDArray[np.float64]:
+    """Each gap in `parts` equal ones."""
+    inner = times[:-1, None] + np.diff(times)[:, None] * np.arange(parts) / parts
+    return np.append(inner.ravel(), times[-1])
+
+
+def _chosen(wanted: Sequence[str], known: Sequence[str]) -> list[str]:
+    for net in wanted:
+        if net not in known:
+            raise AnalysisError("not-recorded", f"no net {net} was recorded", hint=f"recorded: {', '.join(known)}")
+    return list(wanted)[:PANELS]
+
+
+def _time_scale(longest: float) -> tuple[float, str]:
+    for scale, unit in SCALES:
+        if longest >= 0.9 * scale:
+            return scale, unit
+    return SCALES[-1]
+
+
+def _panels(count: int, title: str) -> tuple[Any, list[Any]]:
+    """A figure with `count` panels over one time axis. Nothing global is touched: no pyplot, no style file."""
+    try:
+        from matplotlib.backends.backend_agg import FigureCanvasAgg
+        from matplotlib.figure import Figure
+    except ImportError:
+        raise MissingExtra("plot", "a plot") from None
+    figure = Figure(figsize=(8.0, 1.2 + 1.5 * max(count, 1)), layout="constrained")
+    FigureCanvasAgg(figure)
+    panels = list(figure.subplots(count, 1, sharex=True, squeeze=False)[:, 0])
+    panels[0].set_title(title, loc="left", fontsize=10)
+    for panel in panels:
+        panel.spines[["top", "right"]].set_visible(False)
+        panel.grid(visible=True, color="#e6e8ea", linewidth=0.6)
+        panel.tick_params(labelsize=8)
+    return figure, panels
+
+
+def _label(panel: Any, net: str, values: NDArray[np.float64]) -> None:
+    """Name and unit beside the panel, and room above and below the curve."""
+    low, high = float(values.min()), float(values.max())
+    room = 0.08 * (high - low) or max(1e-3, 0.05 * abs(high))
+    panel.set_ylim(low - room, high + room)
+    panel.set_ylabel(f"{net}\nin V", fontsize=9)
+    panel.ticklabel_format(axis="y", useOffset=False)
+
+
+def _save(figure: Any, path: str) -> None:
+    suffix = Path(path).suffix.lower().removeprefix(".")
+    if suffix not in SUFFIXES:
+        raise AnalysisError("plot-suffix", f"no picture is written to {path}", hint=f"use one of {', '.join('.' + s for s in SUFFIXES)}")
+    # the date would make equal pictures differ
+    metadata = {"svg": {"Date": None}, "pdf": {"CreationDate": None}}.get(suffix, {})
+    figure.savefig(path, format=suffix, dpi=150, metadata=metadata)
