@@ -1,5 +1,5 @@
-"""Two points that nearly touch, at every distance down to less than a unit in the last place: the proof may say that it cannot tell, but
-a complete list is right. Counts are exact: rational arithmetic on the doubles as given, or 80 digits."""
+"""Two points that nearly touch, at every distance down to less than a unit in the last place: the proof may say that it
+cannot tell, but a complete list is right. Counts are exact: rational arithmetic on the doubles as given, or 80 digits."""
 
 from dataclasses import replace
 from fractions import Fraction
