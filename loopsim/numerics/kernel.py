@@ -37,7 +37,7 @@ BEND, TOO_BENT = 0.25, 0.5  # wanted and largest change of the Jacobian over a s
 ROUNDING = 0.1  # of the tolerance: changes of Newton that stop shrinking below it are rounding, which grows with C / h
 SHORT = 1e-9  # times the first step: shorter than any time constant that grows
 SMALL_PIVOT = 1e-9  # over the largest entry of its row: below it the sparse pivots are chosen anew
-NOTHING = 1e-200  # far along a ladder numbers die away below what the processor handles at full speed
+NOTHING = 1e-140  # far along a ladder numbers die away; their squares would fall below what the processor handles at full speed
 SINE, LINEAR = 0, 1  # forms of a waveform
 
 
