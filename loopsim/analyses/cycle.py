@@ -419,7 +419,7 @@ def step_product(system: System, path: Path) -> Array:
     """
     stages, n = path.polynomials.shape[1], system.n
     method = tableau(stages)
-    coupling = np.kron(np.linalg.inv(method.A), system.C)
+    coupling = np.kron(method.A_inverse, system.C)
     product = np.eye(n)
     batch = max(1, BATCH // (stages * n) ** 2)
     for first in range(0, len(path.times), batch):

@@ -49,7 +49,7 @@ def compile_entry(*modules: ModuleType) -> Callable[[F], F]:
         assert isinstance(function, FunctionType)
         # numba's key has the code of the function and the values in its closure: the digest goes in as a variable that is never read
         code = function.__code__.replace(co_freevars=(*function.__code__.co_freevars, "source_key"))
-        cells = (*(function.__closure__ or ()), CellType(source_stamp(function.__code__.co_filename, *modules)))
+        cells = (*(function.__closure__ or ()), CellType(source_stamp(__file__, function.__code__.co_filename, *modules)))
         keyed = FunctionType(code, function.__globals__, function.__name__, function.__defaults__, cells)
         compiled: F = numba.njit(cache=True, error_model="numpy")(keyed)
         return compiled

@@ -34,6 +34,7 @@ SAFETY = 0.9  # factor on the predicted step
 SHRINK, GROW = 0.125, 8.0  # a step changes at most by these
 LANDING = 1.0 + 1e-9  # a step that would end this close to a corner ends on it
 BEND, TOO_BENT = 0.25, 0.5  # wanted and largest change of the Jacobian over a step; see docs/explanation/transient.md
+STALE = 0.03  # expected ratio of two changes of Newton up to which factors are used again
 ROUNDING = 0.1  # of the tolerance: changes of Newton that stop shrinking below it are rounding, which grows with C / h
 SHORT = 1e-9  # times the first step: shorter than any time constant that grows
 SMALL_PIVOT = 1e-9  # over the largest entry of its row: below it the sparse pivots are chosen anew
@@ -545,7 +546,7 @@ def newton_norm(R: Any, scale: Any, weight: Any) -> float:
 
 
 @compile_kernel
-def newton_verdict(iteration: int, limit: int, full: bool, size: float, state: Any, control: Any) -> float:
+def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, size: float, state: Any, control: Any) -> float:
     """What the sizes of the changes say: 0 converged, negative go on, positive the factor on the step of a new try.
 
     RATE holds theta / (1 - theta), the estimate of the change still to come over the last one (full: the factor on its square);
@@ -562,7 +563,7 @@ def newton_verdict(iteration: int, limit: int, full: bool, size: float, state: A
         if full:  # every iteration has its own Jacobian: the next change is in proportion to the square of this one
             state[RATE] = size / max(state[NEWTON_NORM], 1e-150) ** 2
             state[NEWTON_NORM] = size
-            if size <= 0.1 * control[NEWTON_LIMIT] or (theta > 0.5 and size <= ROUNDING) or state[RATE] * size * size <= control[NEWTON_LIMIT]:
+            if size <= 0.1 * control[NEWTON_LIMIT] or (theta > 0.5 and size <= ROUNDING) or (theta if fresh else 1.0) * theta * size <= control[NEWTON_LIMIT]:
                 return 0.0
             return 0.25 if theta > 2.0 else -1.0
         if theta >= 0.99:
@@ -699,7 +700,7 @@ def advance(
         start_iterate(state[POLYNOMIAL_STEP] > 0.0, polynomial, step / max(state[POLYNOMIAL_STEP], 1e-300), nodes, inverse, Z, P)
         if not full:
             state[RATE] = max(state[RATE], 1e-16) ** 0.8
-        verdict, iterations = -1.0, 0
+        verdict, iterations, fresh = -1.0, 0, True
         while verdict < 0.0 and iterations < limit:
             for a in range(stages):
                 for i in range(n):
@@ -713,18 +714,21 @@ def advance(
                     F[a],
                 )
             if full:
-                for a in range(stages):
-                    for i in range(n):
-                        trial[i] = x[i] + Z[a, i]
-                    jacobian(
-                        trial, W, W_columns, W_values, c, V, V_columns, V_values, d, kinds, parameters, base_jac, stamp_place, stamp_row,
-                        stamp_value, gain, jac_stage,
-                    )
-                    place_block(jac_stage, a, n, jac_full)
+                # the last factors do as well where the last change was small against the curvature seen so far
+                fresh = iterations == 0 or state[RATE] * state[NEWTON_NORM] > STALE
+                if fresh:
+                    for a in range(stages):
+                        for i in range(n):
+                            trial[i] = x[i] + Z[a, i]
+                        jacobian(
+                            trial, W, W_columns, W_values, c, V, V_columns, V_values, d, kinds, parameters, base_jac, stamp_place,
+                            stamp_row, stamp_value, gain, jac_stage,
+                        )
+                        place_block(jac_stage, a, n, jac_full)
+                    if factor_dense(1.0 / step, mass_full, jac_full, lu_full, pivots_full) == 0:
+                        verdict = 0.5
+                        break
                 full_residual(step, Z, F, inverse_A, C, C_columns, C_values, room, R)
-                if factor_dense(1.0 / step, mass_full, jac_full, lu_full, pivots_full) == 0:
-                    verdict = 0.5
-                    break
                 solve_dense(lu_full, pivots_full, R.reshape(stages * n))
                 for a in range(stages):
                     for i in range(n):
@@ -738,7 +742,7 @@ def advance(
                     for i in range(n):
                         P[a, i] += R[a, i]
                 mix(transform, P, Z)
-            verdict = newton_verdict(iterations, limit, full, newton_norm(R, scale, weight), state, control)
+            verdict = newton_verdict(iterations, limit, full, fresh, newton_norm(R, scale, weight), state, control)
             iterations += 1
         counts[EVALUATIONS] += iterations * stages
         if verdict != 0.0:  # no convergence: a smaller step, with the same Jacobian

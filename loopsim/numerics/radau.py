@@ -51,6 +51,7 @@ class Tableau:
 
     nodes: Array
     A: Array
+    A_inverse: Array
     transform: Array
     inverse: Array
     order_real: float
@@ -98,6 +99,7 @@ def tableau(stages: int) -> Tableau:
     return Tableau(
         nodes=np.asarray(c, dtype=np.float64),
         A=A,
+        A_inverse=np.linalg.inv(A),
         transform=np.ascontiguousarray(transform),
         inverse=np.linalg.inv(transform),
         order_real=gamma,
@@ -121,6 +123,12 @@ class Waves:
     columns: Array
     corners: Callable[[float, float], Sequence[float]] = field(default=lambda start, end: ())
     fastest: float = np.inf
+
+    @cached_property
+    def laid_out(self) -> tuple[tuple[Indices, Indices, Array], Indices, Array]:
+        """Columns in compressed rows, where each wave's numbers start, all numbers."""
+        starts = np.concatenate([[0], np.cumsum([len(numbers) for numbers in self.data])]).astype(np.int64)
+        return _compressed(self.columns), starts, np.concatenate([*self.data, np.zeros(0)])
 
 
 @dataclass(frozen=True, eq=False)
@@ -148,6 +156,18 @@ class Equations:
     stamp_row: Indices
     stamp_value: Array
     dense: bool
+
+    @cached_property
+    def stage_masses(self) -> dict[int, Array]:
+        """A^-1 x C by number of stages, row by row, made when first needed."""
+        return {}
+
+    def stage_mass(self, method: Tableau) -> Array:
+        """A^-1 x C of all stages together, row by row."""
+        stages = len(method.nodes)
+        if stages not in self.stage_masses:
+            self.stage_masses[stages] = np.kron(method.A_inverse, self.mass.reshape(self.n, self.n)).ravel()
+        return self.stage_masses[stages]
 
 
 def _compressed(matrix: Any) -> tuple[Indices, Indices, Array]:
@@ -244,7 +264,8 @@ class Factors:
     column_order: Indices
 
 
-_NONE = np.zeros(0, dtype=np.int64)
+_NONE, _NO_NUMBERS = np.zeros(0, dtype=np.int64), np.zeros(0)
+NO_WAVES = Waves(_NONE, (), np.zeros((0, 1)))
 DENSE_FACTORS = Factors(_NONE, _NONE, _NONE, _NONE, _NONE, _NONE, _NONE, _NONE)
 
 
@@ -296,14 +317,14 @@ def stages_for(rtol: float) -> int:
     return 3 if rtol > 2e-5 else 5
 
 
-def inner_tolerance(rtol: float, full: bool) -> float:
+def inner_tolerance(rtol: Array, full: bool) -> Array:
     """Tolerance on the embedded estimate (order k) so that the solution (order 2 k - 1) comes out near `rtol`.
 
     Hairer and Wanner (1999) take rtol^((k + 1) / 2k), right for smooth non-stiff stretches; where stiffness takes order away the exponent is
     nearer 1. Between them, with the factor that brings the published transients within ten times `rtol`.
     """
     # where every stage has its own Jacobian Newton also takes the steps that the simplified one stumbles over, and those err most
-    return float((0.01 if full else 0.03) * rtol**0.75)
+    return np.asarray((0.01 if full else 0.03) * rtol**0.75)
 
 
 def integrate(
@@ -340,13 +361,13 @@ def integrate(
     rtol_given = np.broadcast_to(np.asarray(rtol, dtype=np.float64), (n,))
     stages = stages_for(float(np.min(rtol_given))) if stages is None else stages
     method = tableau(stages)
-    inner = np.array([inner_tolerance(float(r), stages * n <= FULL_LIMIT) for r in rtol_given])
+    inner = inner_tolerance(rtol_given, stages * n <= FULL_LIMIT)
     absolute = np.asarray(atol, dtype=np.float64) * (inner / rtol_given)
     if fixed_step is not None:
         inner, absolute, max_step, first_step = inner * 0.0, np.full(n, 1e30), fixed_step, fixed_step
     x = np.array(x0, dtype=np.float64)
-    waves = waves or Waves(_NONE, (), np.zeros((0, n)))
-    marks = np.unique(np.array([*corners, *waves.corners(start, end), end], dtype=np.float64))
+    waves = waves or NO_WAVES
+    marks = np.array(sorted({*corners, *waves.corners(start, end), end}), dtype=np.float64)
     marks = marks[(marks > start) & (marks <= end)]
     span = end - start
     longest = min(max_step, waves.fastest / 4.0)
@@ -364,9 +385,7 @@ def integrate(
     counts[kernel.FIRST] = counts[kernel.FRESH] = 1
     kept_places = np.arange(n, dtype=np.int64) if kept is None else np.array(kept, dtype=np.int64)
     peaks = np.zeros(n) if peak is None else np.maximum(np.asarray(peak, dtype=np.float64), np.abs(x))
-    columns = _compressed(waves.columns)
-    wave_starts = np.concatenate([[0], np.cumsum([len(d) for d in waves.data])]).astype(np.int64)
-    wave_data = np.concatenate(waves.data) if waves.data else np.zeros(0)
+    columns, wave_starts, wave_data = waves.laid_out
     factors = DENSE_FACTORS if eq.dense else sparse_factors(eq, x, float(state[kernel.STEP]), method)
     shape = (n, n) if eq.dense else (1, len(factors.lu_column))
     pairs = len(method.pairs_real)
@@ -376,8 +395,8 @@ def integrate(
     jac = np.zeros(len(eq.base_jac))
     side = stages * n if stages * n <= FULL_LIMIT else 0
     state[kernel.RATE] = 1e30 if side else 1.0
-    inverse_A = np.linalg.inv(method.A)
-    mass_full = np.kron(inverse_A, eq.mass.reshape(n, n)).ravel() if side else np.zeros(0)
+    inverse_A = method.A_inverse
+    mass_full = eq.stage_mass(method) if side else _NO_NUMBERS
     jac_full, lu_full, pivots_full = np.zeros(side * side), np.zeros((side, side)), np.zeros(side, dtype=np.int64)
     weights = np.ones(n) if error_weight is None else np.array(error_weight, dtype=np.float64)
     second = np.zeros(n, dtype=np.int64) if index_two is None else np.array(index_two, dtype=np.int64)
