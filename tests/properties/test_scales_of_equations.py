@@ -1,5 +1,5 @@
-"""Multiplying equations by powers of two, or measuring unknowns in other units, changes no answer: nothing in the proof may rest on an
-absolute size (a floating-point solver's word `infeasible` was seen to turn wrong by a mere change of unit)."""
+"""Multiplying equations by powers of two, or measuring unknowns in other units, changes no answer: nothing in the proof may
+rest on an absolute size (a floating-point solver's word `infeasible` was seen to turn wrong by a mere change of unit)."""
 
 from dataclasses import replace
 
