@@ -372,8 +372,111 @@ def _on_a_terminal(words: list[str], extra: Mapping[str, str]) -> bytes:
     return seen
 
 
-def test_colour_is_for_terminals_that_want_it(stand_in_file: Path) -> None:
-    words = ["states", str(stand_in_file)]
+PUMP = "circuits/comparators/cistern_pump.loop"
+UNTIDY = 'circuit  c   "c"\n\n\n\ngnd->bat:9V->a\na--r:1kohm--gnd   # load\n'
+
+
+def test_states_prints_the_three_points_of_the_pump_switch(capsys) -> None:
+    assert main(["states", str(ROOT / PUMP)]) == Exit.WELL
+    out, err = capsys.readouterr()
+    assert err == ""
+    lines = out.splitlines()
+    assert lines[0] == "cistern_pump, level = 4.5 V"
+    assert lines[1].startswith("3 operating points: complete (all nets within +/- 1 kV, ")
+    assert lines[3].split()[:2] == ["state", "verdict"]
+    assert [line.split()[0] for line in lines[4:7]] == ["A", "B", "C"]
+    assert "unstable, whatever the strays" in lines[5]
+
+
+def test_states_with_a_setting_is_the_circuit_at_that_setting(capsys) -> None:
+    assert main(["states", str(ROOT / PUMP), "--set", "level=8V", "--set", "ambient=60degC"]) == Exit.WELL
+    lines = capsys.readouterr().out.splitlines()
+    assert lines[0].startswith("cistern_pump, ")
+    assert "level = 8 V" in lines[0]
+    assert "ambient = 60 degC" in lines[0]
+    assert lines[1].startswith("1 operating point: complete")
+
+
+def test_an_unknown_let_gets_a_suggestion(capsys) -> None:
+    assert main(["states", str(ROOT / PUMP), "--set", "levle=8V"]) == Exit.MISTAKE
+    assert "did you mean `level`?" in capsys.readouterr().err
+
+
+def test_a_budget_that_is_too_short_is_undecided_and_never_complete(capsys) -> None:
+    assert main(["states", str(ROOT / PUMP), "--budget", "1 us"]) == Exit.UNDECIDED
+    out = capsys.readouterr().out
+    assert "complete" not in out
+    assert "undecided" in out
+
+
+def test_csv_is_written_beside_the_answer(tmp_path: Path, capsys) -> None:
+    target = tmp_path / "points.csv"
+    assert main(["states", str(ROOT / PUMP), "--csv", str(target)]) == Exit.WELL
+    assert f"wrote {target}" in capsys.readouterr().err
+    assert [line.split(",")[0] for line in target.read_text().splitlines()] == ["state", "A", "B", "C"]
+    assert list(tmp_path.iterdir()) == [target]
+    assert main(["states", str(ROOT / PUMP), "--csv", str(tmp_path / "no" / "x.csv")]) == Exit.MISTAKE
+    assert "cannot write" in capsys.readouterr().err
+
+
+def test_inspect_tells_parts_nets_and_structure(tmp_path: Path, capsys) -> None:
+    assert main(["inspect", str(ROOT / PUMP)]) == Exit.WELL
+    out = capsys.readouterr().out
+    assert out.startswith('cistern_pump: "')
+    for words in ("r_fb", "47 kohm +/- 1 %", "u1.minus", "level", "0 V .. 9 V", "structure: nothing to remark"):
+        assert words in out
+    floating = tmp_path / "floating.loop"
+    floating.write_text('circuit floating "c"\ngnd -> bat: 9 V -> a\nb -- r: 1 kohm -- c\na -- r2: 1 kohm -- gnd\n')
+    assert main(["inspect", str(floating)]) == Exit.MISTAKE
+    assert "fault: " in capsys.readouterr().out
+
+
+def test_tidy_rewrites_in_place_and_tells_with_check(tmp_path: Path, capsys) -> None:
+    path = tmp_path / "c.loop"
+    path.write_text(UNTIDY)
+    path.chmod(0o640)
+    assert main(["tidy", str(path), "--check"]) == Exit.VIOLATED
+    assert path.read_text() == UNTIDY
+    assert main(["tidy", str(path)]) == Exit.WELL
+    laid_out = path.read_text()
+    assert "gnd -> bat: 9 V -> a" in laid_out
+    assert "# load" in laid_out
+    assert path.stat().st_mode & 0o777 == 0o640
+    assert main(["tidy", str(path), "--check"]) == Exit.WELL
+    assert main(["tidy", str(path)]) == Exit.WELL
+    assert path.read_text() == laid_out
+    assert [entry.name for entry in tmp_path.iterdir()] == ["c.loop"]
+
+
+def test_a_broken_file_is_left_as_it_is(tmp_path: Path, capsys) -> None:
+    path = tmp_path / "c.loop"
+    path.write_text("circuit c\nlet = = 3\n")
+    for verb in ("tidy", "states", "inspect"):
+        assert main([verb, str(path)]) == Exit.MISTAKE
+        err = capsys.readouterr().err
+        assert re.match(rf"{re.escape(str(path))}:2:5: [a-z-]+: ", err)
+        assert "\n    2 | let = = 3\n      |     ^" in err
+    assert path.read_text() == "circuit c\nlet = = 3\n"
+
+
+def test_a_title_with_escapes_reaches_no_terminal(tmp_path: Path, capsys) -> None:
+    path = tmp_path / "evil.loop"
+    path.write_text('circuit evil "\u202e\u2066"\ngnd -> bat: 9 V -> a\na -- r: 1 kohm -- gnd\n', encoding="utf-8")
+    for verb in ("states", "inspect"):
+        main([verb, str(path)])
+        out, err = capsys.readouterr()
+        assert "\u202e" not in out + err
+
+
+def test_transient_follows_the_circuit_for_a_time(capsys) -> None:
+    assert main(["transient", str(ROOT / "circuits/switches/kiln_trip.loop")]) == Exit.MISTAKE
+    assert "--for TIME" in capsys.readouterr().err
+    assert main(["transient", str(ROOT / PUMP), "--for", "1ms", "--start", "Q"]) == Exit.MISTAKE
+    assert "there is no state Q" in capsys.readouterr().err
+
+
+def test_colour_is_for_terminals_that_want_it() -> None:
+    words = ["states", PUMP]
     assert b"\x1b[" in _on_a_terminal(words, {"TERM": "xterm"})
     for extra in ({"TERM": "dumb"}, {"TERM": "xterm", "NO_COLOR": "1"}):
         assert b"\x1b[1m" not in _on_a_terminal(words, extra)

@@ -5,17 +5,18 @@ from __future__ import annotations
 import contextlib
 import difflib
 import os
+import re
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 from loopsim.cli.options import nearest
-from loopsim.cli.values import quantity
 from loopsim.errors import CircuitError, LoopsimError, Span
 from loopsim.printable import printable
 
 if TYPE_CHECKING:
-    from loopsim.circuit import Circuit
+    from loopsim.circuit import Circuit, Parameter
 
+_QUANTITY = re.compile(r"([0-9.]+(?:[eE][+-]?[0-9]+)?)\s*(\S*)")
 LARGEST_SNIFF = 65536  # bytes looked at for a NUL; a circuit file that long without one is text
 
 
@@ -74,11 +75,38 @@ def settings(circuit: Circuit, pairs: Sequence[tuple[str, str]]) -> dict[str, fl
             lets = [known for known in circuit.parameters if "." not in known]
             hint = nearest(name, circuit.parameters) or f"its lets: {', '.join(lets)}"
             raise CircuitError("unknown-let", f"{circuit.name} has no let `{name}`", hint=hint)
-        try:
-            found[name] = quantity(text, parameter.unit)
-        except ValueError as reason:
-            raise CircuitError("wrong-value", f"--set {name}={text}: {reason}") from None
+        found[name] = let_value(text, parameter)
     return found
+
+
+def let_value(text: str, parameter: Parameter) -> float:
+    """A value as the language reads it (4.5V, 4K7, 60degC) for a let [SI; degC for a temperature]; a bare number is in the
+    unit of the let."""
+    from loopsim.units import CODE_PATTERN, NUMBER, code, dimension_of, name_of, quantity
+
+    said = f"--set {parameter.name}={text}"
+    body = text.strip().lstrip("+-").strip()
+    sign = -1.0 if text.strip().startswith("-") else 1.0
+    try:
+        found = code(body) if re.fullmatch(CODE_PATTERN, body) else quantity(*_split(body))
+        wanted = dimension_of(parameter.unit)
+    except ValueError as reason:
+        raise CircuitError("wrong-value", f"{said}: {reason}") from None
+    bare = not found.scale and found.dimension == NUMBER and body[-1] in "0123456789."
+    if found.dimension != wanted and not bare:
+        own, other = name_of(wanted) or "a pure number", name_of(found.dimension) or "a pure number"
+        raise CircuitError("wrong-value", f"{said}: `{parameter.name}` is in {own}, and this is in {other}")
+    if parameter.unit == "degC" and found.scale != "degC" and not bare:
+        raise CircuitError("wrong-value", f"{said}: a temperature is set in degC")
+    return sign * found.value
+
+
+def _split(text: str) -> tuple[str, str]:
+    """Number and unit; ValueError for anything else."""
+    match = _QUANTITY.fullmatch(text)
+    if match is None:
+        raise ValueError("not a quantity: write it as 4.5V, 4K7 or 60degC")
+    return match[1], match[2]
 
 
 def write_file(path: str, text: str) -> tuple[str, ...]:
