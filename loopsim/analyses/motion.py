@@ -15,6 +15,7 @@ import scipy.linalg
 import scipy.sparse
 import scipy.sparse.linalg
 from numpy.typing import NDArray
+from scipy.linalg.lapack import dgetrf, dgetrs
 
 from loopsim.devices.waveforms import Points, Ramp, Sine, Square
 from loopsim.equations.system import System
@@ -210,11 +211,10 @@ def newton(system: System, x: Array, s: Array, *, push: float = 0.0, anchor: Arr
 
     with np.errstate(all="ignore"):
         for _ in range(PATIENCE):
-            try:
-                factors = scipy.linalg.lu_factor(system.jacobian(x) + push * system.C, check_finite=False)
-            except (scipy.linalg.LinAlgError, ValueError):
+            lu, pivots, info = dgetrf(system.jacobian(x) + push * system.C)
+            if info != 0:
                 return None
-            step = -scipy.linalg.lu_solve(factors, residual(x), check_finite=False)
+            step = -dgetrs(lu, pivots, residual(x))[0]
             if not np.all(np.isfinite(step)):
                 return None
             if np.all(np.abs(step) <= 1e-12 * np.abs(x) + 1e-15):
@@ -222,7 +222,7 @@ def newton(system: System, x: Array, s: Array, *, push: float = 0.0, anchor: Arr
             damping = 1.0
             while damping > 1e-6:
                 trial = x + damping * step
-                again = -scipy.linalg.lu_solve(factors, residual(trial), check_finite=False)
+                again = -dgetrs(lu, pivots, residual(trial))[0]
                 if np.linalg.norm(again) <= (1.0 - 0.25 * damping) * np.linalg.norm(step) or np.linalg.norm(again) <= 1e-14:
                     break
                 damping *= 0.5

@@ -281,8 +281,8 @@ def transient(
 def _check_numbers(duration: float, tolerance: float, nudge: float, ramp: float | None) -> None:
     if not (np.isfinite(duration) and duration > 0.0):
         raise AnalysisError("duration", f"the duration must be a positive time, not {duration}")
-    if not 1e-10 <= tolerance <= 0.1:
-        raise AnalysisError("tolerance", f"the tolerance must lie between 1e-10 and 0.1, not {tolerance}")
+    if not 1e-9 <= tolerance <= 0.1:
+        raise AnalysisError("tolerance", f"the tolerance must lie between 1e-9 and 0.1, not {tolerance}")
     if not np.isfinite(nudge):
         raise AnalysisError("nudge", f"the nudge must be a voltage, not {nudge}")
     if ramp is not None and not (np.isfinite(ramp) and ramp > 0.0):

@@ -35,7 +35,8 @@ SHRINK, GROW = 0.125, 8.0  # a step changes at most by these
 LANDING = 1.0 + 1e-9  # a step that would end this close to a corner ends on it
 BEND, TOO_BENT = 0.25, 0.5  # wanted and largest change of the Jacobian over a step; see docs/explanation/transient.md
 STALE = 0.03  # expected ratio of two changes of Newton up to which factors are used again
-ROUNDING = 0.1  # of the tolerance: changes of Newton that stop shrinking below it are rounding, which grows with C / h
+ROUNDING = 0.1  # of the tolerance: changes of Newton that stop shrinking below it are rounding; doubled at each
+# failure in a row, because rounding grows with C / h and a shorter step does not help against it
 SHORT = 1e-9  # times the first step: shorter than any time constant that grows
 SMALL_PIVOT = 1e-9  # over the largest entry of its row: below it the sparse pivots are chosen anew
 NOTHING = 1e-140  # far along a ladder numbers die away; their squares would fall below what the processor handles at full speed
@@ -546,11 +547,11 @@ def newton_norm(R: Any, scale: Any, weight: Any) -> float:
 
 
 @compile_kernel
-def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, size: float, state: Any, control: Any) -> float:
+def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, rounding: float, size: float, state: Any, control: Any) -> float:
     """What the sizes of the changes say: 0 converged, negative go on, positive the factor on the step of a new try.
 
     RATE holds theta / (1 - theta), the estimate of the change still to come over the last one (full: the factor on its square);
-    NEWTON_NORM the last size; THETA the last ratio of two sizes that rounding had no part in.
+    rounding: size below which changes that stop shrinking are noise; NEWTON_NORM: the last size; THETA the last ratio of two sizes that rounding had no part in.
     """
     if not (size < 1e300):
         return 0.5
@@ -558,20 +559,20 @@ def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, size: fl
         state[THETA] = 0.0
     if iteration > 0:
         theta = size / max(state[NEWTON_NORM], 1e-300)
-        if state[NEWTON_NORM] > ROUNDING:
+        if state[NEWTON_NORM] > rounding:
             state[THETA] = theta
         if full:  # every iteration has its own Jacobian: the next change is in proportion to the square of this one
             state[RATE] = size / max(state[NEWTON_NORM], 1e-150) ** 2
             state[NEWTON_NORM] = size
-            if size <= 0.1 * control[NEWTON_LIMIT] or (theta > 0.5 and size <= ROUNDING) or (theta if fresh else 1.0) * theta * size <= control[NEWTON_LIMIT]:
+            if size <= 0.1 * control[NEWTON_LIMIT] or (theta > 0.5 and size <= rounding) or (theta if fresh else 1.0) * theta * size <= control[NEWTON_LIMIT]:
                 return 0.0
             return 0.25 if theta > 2.0 else -1.0
         if theta >= 0.99:
             # at the level of rounding the sizes no longer shrink, and are small enough all the same
-            return 0.5 if size > max(ROUNDING, 0.1 * control[NEWTON_LIMIT]) else 0.0
+            return 0.5 if size > max(rounding, 0.1 * control[NEWTON_LIMIT]) else 0.0
         state[RATE] = theta / (1.0 - theta)
         left = state[RATE] * size * theta ** (limit - 1 - iteration) / control[NEWTON_LIMIT]
-        if size <= ROUNDING and (theta > 0.5 or iteration == limit - 1):
+        if size <= rounding and (theta > 0.5 or iteration == limit - 1):
             return 0.0
         if left >= 1.0:
             return 0.8 * max(1e-4, min(20.0, left)) ** (-1.0 / (4.0 + limit - 1 - iteration))
@@ -637,7 +638,7 @@ def advance(
     work_pair, pair = np.zeros(n, dtype=np.complex128), np.zeros(n, dtype=np.complex128)
     pieces, jac_stage = np.zeros((forms.size, 3)), np.zeros(jac.size)
     time, step = state[TIME], state[STEP]
-    recorded, rejected_last, chosen = 0, False, False
+    recorded, rejected_last, chosen, stuck = 0, False, False, 0
     if counts[SIGN] == 0:  # the sign that the determinant has for short steps
         jacobian(
             x, W, W_columns, W_values, c, V, V_columns, V_values, d, kinds, parameters, base_jac, stamp_place, stamp_row, stamp_value,
@@ -742,12 +743,13 @@ def advance(
                     for i in range(n):
                         P[a, i] += R[a, i]
                 mix(transform, P, Z)
-            verdict = newton_verdict(iterations, limit, full, fresh, newton_norm(R, scale, weight), state, control)
+            verdict = newton_verdict(iterations, limit, full, fresh, min(1.0, ROUNDING * 2.0**stuck), newton_norm(R, scale, weight), state, control)
             iterations += 1
         counts[EVALUATIONS] += iterations * stages
         if verdict != 0.0:  # no convergence: a smaller step, with the same Jacobian
             counts[WORST] = worst_entry(R[0], scale, weight)
             counts[NEWTON_FAILED] += 1
+            stuck += 1
             counts[REJECTED] += 1
             step *= verdict if verdict > 0.0 else 0.5
             state[RATE] = 1e30 if full else 1.0
@@ -791,6 +793,7 @@ def advance(
         polynomial_from_stages(Z, monomials, polynomial)
         keep_step(recorded, time, step, x, polynomial, kept, out_time, out_step, out_x, out_p)
         recorded += 1
+        stuck = 0
         counts[STEPS] += 1
         state[POLYNOMIAL_STEP] = step
         for i in range(n):

@@ -52,7 +52,7 @@ def test_period_and_amplitude(mu: float) -> None:
     if mu == 0.1:
         rounds = 40
     start = np.array([2.0, mu * 2.0 / 3.0])
-    path = integrate(oscillator(mu), start, 0.0, (rounds + 2.2) * period, np.zeros(2), rtol=1e-11, atol=1e-11, stages=5)
+    path = integrate(oscillator(mu), start, 0.0, (rounds + 2.2) * period, np.zeros(2), rtol=1e-9, atol=1e-9, stages=5)
     times, signs = crossings(path, 0, 0.0)
     rises = times[signs > 0]
     assert rises[-1] - rises[-2] == pytest.approx(period, rel=2e-8)
@@ -74,7 +74,7 @@ def test_stiff_course_within_ten_times_the_tolerance(tolerance: float) -> None:
 
 
 def test_end_of_the_test_set_interval() -> None:
-    path = integrate(oscillator(1000.0), [2.0, 2000.0 / 3.0], 0.0, 2000.0, np.zeros(2), rtol=1e-11, atol=1e-11)
+    path = integrate(oscillator(1000.0), [2.0, 2000.0 / 3.0], 0.0, 2000.0, np.zeros(2), rtol=1e-10, atol=1e-10)
     x, y = path.end_x
     assert x == pytest.approx(1.70616773217046501, abs=2e-9)
     # the slope is a difference of numbers near 700: seven digits fewer than they have
@@ -83,7 +83,7 @@ def test_end_of_the_test_set_interval() -> None:
 
 def test_slopes_of_the_stiff_table_on_the_slow_branches() -> None:
     times = 1000.0 * np.arange(1, 12)
-    path = integrate(oscillator(1000.0), [2.0, 2000.0 / 3.0], 0.0, 11000.0, np.zeros(2), rtol=1e-11, atol=1e-11)
+    path = integrate(oscillator(1000.0), [2.0, 2000.0 / 3.0], 0.0, 11000.0, np.zeros(2), rtol=1e-10, atol=1e-10)
     x = path.at(times)[:, 0]
     # on a slow branch x' = -x / (mu (x^2 - 1)) up to terms of order mu^-3, largest near the jump; table C counts time in thousands
     slow = -x / (x**2 - 1.0)
