@@ -64,7 +64,7 @@ def test_published_three_digit_figures(row):
 
 CIRCUIT = """
 circuit piecewise_linear_oscillator "Two capacitors, an inductor and a piecewise-linear resistor, scaled to 1 ohm and 1 F"
-curve diode_curve = points(-2 V: 13/7 A, -1 V: 8/7 A, 1 V: -8/7 A, 2 V: -13/7 A)
+curve diode_curve = points(-2 V: 13 A / 7, -1 V: 8 A / 7, 1 V: -8 A / 7, 2 V: -13 A / 7)
 let alpha = 9
 let beta = 100 / 7
 x -> nonlinear: diode_curve -> gnd

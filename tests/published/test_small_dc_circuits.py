@@ -134,8 +134,8 @@ def test_switching_voltage_of_an_inverter(ratio, threshold, tolerance):
 def test_textbook_diode():
     """A. Sedra, K. Smith, Microelectronic Circuits, from memory: 5 V, 1 kohm, 0.7 V at 1 mA and 60 mV a decade: 4.262
     mA, 0.738 V."""
-    scale = 0.06 / np.log(10.0)
-    saturation = 1e-3 / np.expm1(0.7 / scale)
+    scale = float(0.06 / np.log(10.0))
+    saturation = float(1e-3 / np.expm1(0.7 / scale))
     point = only(
         f"""circuit textbook "Diode by hand"
         kind hand_diode = diode(saturation_current = {saturation!r} A, ideality = {scale / THERMAL!r})
