@@ -1,7 +1,7 @@
 """Every example in README and docs runs, and says what it is said to say.
 
 Fenced blocks of a page run in order, in a folder of their own that holds a copy of `circuits`:
-`loop` beginning with `# file: NAME` is written to that file, and each one that has a `circuit` statement is read;
+`loop` beginning with `# file: NAME` is written to that file, and any other that has a `circuit` statement is read;
 `console` runs each line after `$ ` and compares what follows it with the output;
 `python` runs in one name space a page and, where a `text` block follows, compares what it printed.
 Times and numbers of boxes vary between machines and are not compared.
@@ -67,7 +67,7 @@ def run_console(text: str, capsys: pytest.CaptureFixture[str]) -> None:
             capsys.readouterr()
             main(words[1:])
             out, err = capsys.readouterr()
-            said = out + err
+            said = out or err  # remarks beside an answer are not part of it
         if shown.strip():
             assert same(shown, said), f"$ {command}\nshown:\n{shown}\nsaid:\n{said}"
 
@@ -101,7 +101,7 @@ def test_the_examples_of_a_page_run(page: Path, workshop: Path, capsys: pytest.C
                 target = workshop / first.removeprefix("# file: ").strip()
                 target.parent.mkdir(parents=True, exist_ok=True)
                 target.write_text(text, encoding="utf-8")
-            if re.search(r"^circuit ", text, re.MULTILINE):
+            elif re.search(r"^circuit ", text, re.MULTILINE):
                 run_python("import loopsim; loopsim.parse(text)", {"text": text}, page)
         elif language == "console":
             run_console(text, capsys)
@@ -159,6 +159,14 @@ def test_text_that_varies_is_not_compared_and_the_rest_is() -> None:
     assert same("a\n...\nz\n", "a\nb\nc\nz\n")
     assert not same("a\n...\nz\n", "a\nb\nc\n")
     assert same("{\n...\n", "{\n1\n}\n")
+
+
+@pytest.mark.parametrize("folder", ["explanation", "how-to"])
+def test_every_page_is_reached_from_the_index(folder: str) -> None:
+    pages = {path.name for path in (ROOT / "docs" / folder).glob("*.md")}
+    index = ROOT / "docs" / ("explanation/index.md" if folder == "explanation" else "index.md")
+    linked = {Path(target.partition("#")[0]).name for target in LINK.findall(index.read_text(encoding="utf-8"))}
+    assert pages - {"index.md"} <= linked
 
 
 def test_no_page_names_a_machine() -> None:

@@ -42,14 +42,27 @@ def test_no_schema_is_left_without_a_verb() -> None:
     assert sorted(path.stem for path in SCHEMAS.glob("*.json")) == JSON_VERBS
 
 
-@pytest.mark.parametrize("path", sorted((ROOT / "circuits").rglob("*.loop")), ids=lambda path: path.stem)
+CIRCUITS = sorted(path for path in (ROOT / "circuits").rglob("*.loop") if path.parent.name != "parts")
+
+
+@pytest.mark.parametrize("path", CIRCUITS, ids=lambda path: path.stem)
 def test_states_and_inspect_of_every_circuit_answer_by_their_schema(path: Path, capsys: pytest.CaptureFixture[str]) -> None:
-    if path.parent.name == "parts":
-        pytest.skip("a parts file is no circuit")
     for verb in ("states", "inspect"):
         document = answer([verb, str(path), "--budget", "5"] if verb == "states" else [verb, str(path)], capsys)
         jsonschema.validate(document, schema(verb), cls=jsonschema.Draft202012Validator)
         assert document["file"] == str(path)
+
+
+def test_transient_and_cycle_answer_by_their_schema(capsys: pytest.CaptureFixture[str]) -> None:
+    runs = (
+        ["transient", "circuits/comparators/cistern_pump.loop", "--for", "5us"],
+        ["cycle", "circuits/oscillators/cistern_blinker.loop"],
+        ["cycle", "circuits/comparators/cistern_pump.loop"],  # comes to rest
+    )
+    for words in runs:
+        document = answer([words[0], str(ROOT / words[1]), *words[2:]], capsys)
+        jsonschema.validate(document, schema(words[0]), cls=jsonschema.Draft202012Validator)
+    assert document["verdict"] == "no cycle"
 
 
 def test_a_schema_refuses_what_it_should(capsys: pytest.CaptureFixture[str]) -> None:

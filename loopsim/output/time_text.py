@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 from loopsim.output.csv import csv_text
 from loopsim.output.engineering import engineering
+from loopsim.output.text import volts
 
 if TYPE_CHECKING:
     from loopsim.analyses.cycle import Cycle
@@ -28,7 +29,7 @@ def transient_text(run: Transient) -> str:
     for net in nets:
         course = values[net]
         shown = (float(course[0]), float(course.min()), float(course.max()), run.final(net))
-        lines.append(f"{net:<16}" + "".join(f"{engineering(v, 'V'):>12}" for v in shown))
+        lines.append(f"{net:<16}" + "".join(f"{volts(v):>12}" for v in shown))
     lines += _more(len(run.watch or run.nets) - len(nets), run.notes)
     return "\n".join(lines)
 
@@ -46,8 +47,8 @@ def cycle_text(found: Cycle) -> str:
     lines += ["", f"{'net':<16}{'lowest':>12}{'highest':>12}{'swing':>12}{'duty':>9}"]
     for net in nets:
         low, high = found.extremes(net)
-        volts = "".join(f"{engineering(v, 'V'):>12}" for v in (low, high, high - low))
-        lines.append(f"{net:<16}{volts}{100.0 * found.duty(net):>7.2f} %")
+        columns = "".join(f"{volts(v):>12}" for v in (low, high, high - low))
+        lines.append(f"{net:<16}{columns}{100.0 * found.duty(net):>7.2f} %")
     lines += _more(len(found.watch or found.nets) - len(nets), found.notes)
     return "\n".join(lines)
 
