@@ -20,7 +20,7 @@ import scipy.sparse.linalg
 from numpy.typing import ArrayLike, NDArray
 
 from loopsim.devices import phi
-from loopsim.numerics.compiled import announced
+from loopsim.numerics.compiled import announced, have_compiler
 
 Array: TypeAlias = NDArray[np.float64]
 Indices: TypeAlias = NDArray[np.int64]
@@ -355,7 +355,7 @@ def integrate(
     for unknowns of index 2, whose error counts by the step's share of the span. error_weight (n,): 0 leaves an unknown out of error and
     convergence tests. fixed_step: take it whatever the error, for order tests. Never raises for a step that fails: see `Path.outcome`.
     """
-    from loopsim.numerics import kernel
+    from loopsim.numerics import kernel, radau_plain
 
     n = eq.n
     rtol_given = np.broadcast_to(np.asarray(rtol, dtype=np.float64), (n,))
@@ -386,7 +386,8 @@ def integrate(
     kept_places = np.arange(n, dtype=np.int64) if kept is None else np.array(kept, dtype=np.int64)
     peaks = np.zeros(n) if peak is None else np.maximum(np.asarray(peak, dtype=np.float64), np.abs(x))
     columns, wave_starts, wave_data = waves.laid_out
-    factors = DENSE_FACTORS if eq.dense else sparse_factors(eq, x, float(state[kernel.STEP]), method)
+    by_arrays = not eq.dense and not have_compiler()
+    factors = DENSE_FACTORS if eq.dense or by_arrays else sparse_factors(eq, x, float(state[kernel.STEP]), method)
     shape = (n, n) if eq.dense else (1, len(factors.lu_column))
     pairs = len(method.pairs_real)
     polynomial = np.zeros((stages, n))
@@ -409,16 +410,22 @@ def integrate(
         record = (
             np.empty(room), np.empty(room), np.empty((room, len(kept_places))), np.empty((room, stages, len(kept_places)))
         )  # fmt: skip
-        outcome, used = kernel.advance(
-            x, peaks, control, state, counts, marks, kept_places,
-            *eq.rows, *eq.control, eq.c, *eq.product, eq.d, eq.kinds, eq.parameters, *eq.storage, eq.mass, eq.base_jac,
-            eq.stamp_place, eq.stamp_row, eq.stamp_value, base, waves.forms, wave_starts, wave_data, *columns,
-            method.nodes, method.transform, method.inverse, method.order_real, method.pairs_real, method.pairs_imaginary,
-            method.error_weights, method.monomials, inner, absolute, second, weights,
-            factors.entry_start, factors.entry_from, factors.entry_column, factors.lu_start, factors.lu_column, factors.lu_diagonal,
-            factors.row_order, factors.column_order, polynomial, lu, pivots, lu_pairs, pivots_pairs, jac, inverse_A,
-            mass_full, jac_full, lu_full, pivots_full, *record,
-        )  # fmt: skip
+        if by_arrays:
+            outcome, used = radau_plain.advance(
+                eq, waves, method, jacobian_values, x, peaks, control, state, counts, marks, kept_places, base, inner, absolute, second,
+                weights, polynomial, *record,
+            )  # fmt: skip
+        else:
+            outcome, used = kernel.advance(
+                x, peaks, control, state, counts, marks, kept_places,
+                *eq.rows, *eq.control, eq.c, *eq.product, eq.d, eq.kinds, eq.parameters, *eq.storage, eq.mass, eq.base_jac,
+                eq.stamp_place, eq.stamp_row, eq.stamp_value, base, waves.forms, wave_starts, wave_data, *columns,
+                method.nodes, method.transform, method.inverse, method.order_real, method.pairs_real, method.pairs_imaginary,
+                method.error_weights, method.monomials, inner, absolute, second, weights,
+                factors.entry_start, factors.entry_from, factors.entry_column, factors.lu_start, factors.lu_column, factors.lu_diagonal,
+                factors.row_order, factors.column_order, polynomial, lu, pivots, lu_pairs, pivots_pairs, jac, inverse_A,
+                mass_full, jac_full, lu_full, pivots_full, *record,
+            )  # fmt: skip
         records.append(tuple(part[:used] for part in record))  # type: ignore[arg-type]
         if progress is not None:
             progress(float(state[kernel.TIME]))
