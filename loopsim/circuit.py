@@ -169,7 +169,7 @@ class Circuit:
     requirements: tuple[Requirement, ...] = ()
     sources: Mapping[str, str] = field(default_factory=dict)
 
-    def states(self, *, box: float = 1e3, budget: float = 60.0, **lets: Any) -> "States":
+    def states(self, *, box: float = 1e3, budget: float = 60.0, **lets: Any) -> States:
         """Every DC operating point with the named lets set [SI]; see `loopsim.analyses.states.states`."""
         from loopsim.analyses.states import states
 
@@ -188,7 +188,7 @@ class Circuit:
         progress: Callable[[float], None] | None = None,
         tell: Callable[[str], None] | None = None,
         **lets: Any,
-    ) -> "Transient":
+    ) -> Transient:
         """How it moves for `duration` [s] with the named lets set [SI]; see `loopsim.analyses.transient.transient`."""
         from loopsim.analyses.transient import transient
 
@@ -209,7 +209,7 @@ class Circuit:
         progress: Callable[[float], None] | None = None,
         tell: Callable[[str], None] | None = None,
         **lets: Any,
-    ) -> "Cycle":
+    ) -> Cycle:
         """The oscillation that a start leads to, with the named lets set [SI]; see `loopsim.analyses.cycle.cycle`."""
         from loopsim.analyses.cycle import cycle
 

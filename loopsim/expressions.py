@@ -52,7 +52,7 @@ class Operation:
     """
 
     name: str
-    arguments: tuple["Expression", ...]
+    arguments: tuple[Expression, ...]
     curve: str = ""
 
 
