@@ -141,7 +141,7 @@ def from_random_starts(problem: Problem, known: np.ndarray) -> tuple[float, int]
 
 
 def as_codac(system: System):
-    """The equations as one vector function of codac."""
+    """The equations as vector functions of codac, which takes ten rows at most in one."""
     import codac
 
     x = codac.VectorVar(system.n)
@@ -178,7 +178,21 @@ def as_codac(system: System):
             if a != 0.0:
                 linear = linear + float(a) * p
         rows.append(linear)
-    return codac.AnalyticFunction([x], codac.vec(*rows))
+    return [codac.AnalyticFunction([x], codac.vec(*rows[i : i + 10])) for i in range(0, len(rows), 10)]
+
+
+def contractor_of(functions, size: int):
+    """Contracts to where all of them are zero; centred form off."""
+    import codac
+
+    def zero(function):
+        return codac.IntervalVector([[0.0, 0.0]] * function.output_size())
+
+    listed = [codac.CtcInverse(f, zero(f), with_centered_form=False) for f in functions]
+    found = listed[0]
+    for other in listed[1:]:
+        found = found & other
+    return found
 
 
 def middle_of(box) -> np.ndarray:
@@ -187,13 +201,29 @@ def middle_of(box) -> np.ndarray:
     return np.array([middle[j] for j in range(box.size())])
 
 
+def stacked(matrices, n: int):
+    """One interval matrix from its row blocks."""
+    import codac
+
+    if len(matrices) == 1:
+        return matrices[0]
+    return codac.IntervalMatrix([[m[i, j] for j in range(n)] for m in matrices for i in range(m.rows())])
+
+
+def joined(vectors):
+    """One interval vector from its parts."""
+    import codac
+
+    return vectors[0] if len(vectors) == 1 else codac.IntervalVector([v[i] for v in vectors for i in range(v.size())])
+
+
 def codac_loop(system: System, limit: float) -> tuple[float, int, int, bool]:
     """(time, points, boxes, finished): contract, Krawczyk on what is left, bisect the widest side."""
     import codac
 
     n = system.n
-    function = as_codac(system)
-    contractor = codac.CtcInverse(function, codac.IntervalVector([[0.0, 0.0]] * n), with_centered_form=False)
+    functions = as_codac(system)
+    contractor = contractor_of(functions, n)
     identity = codac.IntervalMatrix(codac.Matrix(np.eye(n)))
     began = time.perf_counter()
     stack = [codac.IntervalVector([[-BOX, BOX]] * n)]
@@ -213,13 +243,13 @@ def codac_loop(system: System, limit: float) -> tuple[float, int, int, bool]:
                 break
             if box.max_diam() < 1.0:
                 middle = middle_of(box)
-                slope = function.diff(box)
+                slope = stacked([f.diff(box) for f in functions], n)
                 mid = slope.mid()
                 centre = np.array([[mid[i, j] for j in range(n)] for i in range(n)])
                 if np.all(np.isfinite(centre)) and np.linalg.cond(centre) < 1e14:
                     inverse = codac.IntervalMatrix(codac.Matrix(np.linalg.inv(centre)))
                     point = codac.IntervalVector([[m, m] for m in middle])
-                    image = point - inverse * function.eval(point) + (identity - inverse * slope) * (box - point)
+                    image = point - inverse * joined([f.eval(point) for f in functions]) + (identity - inverse * slope) * (box - point)
                     if image.is_strict_interior_subset(box):
                         points.append(middle)
                         settled = True
@@ -245,8 +275,7 @@ def codac_paver(name: str, limit: float) -> tuple[float, bool]:
         "import sys, time; sys.path[:0] = sys.argv[2:]; import states; import codac\n"
         "name = sys.argv[1]\n"
         "system = next(p.system for p in states.problems(False) if p.name == name)\n"
-        "n = system.n; f = states.as_codac(system)\n"
-        "c = codac.CtcInverse(f, codac.IntervalVector([[0.0, 0.0]] * n), with_centered_form=False)\n"
+        "n = system.n; c = states.contractor_of(states.as_codac(system), n)\n"
         "t = time.perf_counter(); codac.pave(codac.IntervalVector([[-states.BOX, states.BOX]] * n), c, 1e-3)\n"
         "print(time.perf_counter() - t)\n"
     )
