@@ -48,10 +48,11 @@ class Points:
         return self.undecided == 0
 
 
-def all_points(system: System, box: float, deadline: float = np.inf) -> Points:
+def all_points(system: System, box: float, deadline: float = np.inf, source_radius: Array | None = None, max_boxes: int = 10_000_000) -> Points:
     """Every DC solution with all nets within +/- box [V]. deadline: time.monotonic() after which the rest is left undecided.
 
-    Groups without a nonlinear row are solved directly, whatever the box.
+    Groups without a nonlinear row are solved directly, whatever the box. source_radius: (n,) half widths of intervals in which s may lie;
+    then each x +/- spread holds exactly one solution for every s in them. max_boxes: boxes per group after which the rest is undecided.
     """
     order = blocks(system)
     n = system.n
@@ -72,11 +73,11 @@ def all_points(system: System, box: float, deadline: float = np.inf) -> Points:
         found: list[Found] = []
         for g in range(len(groups)):
             first = int(np.flatnonzero(member == g)[0])
-            problem, rows = group_problem(system, block, low[first], high[first])
+            problem, rows = group_problem(system, block, low[first], high[first], source_radius)
             limits = _limits(system, block, box)
             key = _key(problem, rows, limits)
             if key not in seen:
-                seen[key] = _solve(problem, rows, limits, deadline)
+                seen[key] = _solve(problem, rows, limits, deadline, max_boxes)
                 boxes += seen[key].boxes
             found.append(seen[key])
             if not seen[key].complete:
@@ -114,10 +115,11 @@ def _key(problem: Problem, kinds: NDArray[np.int64], limits: Array) -> bytes:
     return b"|".join([np.int64(problem.n).tobytes(), kinds.tobytes(), parameters.tobytes(), *(a.tobytes() for a in arrays)])
 
 
-def _solve(problem: Problem, kinds: NDArray[np.int64], limits: Array, deadline: float) -> Found:
+def _solve(problem: Problem, kinds: NDArray[np.int64], limits: Array, deadline: float, max_boxes: int) -> Found:
     if problem.m == 0:
         return _solve_linear(problem)
-    found = search(problem, -limits, limits, deadline=deadline, scale=np.where(limits < INNER_LIMIT, 1.0, 1e-3))
+    scale = np.where(limits < INNER_LIMIT, 1.0, 1e-3)
+    found = search(problem, -limits, limits, deadline=deadline, scale=scale, max_boxes=max_boxes)
     if found.complete and not parity_holds(problem, kinds, found):
         doubt = np.stack([-limits, limits])[None]
         return Found(found.x, found.spread, found.clusters, doubt, found.boxes, found.seconds, ("parity",))
@@ -146,11 +148,15 @@ def _solve_linear(problem: Problem) -> Found:
     return Found(x[None], spread[None], none, none, 1, 0.0)
 
 
-def group_problem(system: System, block: Block, low: Array, high: Array) -> tuple[Problem, NDArray[np.int64]]:
+def group_problem(
+    system: System, block: Block, low: Array, high: Array, source_radius: Array | None = None
+) -> tuple[Problem, NDArray[np.int64]]:
     """The equations of one group with the unknowns before it in [low, high]: (n,) each; and the kinds of its rows."""
     rows, unknowns, needs, inner, outer = block.rows, block.unknowns, block.needs, block.inner, block.outer
     x_low, x_high = low[needs], high[needs]
     s_low, s_high = _minus(system.s[rows], system.G[np.ix_(rows, needs)], x_low, x_high)
+    if source_radius is not None and np.any(source_radius[rows] > 0.0):
+        s_low, s_high = down(s_low - source_radius[rows]), up(s_high + source_radius[rows])
     if len(outer):
         functions = rows_of(system.kinds[outer], system.parameters[outer])
         w_low, w_high = _plus(system.c[outer], system.W[np.ix_(outer, needs)], x_low, x_high)

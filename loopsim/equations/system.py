@@ -130,6 +130,18 @@ class System:
             bend = bend * self.factor(x) + 2.0 * self.apply(SLOPE, w) * dw * (self.V @ v[..., None])[..., 0]
         return (self.B @ bend[..., None])[..., 0]
 
+    def bend(self, x: Array, v: Array) -> Array:
+        """d (J v) / dx: (..., n, n), for Newton on fold equations."""
+        w = self.control(x)
+        dw = (self.W @ v[..., None])[..., 0]
+        curvature = self.apply(CURVATURE, w) * dw
+        if not self.has_products:
+            return self.B @ (curvature[..., None] * self.W)
+        du = (self.V @ v[..., None])[..., 0]
+        slope = self.apply(SLOPE, w)
+        first = (curvature * self.factor(x) + slope * du)[..., None] * self.W
+        return self.B @ (first + (slope * dw)[..., None] * self.V)
+
     def source(self, t: float) -> Array:
         """s(t): (..., n)."""
         s = self.s

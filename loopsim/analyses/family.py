@@ -1,0 +1,95 @@
+"""A circuit with one of its lets left free: the equations F(x, let) = 0 and their derivatives.
+
+A let that only moves sources in a straight line costs nothing per point: s follows from two assemblies. Any other is assembled where it is
+asked for, and its derivative is a central difference of residuals.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from typing import Any, TypeAlias
+
+import numpy as np
+from numpy.typing import NDArray
+
+from loopsim.circuit import Circuit
+from loopsim.equations.assemble import assemble, is_affine
+from loopsim.equations.system import System
+
+Array: TypeAlias = NDArray[np.float64]
+
+DIFFERENCE = 6e-6  # of the range: cube root of the unit roundoff, where a central difference is most accurate
+
+
+@dataclass(eq=False)
+class Family:
+    """circuit and settings with `let` free in [low, high] [its SI unit]. Serves as the `CurveEquations` of numerics.curve."""
+
+    circuit: Circuit
+    settings: Mapping[str, Any]
+    let: str
+    low: float
+    high: float
+    affine: bool = field(init=False)
+
+    def __post_init__(self) -> None:
+        self.affine = is_affine(self.circuit, self.let)
+        self._kept: dict[float, System] = {}
+        first = self._assembled(self.low)
+        if self.affine:
+            second = self._assembled(self.high)
+            self._base = first
+            self._rise = (second.s - first.s) / (self.high - self.low)
+            self._supply_rise = (second.supply - first.supply) / (self.high - self.low)
+
+    def _assembled(self, level: float) -> System:
+        return assemble(self.circuit, {**self.settings, self.let: float(level)})
+
+    def system(self, level: float) -> System:
+        """The system at one value of the let."""
+        kept = self._kept.get(level)
+        if kept is None:
+            if self.affine:
+                shift = level - self.low
+                kept = replace(self._base, s=self._base.s + shift * self._rise, supply=self._base.supply + shift * self._supply_rise)
+            else:
+                kept = self._assembled(level)
+            if len(self._kept) > 8:
+                self._kept.clear()
+            self._kept[level] = kept
+        return kept
+
+    def residual(self, x: Array, level: float) -> Array:
+        """F: (n,)."""
+        if self.affine:
+            return self._base.residual(x, self._base.s + (level - self.low) * self._rise)
+        return self.system(level).residual(x)
+
+    def jacobian(self, x: Array, level: float) -> Array:
+        """dF/dx: (n, n)."""
+        return (self._base if self.affine else self.system(level)).jacobian(x)
+
+    def slope(self, x: Array, level: float) -> Array:
+        """dF/dlet: (n,)."""
+        if self.affine:
+            return -self._rise
+        h = DIFFERENCE * (self.high - self.low)
+        return (self._assembled(level + h).residual(x) - self._assembled(level - h).residual(x)) / (2.0 * h)
+
+    def bend(self, x: Array, level: float, v: Array) -> Array:
+        """d(J v)/dx: (n, n)."""
+        return (self._base if self.affine else self.system(level)).bend(x, v)
+
+    def slope_along(self, x: Array, level: float, v: Array) -> Array:
+        """d(J v)/dlet: (n,)."""
+        if self.affine:
+            return np.zeros(len(x))
+        h = DIFFERENCE * (self.high - self.low)
+        return (self._assembled(level + h).jacobian(x) @ v - self._assembled(level - h).jacobian(x) @ v) / (2.0 * h)
+
+    def source_interval(self, low: float, high: float) -> tuple[System, Array]:
+        """The system in the middle of [low, high] and the half width of s over it, for an affine let: (System, (n,))."""
+        middle = 0.5 * (low + high)
+        half = max(high - middle, middle - low) * (1.0 + 1e-12)
+        return self.system(middle), np.abs(self._rise) * half * (1.0 + 1e-12) + np.abs(self._base.s) * 1e-15 * (self._rise != 0.0)
