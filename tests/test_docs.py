@@ -153,6 +153,23 @@ def test_every_word_of_the_command_is_on_the_page_of_words() -> None:
             assert f"`{option.name}`" in words, f"{option.name} of {verb.name}"
 
 
+def test_every_word_of_the_language_is_on_the_page_of_words() -> None:
+    from loopsim.devices.catalogue import DEVICES, field_specs, pins, waveform_specs
+    from loopsim.language.measures import MEASURES
+    from loopsim.language.mistakes import STATEMENTS
+
+    words = (ROOT / "docs/reference/words.md").read_text(encoding="utf-8")
+    forms = ("sine", "square", "ramp")
+    public = {*STATEMENTS, *MEASURES, *DEVICES, *forms}
+    for device in DEVICES:
+        public |= {*pins(device), *field_specs(device)}
+        public |= {word for spec in field_specs(device).values() for word in spec.words}
+    for form in forms:
+        public |= set(waveform_specs(form))
+    missing = sorted(word for word in public if f"`{word}`" not in words)
+    assert not missing
+
+
 def test_text_that_varies_is_not_compared_and_the_rest_is() -> None:
     assert same("3 points (11 boxes, 9 ms)\n", "3 points (12 boxes, 0.4 s)\n")
     assert not same("3 points (11 boxes, 9 ms)\n", "4 points (11 boxes, 9 ms)\n")

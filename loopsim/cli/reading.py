@@ -31,7 +31,7 @@ def readable(path: str) -> None:
         with open(path, "rb") as stream:
             head = stream.read(LARGEST_SNIFF)
     except OSError as error:
-        raise CircuitError("unreadable-file", f"`{path}` cannot be read: {error.strerror}") from None
+        raise CircuitError("cannot-read", f"`{path}` cannot be read: {error.strerror}") from None
     if b"\x00" in head:
         raise CircuitError("not-text", "this is not text: it holds a zero byte", place, "a circuit file is UTF-8 text")
     if not head.strip():
