@@ -3,12 +3,10 @@
     OMP_NUM_THREADS=1 python tests/benchmarks/states.py [--quick]
 
 Every contender gets the same System, written for it: `scipy.optimize.fsolve` from 1,000 random starts (finds, proves
-nothing), and codac
-2.x, a rigorous interval library in C++, with its inverse contractor's centred form switched off (with it points were
-lost: see the
-docs), once in a search loop written here (contract, Krawczyk, bisect) and once with its own paver (which encloses and
-does not count).
-Times are of one process on one thread; compare the columns of one run, not runs. codac is needed for this script alone.
+nothing), and codac 2.x, a rigorous interval library in C++, with its inverse contractor's centred form switched off (with
+it points were lost), once in a search loop written here (contract, Krawczyk, bisect) and once with its own paver (which
+encloses and does not count). Times are processor time of one process on one thread; compare the columns of one run, not
+runs. codac is needed for this script alone.
 """
 
 from __future__ import annotations
@@ -113,13 +111,13 @@ def problems(quick: bool) -> list[Problem]:
 
 
 def median_time(action: Callable[[], object], repeats: int) -> float:
-    """Median wall time [s] after one warm-up."""
+    """Median processor time [s] after one warm-up."""
     action()
     took = []
     for _ in range(repeats):
-        began = time.perf_counter()
+        began = time.process_time()
         action()
-        took.append(time.perf_counter() - began)
+        took.append(time.process_time() - began)
     return statistics.median(took)
 
 
@@ -128,14 +126,14 @@ def from_random_starts(problem: Problem, known: np.ndarray) -> tuple[float, int]
     system = problem.system
     starts = np.random.default_rng(1).uniform(-problem.reach, problem.reach, (STARTS, system.n))
     ends = []
-    began = time.perf_counter()
+    began = time.process_time()
     with np.errstate(all="ignore"), warnings.catch_warnings():
         warnings.simplefilter("ignore")
         for start in starts:
             x, _, code, _ = fsolve(system.residual, start, fprime=system.jacobian, full_output=True, xtol=1e-12)
             if code == 1 and np.all(np.isfinite(x)):
                 ends.append(x)
-    took = time.perf_counter() - began
+    took = time.process_time() - began
     distance = np.max(np.abs(np.array(ends)[:, None] - known[None]), axis=2) if ends else np.full((1, len(known)), np.inf)
     return took, int(np.count_nonzero(distance.min(axis=0) < 1e-6))
 
@@ -225,13 +223,13 @@ def codac_loop(system: System, limit: float) -> tuple[float, int, int, bool]:
     functions = as_codac(system)
     contractor = contractor_of(functions, n)
     identity = codac.IntervalMatrix(codac.Matrix(np.eye(n)))
-    began = time.perf_counter()
+    began = time.process_time()
     stack = [codac.IntervalVector([[-BOX, BOX]] * n)]
     points: list[np.ndarray] = []
     boxes = 0
     while stack:
-        if time.perf_counter() - began > limit:
-            return time.perf_counter() - began, len(points), boxes, False
+        if time.process_time() - began > limit:
+            return time.process_time() - began, len(points), boxes, False
         box = stack.pop()
         boxes += 1
         settled = False
@@ -266,7 +264,7 @@ def codac_loop(system: System, limit: float) -> tuple[float, int, int, bool]:
             points.append(middle_of(box))
             continue
         stack += list(box.bisect_largest())
-    return time.perf_counter() - began, len(points), boxes, True
+    return time.process_time() - began, len(points), boxes, True
 
 
 def codac_paver(name: str, limit: float) -> tuple[float, bool]:
@@ -276,8 +274,8 @@ def codac_paver(name: str, limit: float) -> tuple[float, bool]:
         "name = sys.argv[1]\n"
         "system = next(p.system for p in states.problems(False) if p.name == name)\n"
         "n = system.n; c = states.contractor_of(states.as_codac(system), n)\n"
-        "t = time.perf_counter(); codac.pave(codac.IntervalVector([[-states.BOX, states.BOX]] * n), c, 1e-3)\n"
-        "print(time.perf_counter() - t)\n"
+        "t = time.process_time(); codac.pave(codac.IntervalVector([[-states.BOX, states.BOX]] * n), c, 1e-3)\n"
+        "print(time.process_time() - t)\n"
     )
     try:
         done = subprocess.run(
