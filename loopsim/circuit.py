@@ -171,11 +171,21 @@ class Circuit:
     sources: Mapping[str, str] = field(default_factory=dict)
 
     def trace(self, along: str, *, watch: Any = None, over: tuple[float, float] | None = None, stations: int = 9, box: float = 1e3,
-              budget: float = 60.0, range_budget: float = 10.0, **lets: Any) -> "Trace":  # fmt: skip
+              budget: float = 60.0, range_budget: float = 10.0, **lets: Any) -> Trace:  # fmt: skip
         """The whole static characteristic along a let, through its folds; see `loopsim.analyses.trace.trace`."""
         from loopsim.analyses.trace import trace
 
-        return trace(self, along, watch=watch, over=over, stations=stations, box=box, budget=budget, range_budget=range_budget, settings=lets)
+        return trace(
+            self,
+            along,
+            watch=watch,
+            over=over,
+            stations=stations,
+            box=box,
+            budget=budget,
+            range_budget=range_budget,
+            settings=lets,
+        )
 
     def states(self, *, box: float = 1e3, budget: float = 60.0, **lets: Any) -> States:
         """Every DC operating point with the named lets set [SI]; see `loopsim.analyses.states.states`."""

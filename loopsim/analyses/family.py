@@ -52,7 +52,11 @@ class Family:
         if kept is None:
             if self.affine:
                 shift = level - self.low
-                kept = replace(self._base, s=self._base.s + shift * self._rise, supply=self._base.supply + shift * self._supply_rise)
+                kept = replace(
+                    self._base,
+                    s=self._base.s + shift * self._rise,
+                    supply=self._base.supply + shift * self._supply_rise,
+                )
             else:
                 kept = self._assembled(level)
             if len(self._kept) > 8:
@@ -86,10 +90,14 @@ class Family:
         if self.affine:
             return np.zeros(len(x))
         h = DIFFERENCE * (self.high - self.low)
-        return (self._assembled(level + h).jacobian(x) @ v - self._assembled(level - h).jacobian(x) @ v) / (2.0 * h)
+        return (self._assembled(level + h).jacobian(x) @ v - self._assembled(level - h).jacobian(x) @ v) / (
+            2.0 * h
+        )
 
     def source_interval(self, low: float, high: float) -> tuple[System, Array]:
         """The system in the middle of [low, high] and the half width of s over it, for an affine let: (System, (n,))."""
         middle = 0.5 * (low + high)
         half = max(high - middle, middle - low) * (1.0 + 1e-12)
-        return self.system(middle), np.abs(self._rise) * half * (1.0 + 1e-12) + np.abs(self._base.s) * 1e-15 * (self._rise != 0.0)
+        return self.system(middle), np.abs(self._rise) * half * (1.0 + 1e-12) + np.abs(
+            self._base.s
+        ) * 1e-15 * (self._rise != 0.0)

@@ -6,7 +6,6 @@ were certified; independent groups multiply only when the list is written out.
 
 from __future__ import annotations
 
-import time
 from dataclasses import dataclass
 from typing import TypeAlias
 
@@ -48,7 +47,13 @@ class Points:
         return self.undecided == 0
 
 
-def all_points(system: System, box: float, deadline: float = np.inf, source_radius: Array | None = None, max_boxes: int = 10_000_000) -> Points:
+def all_points(
+    system: System,
+    box: float,
+    deadline: float = np.inf,
+    source_radius: Array | None = None,
+    max_boxes: int = 10_000_000,
+) -> Points:
     """Every DC solution with all nets within +/- box [V]. deadline: time.monotonic() after which the rest is left undecided.
 
     Groups without a nonlinear row are solved directly, whatever the box. source_radius: (n,) half widths of intervals in which s may lie;
@@ -85,9 +90,15 @@ def all_points(system: System, box: float, deadline: float = np.inf, source_radi
                 remainder += _describe(system, block, seen[key])
         counts = np.array([len(f.x) for f in found], dtype=np.int64)[member]
         if counts.sum() > MAX_POINTS:
-            raise AnalysisError("too-many-states", f"more than {MAX_POINTS} operating points", hint="split the circuit into its parts")
+            raise AnalysisError(
+                "too-many-states",
+                f"more than {MAX_POINTS} operating points",
+                hint="split the circuit into its parts",
+            )
         parent = np.repeat(np.arange(len(member)), counts)
-        position = np.concatenate([np.arange(c) for c in counts]) if len(counts) else np.zeros(0, dtype=np.int64)
+        position = (
+            np.concatenate([np.arange(c) for c in counts]) if len(counts) else np.zeros(0, dtype=np.int64)
+        )
         low, high, centre, choice = low[parent], high[parent], centre[parent], choice[parent]
         group = member[parent]
         for g, f in enumerate(found):
@@ -109,13 +120,28 @@ def _limits(system: System, block: Block, box: float) -> Array:
 
 def _key(problem: Problem, kinds: NDArray[np.int64], limits: Array) -> bytes:
     """Groups with the same numbers have the same solutions: several equal cells are searched once."""
-    arrays = (limits, problem.G, problem.B, problem.W, problem.V, problem.c_low, problem.c_high, problem.d_low, problem.d_high,
-              problem.s_low, problem.s_high)
+    arrays = (
+        limits,
+        problem.G,
+        problem.B,
+        problem.W,
+        problem.V,
+        problem.c_low,
+        problem.c_high,
+        problem.d_low,
+        problem.d_high,
+        problem.s_low,
+        problem.s_high,
+    )
     parameters = getattr(problem.rows, "parameters", np.zeros(0))
-    return b"|".join([np.int64(problem.n).tobytes(), kinds.tobytes(), parameters.tobytes(), *(a.tobytes() for a in arrays)])
+    return b"|".join(
+        [np.int64(problem.n).tobytes(), kinds.tobytes(), parameters.tobytes(), *(a.tobytes() for a in arrays)]
+    )
 
 
-def _solve(problem: Problem, kinds: NDArray[np.int64], limits: Array, deadline: float, max_boxes: int) -> Found:
+def _solve(
+    problem: Problem, kinds: NDArray[np.int64], limits: Array, deadline: float, max_boxes: int
+) -> Found:
     if problem.m == 0:
         return _solve_linear(problem)
     scale = np.where(limits < INNER_LIMIT, 1.0, 1e-3)
@@ -172,8 +198,17 @@ def group_problem(
     d_low, d_high = _plus(system.d[inner], system.V[np.ix_(inner, needs)], x_low, x_high)
     kinds = system.kinds[inner]
     problem = Problem(
-        system.G[np.ix_(rows, unknowns)], system.B[np.ix_(rows, inner)], system.W[np.ix_(inner, unknowns)],
-        system.V[np.ix_(inner, unknowns)], rows_of(kinds, system.parameters[inner]), c_low, c_high, d_low, d_high, s_low, s_high,
+        system.G[np.ix_(rows, unknowns)],
+        system.B[np.ix_(rows, inner)],
+        system.W[np.ix_(inner, unknowns)],
+        system.V[np.ix_(inner, unknowns)],
+        rows_of(kinds, system.parameters[inner]),
+        c_low,
+        c_high,
+        d_low,
+        d_high,
+        s_low,
+        s_high,
     )
     return problem, kinds
 
@@ -198,13 +233,19 @@ def parity_holds(problem: Problem, kinds: NDArray[np.int64], found: Found) -> bo
     has the degree of its linear part, so the signs add to that (degree theory after Chua and Wang 1977; Sandberg and Willson 1969;
     from memory).
     """
-    if len(problem.product) or np.any([k not in BOUNDED and k not in GROWING for k in kinds]) or len(found.x) == 0:
+    if (
+        len(problem.product)
+        or np.any([k not in BOUNDED and k not in GROWING for k in kinds])
+        or len(found.x) == 0
+    ):
         return True
     growing = np.flatnonzero([k in GROWING for k in kinds])
     if len(growing) > PARITY_ROWS:
         return True
     corners = ((np.arange(2 ** len(growing))[:, None] >> np.arange(len(growing))) & 1).astype(float)
-    weight = 1.0 / np.maximum(np.max(np.abs(problem.B[:, growing]), axis=0) * np.max(np.abs(problem.W[growing]), axis=1), TINY)
+    weight = 1.0 / np.maximum(
+        np.max(np.abs(problem.B[:, growing]), axis=0) * np.max(np.abs(problem.W[growing]), axis=1), TINY
+    )
     slopes = np.zeros((len(corners), problem.m))
     slopes[:, growing] = corners * weight
     signs, logs = np.linalg.slogdet(problem.G + problem.B @ (slopes[..., None] * problem.W))
@@ -230,7 +271,9 @@ def _describe(system: System, block: Block, found: Found) -> list[str]:
         if len(kept) == 0:
             continue
         low, high = kept[:, 0].min(axis=0), kept[:, 1].max(axis=0)
-        nets = [p for p, j in enumerate(block.unknowns) if system.unknowns[j][0] == "net"] or list(range(len(block.unknowns)))
+        nets = [p for p, j in enumerate(block.unknowns) if system.unknowns[j][0] == "net"] or list(
+            range(len(block.unknowns))
+        )
         widest = max(nets, key=lambda p: high[p] - low[p])
         name = system.unknowns[block.unknowns[widest]][1]
         if word == "cluster":
@@ -239,7 +282,9 @@ def _describe(system: System, block: Block, found: Found) -> list[str]:
                 f" {high[widest] - low[widest]:.2g}: a fold is near"
             )
         else:
-            lines.append(f"{len(kept)} boxes not searched within the budget, {name} in {low[widest]:.6g} .. {high[widest]:.6g}")
+            lines.append(
+                f"{len(kept)} boxes not searched within the budget, {name} in {low[widest]:.6g} .. {high[widest]:.6g}"
+            )
     return lines
 
 

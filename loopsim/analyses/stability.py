@@ -55,7 +55,16 @@ def judge(system: System, x: Array) -> list[Verdict]:
     trials = _trials(system, candidates, TRIALS if not dynamic else 3)
     strayed = [_spectra(order, jacobians, matrix) for matrix in trials]
     return [
-        _verdict(system, jacobians[i], bool(wrong[i]), own[i], [trial[i] for trial in strayed], trials, candidates, dynamic)
+        _verdict(
+            system,
+            jacobians[i],
+            bool(wrong[i]),
+            own[i],
+            [trial[i] for trial in strayed],
+            trials,
+            candidates,
+            dynamic,
+        )
         for i in range(len(x))
     ]
 
@@ -163,32 +172,69 @@ def _verdict(
 ) -> Verdict:  # fmt: skip
     growth, grows = _growth(own)
     outcomes = [_growth(s)[1] for s in strayed]
-    assumed = f"assumed {STRAY * 1e12:g} pF from each net without capacitance to gnd, each varied by 1/10 to 10"
+    assumed = (
+        f"assumed {STRAY * 1e12:g} pF from each net without capacitance to gnd, each varied by 1/10 to 10"
+    )
     if wrong:
         shown, note = own, ""
         if grows is not True and strayed:
             # the dynamics it declares do not carry the growth: a loop without delay; strays give it a rate
             shown, note = strayed[0], f"growth rate with {assumed.removeprefix('assumed ').split(',')[0]}"
-        return _filled(system, jacobian, ANY_STRAYS, False, True, shown, trials[0] if shown is not own else system.C, note)
+        return _filled(
+            system,
+            jacobian,
+            ANY_STRAYS,
+            False,
+            True,
+            shown,
+            trials[0] if shown is not own else system.C,
+            note,
+        )
     if dynamic and len(own.values):
         if grows is None:
-            return _filled(system, jacobian, UNDECIDED, None, False, own, system.C, "a real part is within its rounding error of zero")
+            return _filled(
+                system,
+                jacobian,
+                UNDECIDED,
+                None,
+                False,
+                own,
+                system.C,
+                "a real part is within its rounding error of zero",
+            )
         if grows:
             return _filled(system, jacobian, THESE_DYNAMICS, False, False, own, system.C, "")
         if any(outcome is not False for outcome in outcomes):
             at = next(k for k, outcome in enumerate(outcomes) if outcome is not False)
             note = f"grows with strays on nets that have none: {_strays_text(system, trials[at], candidates)}"
             return _filled(system, jacobian, STABLE, True, False, own, system.C, note)
-        return _filled(system, jacobian, STABLE, True, bool(len(outcomes)) or len(candidates) == 0, own, system.C, "")
+        return _filled(
+            system, jacobian, STABLE, True, bool(outcomes) or len(candidates) == 0, own, system.C, ""
+        )
     if not outcomes:
         note = "no net can move: every one is held by a source"
-        return _filled(system, jacobian, STABLE, True, True, own, system.C, note if len(own.values) == 0 else "")
+        return _filled(
+            system, jacobian, STABLE, True, True, own, system.C, note if len(own.values) == 0 else ""
+        )
     if all(outcome is False for outcome in outcomes):
-        return _filled(system, jacobian, ALL_TRIED, True, True, strayed[0], trials[0], f"no dynamics given: {assumed}")
+        return _filled(
+            system, jacobian, ALL_TRIED, True, True, strayed[0], trials[0], f"no dynamics given: {assumed}"
+        )
     if all(outcome is True for outcome in outcomes):
-        return _filled(system, jacobian, NONE_TRIED, False, True, strayed[0], trials[0], f"no dynamics given: {assumed}")
+        return _filled(
+            system, jacobian, NONE_TRIED, False, True, strayed[0], trials[0], f"no dynamics given: {assumed}"
+        )
     if any(outcome is None for outcome in outcomes):
-        return _filled(system, jacobian, UNDECIDED, None, False, strayed[0], trials[0], "a real part is within its rounding error of zero")
+        return _filled(
+            system,
+            jacobian,
+            UNDECIDED,
+            None,
+            False,
+            strayed[0],
+            trials[0],
+            "a real part is within its rounding error of zero",
+        )
     at = next(k for k, outcome in enumerate(outcomes) if outcome != outcomes[0])
     word = "grows" if outcomes[at] else "decays"
     note = f"no dynamics given: {assumed}; {word} with {_strays_text(system, trials[at], candidates)}"
@@ -203,7 +249,14 @@ def _strays_text(system: System, matrix: Array, candidates: NDArray[np.int64]) -
 
 
 def _filled(
-    system: System, jacobian: Array, text: str, stable: bool | None, any_strays: bool, spectrum: Spectrum, dynamics: Array, note: str
+    system: System,
+    jacobian: Array,
+    text: str,
+    stable: bool | None,
+    any_strays: bool,
+    spectrum: Spectrum,
+    dynamics: Array,
+    note: str,
 ) -> Verdict:
     values = spectrum.values
     pairs = values[values.imag > 0.0]
@@ -240,4 +293,8 @@ def _swings(system: System, jacobian: Array, dynamics: Array, value: complex) ->
     size = np.abs(growing_mode(jacobian, dynamics, value))
     nets = [(float(size[j]), name) for j, (kind, name) in enumerate(system.unknowns) if kind == "net"]
     top = max((s for s, _ in nets), default=0.0)
-    return tuple(name for s, name in sorted(nets, key=lambda item: (-item[0], item[1])) if s > MOVING * top)[:6] if top > 0.0 else ()
+    return (
+        tuple(name for s, name in sorted(nets, key=lambda item: (-item[0], item[1])) if s > MOVING * top)[:6]
+        if top > 0.0
+        else ()
+    )

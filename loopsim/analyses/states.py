@@ -35,7 +35,9 @@ ACTIVE_OUTPUTS = {
 }  # fmt: skip
 
 
-def states(circuit: Circuit, settings: Mapping[str, Any] | None = None, *, box: float = 1e3, budget: float = 60.0) -> States:
+def states(
+    circuit: Circuit, settings: Mapping[str, Any] | None = None, *, box: float = 1e3, budget: float = 60.0
+) -> States:
     """Every DC operating point with the named lets set [SI; degC for `ambient`].
 
     box: all nets within +/- this [V]; budget: wall time for the proof [s], after which the rest is undecided.
@@ -49,7 +51,9 @@ def states(circuit: Circuit, settings: Mapping[str, Any] | None = None, *, box: 
     system = assemble(circuit, settings)
     found = all_points(system, box, began + budget)
     took = time.monotonic() - began
-    extra = _unproved(system, found, box, max(SWEEP_FLOOR, SWEEP_SHARE * took if found.complete else 0.5 * budget))
+    extra = _unproved(
+        system, found, box, max(SWEEP_FLOOR, SWEEP_SHARE * took if found.complete else 0.5 * budget)
+    )
     x = np.concatenate([found.x, extra])
     spread = np.concatenate([found.spread, np.zeros_like(extra)])
     values = {name: float(value) for name, value in parameter_values(circuit, settings).items()}
@@ -90,9 +94,13 @@ def watched(circuit: Circuit) -> tuple[str, ...]:
     named: list[str] = []
     for requirement in circuit.requirements:
         if requirement.target is not None:
-            named += [ref.name for ref in sorted(references(requirement.target), key=str) if isinstance(ref, NetRef)]
+            named += [
+                ref.name for ref in sorted(references(requirement.target), key=str) if isinstance(ref, NetRef)
+            ]
     if not named:
-        named = [part.pins[ACTIVE_OUTPUTS[part.device]] for part in circuit.parts if part.device in ACTIVE_OUTPUTS]
+        named = [
+            part.pins[ACTIVE_OUTPUTS[part.device]] for part in circuit.parts if part.device in ACTIVE_OUTPUTS
+        ]
     kept = tuple(dict.fromkeys(net for net in named if net in circuit.nets))
     return kept or circuit.nets
 
@@ -139,7 +147,9 @@ def _unproved(system: System, found: Points, box: float, seconds: float) -> Arra
                 new[k] = False
     if found.complete and np.any(new):
         lost = {name: float(v) for (_, name), v in zip(system.unknowns, swept[new][0], strict=True)}
-        raise InternalError(f"the proof of completeness missed an operating point that was found otherwise: {lost}; please report this")
+        raise InternalError(
+            f"the proof of completeness missed an operating point that was found otherwise: {lost}; please report this"
+        )
     return np.asarray(swept[new])
 
 
@@ -156,12 +166,20 @@ def _order(system: System, x: Array, watch: tuple[str, ...]) -> NDArray[np.int64
 
 
 def _named(
-    circuit: Circuit, settings: Mapping[str, Any] | None, system: System, x: Array, spread: Array, verdicts: list[Verdict]
+    circuit: Circuit,
+    settings: Mapping[str, Any] | None,
+    system: System,
+    x: Array,
+    spread: Array,
+    verdicts: list[Verdict],
 ) -> tuple[State, ...]:
     if len(x) == 0:
         return ()
     nets = [(name, j) for j, (kind, name) in enumerate(system.unknowns) if kind == "net"]
-    by_part = {name: np.broadcast_to(np.asarray(value, dtype=float), (len(x),)) for name, value in pin_currents(circuit, x, settings).items()}
+    by_part = {
+        name: np.broadcast_to(np.asarray(value, dtype=float), (len(x),))
+        for name, value in pin_currents(circuit, x, settings).items()
+    }
     radii = np.max(spread, axis=1)
     return tuple(
         State(
@@ -183,6 +201,8 @@ def _notes(listed: tuple[State, ...]) -> tuple[str, ...]:
         if state.verdict_full.note:
             by_note.setdefault(state.verdict_full.note, []).append(state.name)
     return tuple(
-        note if len(names) == len(listed) else f"{', '.join(names) if len(names) <= 8 else f'{len(names)} states'}: {note}"
+        note
+        if len(names) == len(listed)
+        else f"{', '.join(names) if len(names) <= 8 else f'{len(names)} states'}: {note}"
         for note, names in by_note.items()
     )

@@ -67,8 +67,12 @@ def _along_sources(system: System, deadline: float) -> list[Array]:
             direction = _direction(system, x, tangent)
             if direction is None:
                 break
-            corrected = _correct(system, residual, x + step * direction[:-1], level + step * direction[-1], direction)
-            far = corrected is None or np.max(np.abs(corrected[0] - x) / (1.0 + np.abs(x))) > 4.0 * step + 1e-9
+            corrected = _correct(
+                system, residual, x + step * direction[:-1], level + step * direction[-1], direction
+            )
+            far = (
+                corrected is None or np.max(np.abs(corrected[0] - x) / (1.0 + np.abs(x))) > 4.0 * step + 1e-9
+            )
             if corrected is None or far:
                 step *= 0.4
                 if step < SMALLEST_STEP:
@@ -99,7 +103,9 @@ def _direction(system: System, x: Array, last: Array) -> Array | None:
     return tangent / size if np.isfinite(size) and size > 0.0 else None
 
 
-def _correct(system: System, residual: object, x: Array, level: float, direction: Array) -> tuple[Array, float, int] | None:
+def _correct(
+    system: System, residual: object, x: Array, level: float, direction: Array
+) -> tuple[Array, float, int] | None:
     """Newton back to the curve in the plane across the step; None where it does not come back quickly."""
     assert callable(residual)
     n = system.n

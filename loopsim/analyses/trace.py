@@ -25,7 +25,7 @@ from loopsim.equations.assemble import let_range, parameter_values
 from loopsim.equations.structure import check
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError, CircuitError, InternalError
-from loopsim.numerics.curve import Curve, follow, fold
+from loopsim.numerics.curve import Curve, fold, follow
 from loopsim.numerics.newton import newton
 from loopsim.numerics.spectrum import determinant_signs
 
@@ -36,9 +36,13 @@ SAME = 1e-6  # scaled distance at which a proved state and a point of a curve ar
 PAST = 1e-7  # of the range: how far past a fold the landing is looked for
 MOVES = 0.05  # of a net's travel over all branches: a jump that moves it by less is no jump of that net
 SETTLE_STEPS = 400
-GRADING = 1.8  # lengths of neighbouring pieces beside a fold: a tube at a distance d from it closes over about d
+GRADING = (
+    1.8  # lengths of neighbouring pieces beside a fold: a tube at a distance d from it closes over about d
+)
 STEEPEST = 1e-7  # of the range: pieces without a fold are halved down to this; a gain of 1e5 needs 1e-6
-TUBE_BOXES = 40  # a piece of the range that needs more boxes than its states' own proof took is halved instead
+TUBE_BOXES = (
+    40  # a piece of the range that needs more boxes than its states' own proof took is halved instead
+)
 FINEST = 2e-4  # of the range: pieces of the range proof are not cut below this; folds lie in such gaps
 
 
@@ -100,7 +104,12 @@ class Crossing:
 
     def to_dict(self) -> dict[str, Any]:
         """The JSON form."""
-        return {"at": self.at, "nets": dict(self.nets), "frequency": self.frequency, "precision": self.precision}
+        return {
+            "at": self.at,
+            "nets": dict(self.nets),
+            "frequency": self.frequency,
+            "precision": self.precision,
+        }
 
 
 @dataclass(frozen=True, eq=False)
@@ -215,7 +224,10 @@ def trace(
     proved = [all_points(family.system(float(v)), box, deadline) for v in values]
     scale = _scale(family, proved, high - low)
     curves = _curves(family, values, proved, scale, deadline)
-    branches, index = [], {name: j for j, (kind, name) in enumerate(family.system(low).unknowns) if kind == "net"}
+    branches, index = (
+        [],
+        {name: j for j, (kind, name) in enumerate(family.system(low).unknowns) if kind == "net"},
+    )
     for curve in curves:
         branches.append(_branch(family, curve, index))
     matched, notes = _matched(family, branches, values, proved, scale)
@@ -223,7 +235,9 @@ def trace(
     crossings = _crossings(family, branches, index, scale)
     travel = {net: _travel(branches, net) for net in index}
     per_net = _thresholds(family, branches, folds, travel, scale)
-    over_range, gaps = _prove_range(family, values, proved, folds, box, min(deadline, time.monotonic() + range_budget))
+    over_range, gaps = _prove_range(
+        family, values, proved, folds, box, min(deadline, time.monotonic() + range_budget)
+    )
     parameter = circuit.parameters[along]
     return Trace(
         circuit.name, circuit.file, along, parameter.unit, low, high,
@@ -233,11 +247,18 @@ def trace(
     )  # fmt: skip
 
 
-def _range(circuit: Circuit, along: str, over: tuple[float, float] | None, settings: Mapping[str, Any] | None) -> tuple[float, float]:
+def _range(
+    circuit: Circuit, along: str, over: tuple[float, float] | None, settings: Mapping[str, Any] | None
+) -> tuple[float, float]:
     found = over if over is not None else let_range(circuit, along, settings)
     if found is None:
         parameter = circuit.parameters[along]
-        raise CircuitError("let-range", f"the let `{along}` has no range", parameter.span, f"write `let {along} = ... in LO .. HI`, or give one")
+        raise CircuitError(
+            "let-range",
+            f"the let `{along}` has no range",
+            parameter.span,
+            f"write `let {along} = ... in LO .. HI`, or give one",
+        )
     low, high = float(found[0]), float(found[1])
     if not (np.isfinite(low) and np.isfinite(high) and low < high):
         raise CircuitError("let-range", f"the range of `{along}` has to rise, not {low:g} .. {high:g}")
@@ -263,7 +284,9 @@ def _scale(family: Family, proved: Sequence[Points], width: float) -> Array:
     return np.append(np.maximum(size, floor), width)
 
 
-def _curves(family: Family, values: Array, proved: Sequence[Points], scale: Array, deadline: float) -> list[Curve]:
+def _curves(
+    family: Family, values: Array, proved: Sequence[Points], scale: Array, deadline: float
+) -> list[Curve]:
     """Every curve through a proved state, each once, ends joined: from low or from an inner start to both of its ends."""
     curves: list[Curve] = []
     order = [0, len(values) - 1, *range(1, len(values) - 1)]
@@ -280,7 +303,9 @@ def _curves(family: Family, values: Array, proved: Sequence[Points], scale: Arra
             if inward.end == "closed" or station in (0, len(values) - 1):
                 curves.append(inward)
                 continue
-            curves.append(_joined(follow(family, x, value, outward, family.low, family.high, scale, deadline), inward))
+            curves.append(
+                _joined(follow(family, x, value, outward, family.low, family.high, scale, deadline), inward)
+            )
     return [_cut(family, curve, scale) for curve in curves]
 
 
@@ -292,7 +317,11 @@ def _joined(back: Curve, ahead: Curve) -> Curve:
         np.concatenate([back.level[::-1], ahead.level[1:]]),
         np.concatenate([-back.tangent[::-1], ahead.tangent[1:]]),
         lengths - lengths[0],
-        ahead.end if ahead.end in ("stuck", "time") else back.end if back.end in ("stuck", "time") else "range",
+        ahead.end
+        if ahead.end in ("stuck", "time")
+        else back.end
+        if back.end in ("stuck", "time")
+        else "range",
     )
 
 
@@ -337,13 +366,23 @@ def _passes(family: Family, curve: Curve, x: Array, value: float, scale: Array) 
 
 def _branch(family: Family, curve: Curve, index: Mapping[str, int]) -> Branch:
     nets = {net: curve.x[:, j] for net, j in index.items()}
-    return Branch(curve.level, curve.x, nets, _stabilities(family, curve.level, curve.x), curve.length, curve.end == "closed")
+    return Branch(
+        curve.level,
+        curve.x,
+        nets,
+        _stabilities(family, curve.level, curve.x),
+        curve.length,
+        curve.end == "closed",
+    )
 
 
 def _stabilities(family: Family, levels: Array, x: Array) -> tuple[bool | None, ...]:
     if family.affine:
         return tuple(v.stable for v in judge(family.system(float(levels[0])), x))
-    return tuple(judge(family.system(float(level)), here[None])[0].stable for level, here in zip(levels, x, strict=True))
+    return tuple(
+        judge(family.system(float(level)), here[None])[0].stable
+        for level, here in zip(levels, x, strict=True)
+    )
 
 
 def _matched(
@@ -357,7 +396,9 @@ def _matched(
         missing = sum(all(np.max(np.abs(y - x) / scale[:-1]) >= SAME for y in crossings) for x in points.x)
         extra = [y for y in crossings if all(np.max(np.abs(y - x) / scale[:-1]) >= SAME for x in points.x)]
         if extra and points.complete and _really_there(family, extra[0], float(value)):
-            raise InternalError(f"the curve passes a state at {value:g} that the proof of completeness excluded; please report this")
+            raise InternalError(
+                f"the curve passes a state at {value:g} that the proof of completeness excluded; please report this"
+            )
         if missing:
             notes.append(f"{missing} proved states at {value:.6g} lie on no branch that could be followed")
         elif points.complete:
@@ -375,22 +416,45 @@ def _really_there(family: Family, x: Array, value: float) -> bool:
 
 
 def _folds(
-    family: Family, branches: Sequence[Branch], index: Mapping[str, int], scale: Array, box: float, deadline: float
+    family: Family,
+    branches: Sequence[Branch],
+    index: Mapping[str, int],
+    scale: Array,
+    box: float,
+    deadline: float,
 ) -> tuple[Fold, ...]:
     found: list[Fold] = []
     for number, branch in enumerate(branches):
         turns = np.flatnonzero(np.diff(np.sign(np.diff(branch.values))) != 0) + 1
-        if branch.closed and len(branch.values) > 3 and (branch.values[1] - branch.values[0]) * (branch.values[-1] - branch.values[-2]) < 0:
+        if (
+            branch.closed
+            and len(branch.values) > 3
+            and (branch.values[1] - branch.values[0]) * (branch.values[-1] - branch.values[-2]) < 0
+        ):
             turns = np.append(turns, 0)
         for i in turns:
             before, after = (i - 1, i + 1) if i else (len(branch.values) - 2, 1)
             direction = branch.x[after] - branch.x[before]
-            point = fold(family, family.bend, family.slope_along, branch.x[i], float(branch.values[i]), direction, scale)
+            point = fold(
+                family,
+                family.bend,
+                family.slope_along,
+                branch.x[i],
+                float(branch.values[i]),
+                direction,
+                scale,
+            )
             if point is None or abs(point.level - branch.values[i]) > 0.1 * scale[-1]:
                 continue
-            rising = bool(branch.values[before] < branch.values[i]) or bool(branch.values[i] > branch.values[after])
+            rising = bool(branch.values[before] < branch.values[i]) or bool(
+                branch.values[i] > branch.values[after]
+            )
             sides = (branch.stable[before], branch.stable[after])
-            found.append(_landed(family, point.x, point.level, point.precision, rising, sides, index, number, box, deadline))
+            found.append(
+                _landed(
+                    family, point.x, point.level, point.precision, rising, sides, index, number, box, deadline
+                )
+            )
     return tuple(sorted(found, key=lambda f: (f.at, f.branch)))
 
 
@@ -405,7 +469,9 @@ def _landed(
     if from_stable and family.low <= past <= family.high:
         landing = settle(family.system(past), x)
     lands = {net: float(landing[j]) for net, j in index.items()} if landing is not None else None
-    return Fold(level, nets, "rising" if rising else "falling", precision, from_stable, lands, x, landing, branch)
+    return Fold(
+        level, nets, "rising" if rising else "falling", precision, from_stable, lands, x, landing, branch
+    )
 
 
 def settle(system: System, x: Array) -> Array | None:
@@ -415,7 +481,11 @@ def settle(system: System, x: Array) -> Array | None:
     """
     dynamics = system.C.copy()
     for j, (kind, _) in enumerate(system.unknowns):
-        if kind != "current" and not np.any(system.C[:, j] != 0.0) and (not system.row_units or system.row_units[j] == "A"):
+        if (
+            kind != "current"
+            and not np.any(system.C[:, j] != 0.0)
+            and (not system.row_units or system.row_units[j] == "A")
+        ):
             dynamics[j, j] += STRAY
     h, y = 1e-13, x
     for _ in range(SETTLE_STEPS):
@@ -443,7 +513,9 @@ def settle(system: System, x: Array) -> Array | None:
     return None
 
 
-def _crossings(family: Family, branches: Sequence[Branch], index: Mapping[str, int], scale: Array) -> tuple[Crossing, ...]:
+def _crossings(
+    family: Family, branches: Sequence[Branch], index: Mapping[str, int], scale: Array
+) -> tuple[Crossing, ...]:
     """Stability changes between neighbouring points of a branch where the let does not turn."""
     found: list[Crossing] = []
     for branch in branches:
@@ -452,7 +524,8 @@ def _crossings(family: Family, branches: Sequence[Branch], index: Mapping[str, i
             if a is None or b is None or a == b:
                 continue
             turning = any(
-                0 < k < len(branch.values) - 1 and (branch.values[k] - branch.values[k - 1]) * (branch.values[k + 1] - branch.values[k]) <= 0
+                0 < k < len(branch.values) - 1
+                and (branch.values[k] - branch.values[k - 1]) * (branch.values[k + 1] - branch.values[k]) <= 0
                 for k in (i, i + 1)
             )
             if turning:
@@ -463,7 +536,9 @@ def _crossings(family: Family, branches: Sequence[Branch], index: Mapping[str, i
     return tuple(found)
 
 
-def _locate(family: Family, branch: Branch, i: int, index: Mapping[str, int], scale: Array) -> Crossing | None:
+def _locate(
+    family: Family, branch: Branch, i: int, index: Mapping[str, int], scale: Array
+) -> Crossing | None:
     """The change between points i and i + 1, by bisection on the largest real part along the let."""
     lo, hi = float(branch.values[i]), float(branch.values[i + 1])
     x_lo, x_hi = branch.x[i], branch.x[i + 1]
@@ -490,10 +565,19 @@ def _locate(family: Family, branch: Branch, i: int, index: Mapping[str, int], sc
             hi, x_hi, growth_hi = middle, x, growth
         if abs(hi - lo) < 1e-11 * scale[-1] or growth == 0.0:
             break
-    signs = determinant_signs(np.stack([family.jacobian(branch.x[i], float(branch.values[i])), family.jacobian(branch.x[i + 1], float(branch.values[i + 1]))]))
+    signs = determinant_signs(
+        np.stack(
+            [
+                family.jacobian(branch.x[i], float(branch.values[i])),
+                family.jacobian(branch.x[i + 1], float(branch.values[i + 1])),
+            ]
+        )
+    )
     kind = "branch point" if signs[0] * signs[1] < 0 else "hopf"
     nets = {net: float(x_lo[j]) for net, j in index.items()}
-    return Crossing(kind, 0.5 * (lo + hi), nets, frequency if kind == "hopf" else None, abs(hi - lo) / scale[-1])
+    return Crossing(
+        kind, 0.5 * (lo + hi), nets, frequency if kind == "hopf" else None, abs(hi - lo) / scale[-1]
+    )
 
 
 def _travel(branches: Sequence[Branch], net: str) -> float:
@@ -503,7 +587,11 @@ def _travel(branches: Sequence[Branch], net: str) -> float:
 
 
 def _thresholds(
-    family: Family, branches: Sequence[Branch], folds: Sequence[Fold], travel: Mapping[str, float], scale: Array
+    family: Family,
+    branches: Sequence[Branch],
+    folds: Sequence[Fold],
+    travel: Mapping[str, float],
+    scale: Array,
 ) -> dict[str, Thresholds]:
     up = _slow_ride(family, branches, folds, scale, 1.0)
     down = _slow_ride(family, branches, folds, scale, -1.0)
@@ -511,7 +599,9 @@ def _thresholds(
     for net in travel:
         rising = tuple(f.at for f in up if _jumps(f, net, travel[net]))
         falling = tuple(f.at for f in down if _jumps(f, net, travel[net]))
-        found[net] = Thresholds(rising[0] if rising else None, falling[0] if falling else None, rising, falling)
+        found[net] = Thresholds(
+            rising[0] if rising else None, falling[0] if falling else None, rising, falling
+        )
     return found
 
 
@@ -519,7 +609,9 @@ def _jumps(found: Fold, net: str, travel: float) -> bool:
     return found.lands is not None and abs(found.lands[net] - found.nets[net]) > MOVES * travel
 
 
-def _slow_ride(family: Family, branches: Sequence[Branch], folds: Sequence[Fold], scale: Array, way: float) -> list[Fold]:
+def _slow_ride(
+    family: Family, branches: Sequence[Branch], folds: Sequence[Fold], scale: Array, way: float
+) -> list[Fold]:
     """The jumps met when the let moves slowly from one end to the other, from every stable state at the first end."""
     begin = family.low if way > 0 else family.high
     met: list[Fold] = []
@@ -543,7 +635,9 @@ def _slow_ride(family: Family, branches: Sequence[Branch], folds: Sequence[Fold]
     return sorted(met, key=lambda f: way * f.at)
 
 
-def _next_fold(branches: Sequence[Branch], folds: Sequence[Fold], place: tuple[int, int], way: float) -> Fold | None:
+def _next_fold(
+    branches: Sequence[Branch], folds: Sequence[Fold], place: tuple[int, int], way: float
+) -> Fold | None:
     """The fold that ends a ride from a point of a branch; None where the ride leaves the range or loses stability first."""
     number, k = place
     branch = branches[number]
@@ -553,7 +647,9 @@ def _next_fold(branches: Sequence[Branch], folds: Sequence[Fold], place: tuple[i
     step = 1 if ahead != k and (branch.values[ahead] - branch.values[k]) * way > 0.0 else -1
     if step == -1 and (behind == k or (branch.values[behind] - branch.values[k]) * way <= 0.0):
         # the point itself is a turn
-        here = [f for f in folds if f.branch == number and abs(f.at - branch.values[k]) < 1e-6 * (abs(f.at) + 1.0)]
+        here = [
+            f for f in folds if f.branch == number and abs(f.at - branch.values[k]) < 1e-6 * (abs(f.at) + 1.0)
+        ]
         return here[0] if here else None
     wanted = "rising" if way > 0 else "falling"
     for _ in range(count):
@@ -568,7 +664,12 @@ def _next_fold(branches: Sequence[Branch], folds: Sequence[Fold], place: tuple[i
         k = following
         if branch.stable[k] is False:
             near = [f for f in folds if f.branch == number and f.direction == wanted and f.from_stable]
-            close = [f for f in near if way * (f.at - branch.values[k]) >= -1e-9 * (1.0 + abs(f.at)) and abs(f.at - branch.values[k]) < 1e-3 * (abs(f.at) + 1.0)]
+            close = [
+                f
+                for f in near
+                if way * (f.at - branch.values[k]) >= -1e-9 * (1.0 + abs(f.at))
+                and abs(f.at - branch.values[k]) < 1e-3 * (abs(f.at) + 1.0)
+            ]
             return min(close, key=lambda f: float(np.max(np.abs(f.x - branch.x[k]))), default=None)
     return None
 
@@ -586,7 +687,12 @@ def _nearest(branches: Sequence[Branch], x: Array, value: float, scale: Array) -
 
 
 def _prove_range(
-    family: Family, values: Array, proved: Sequence[Points], folds: Sequence[Fold], box: float, deadline: float
+    family: Family,
+    values: Array,
+    proved: Sequence[Points],
+    folds: Sequence[Fold],
+    box: float,
+    deadline: float,
 ) -> tuple[bool, tuple[tuple[float, float], ...]]:
     """Pieces of the range over which the proof covers every value of the let at once; (all but gaps at folds, those gaps).
 
@@ -636,4 +742,4 @@ def _tubes(system: System, half: Array, box: float, deadline: float) -> bool:
         return False
 
 
-__all__ = ["Branch", "Crossing", "Fold", "STATIONS", "Thresholds", "Trace", "settle", "trace"]
+__all__ = ["STATIONS", "Branch", "Crossing", "Fold", "Thresholds", "Trace", "settle", "trace"]

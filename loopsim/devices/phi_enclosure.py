@@ -25,7 +25,9 @@ MONOTONE = frozenset({Kind.EXPONENTIAL, Kind.SATURATION, Kind.SOFTPLUS, Kind.CHA
 CONVEX = frozenset({Kind.EXPONENTIAL, Kind.SOFTPLUS, Kind.CHARGE_SHEET})
 RECIPROCAL_PEAK = float(np.sqrt(2.0 / 3.0))
 SHAVE_PIECES = 16  # pieces an interval is cut into when the inverse of a kind has no closed form
-FLAT = 1e-4  # below this width the chord slope is taken from the tangent: a difference quotient would be noise
+FLAT = (
+    1e-4  # below this width the chord slope is taken from the tangent: a difference quotient would be noise
+)
 
 
 def value_error(kind: int, w: Array, p: Any, value: Array) -> Array:
@@ -85,7 +87,13 @@ def slope_bounds(kind: int, low: Array, high: Array, p: Any) -> Pair:
     while degree > 1 and not np.any(p[degree - 1]):
         degree -= 1
     if degree <= 3:
-        return _quadratic(p[0], 2.0 * p[1] if degree > 1 else 0.0 * p[0], 3.0 * p[2] if degree > 2 else 0.0 * p[0], low, high)
+        return _quadratic(
+            p[0],
+            2.0 * p[1] if degree > 1 else 0.0 * p[0],
+            3.0 * p[2] if degree > 2 else 0.0 * p[0],
+            low,
+            high,
+        )
     return _bernstein([(j + 1) * p[j] for j in range(degree)], low, high)
 
 
@@ -120,7 +128,9 @@ def _quadratic(c0: Array, c1: Array, c2: Array, low: Array, high: Array) -> Pair
     values = [c0 + (c1 + c2 * t) * t for t in ends]
     size = np.maximum(np.abs(low), np.abs(high))
     error = (np.abs(c0) + (np.abs(c1) + np.abs(c2) * size) * size) * (10.0 * UNIT) + TINY
-    return np.minimum(np.minimum(values[0], values[1]), values[2]) - error, np.maximum(np.maximum(values[0], values[1]), values[2]) + error
+    return np.minimum(np.minimum(values[0], values[1]), values[2]) - error, np.maximum(
+        np.maximum(values[0], values[1]), values[2]
+    ) + error
 
 
 def _bernstein(a: list[Array], low: Array, high: Array) -> Pair:
@@ -214,7 +224,11 @@ def _polynomial_stationary(a: Array, low: Array, high: Array, p: Any) -> list[Ar
     c2 = 3.0 * p[2] if degree > 2 else 0.0 * c1
     root = np.sqrt(np.maximum(c1 * c1 - 4.0 * c2 * c0, 0.0))
     q = -0.5 * (c1 + np.where(c1 >= 0.0, root, -root))
-    first = np.where(c2 != 0.0, q / np.where(c2 != 0.0, c2, 1.0), np.where(c1 != 0.0, -c0 / np.where(c1 != 0.0, c1, 1.0), 0.0))
+    first = np.where(
+        c2 != 0.0,
+        q / np.where(c2 != 0.0, c2, 1.0),
+        np.where(c1 != 0.0, -c0 / np.where(c1 != 0.0, c1, 1.0), 0.0),
+    )
     second = np.where(q != 0.0, c0 / np.where(q != 0.0, q, 1.0), first)
     return [np.minimum(first, second), np.maximum(first, second)]
 
@@ -239,7 +253,9 @@ def deviation(kind: int, a: Array, low: Array, high: Array, p: Any) -> Pair:
     s_low, s_high = slope_bounds(kind, start, stop, q)
     slack = np.abs(a) * (2.0 * UNIT)
     s_low, s_high = down(s_low - a) - slack, up(s_high - a) + slack
-    lower, upper = _between_lines((at_low[:-1], at_high[:-1]), (at_low[1:], at_high[1:]), s_low, s_high, stop - start)
+    lower, upper = _between_lines(
+        (at_low[:-1], at_high[:-1]), (at_low[1:], at_high[1:]), s_low, s_high, stop - start
+    )
     return lower.min(axis=0), upper.max(axis=0)
 
 
@@ -259,7 +275,9 @@ def _between_lines(at_start: Pair, at_stop: Pair, s_low: Array, s_high: Array, w
     low_error = (np.abs(low_terms[0]) + np.abs(low_terms[1]) + np.abs(low_terms[2])) * share * (12.0 * UNIT)
     high_terms = (-falls * at_start[1], rises * at_stop[1], -falls * rises * reach)
     high_cross = (high_terms[0] + high_terms[1] + high_terms[2]) * share
-    high_error = (np.abs(high_terms[0]) + np.abs(high_terms[1]) + np.abs(high_terms[2])) * share * (12.0 * UNIT)
+    high_error = (
+        (np.abs(high_terms[0]) + np.abs(high_terms[1]) + np.abs(high_terms[2])) * share * (12.0 * UNIT)
+    )
     both = (falls < 0.0) & (rises > 0.0)
     ends_low = np.minimum(at_start[0], at_stop[0])
     ends_high = np.maximum(at_start[1], at_stop[1])
@@ -341,7 +359,10 @@ def _proved_inverse(kind: int, y_low: Array, y_high: Array, p: Any) -> Pair:
     most = np.where(value_at(kind, most, p)[0] >= y_high, most, HUGE)
     # values that phi never reaches empty the row
     if kind == Kind.EXPONENTIAL:
-        least, most = np.where(y_high < -1.0 - 1e-12, HUGE, least), np.where(y_high < -1.0 - 1e-12, -HUGE, most)
+        least, most = (
+            np.where(y_high < -1.0 - 1e-12, HUGE, least),
+            np.where(y_high < -1.0 - 1e-12, -HUGE, most),
+        )
     elif kind in (Kind.SOFTPLUS, Kind.CHARGE_SHEET):
         least, most = np.where(y_high < 0.0, HUGE, least), np.where(y_high < 0.0, -HUGE, most)
     elif kind == Kind.SATURATION:

@@ -95,7 +95,9 @@ class PhiRows:
             gap = np.full(low.shape, np.inf)
             for t in phi_enclosure.stationary(kind, a, low, high, p):
                 here = np.abs(t - middle)
-                inside = (t > low) & (t < high) & (np.minimum(t - low, high - t) > 1e-3 * np.minimum(width, 1.0))
+                inside = (
+                    (t > low) & (t < high) & (np.minimum(t - low, high - t) > 1e-3 * np.minimum(width, 1.0))
+                )
                 take = inside & (here < gap)
                 best, gap = np.where(take, t, best), np.where(take, here, gap)
             return np.asarray(best)

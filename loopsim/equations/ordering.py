@@ -41,10 +41,18 @@ def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.
     """(unknowns, rows that answer for them) in an order in which each needs only earlier ones, by `entries`: (n, n), which must hold the
     pattern of the DC equations. AnalysisError `singular` where no row answers for some unknown."""
     n = system.n
-    match = maximum_bipartite_matching(csr_array(pattern(system)), perm_type="row") if n else np.zeros(0, dtype=np.int64)
+    match = (
+        maximum_bipartite_matching(csr_array(pattern(system)), perm_type="row")
+        if n
+        else np.zeros(0, dtype=np.int64)
+    )
     if np.any(match < 0):
         lost = [f"{kind} {name}" for (kind, name), row in zip(system.unknowns, match, strict=True) if row < 0]
-        raise AnalysisError("singular", f"no equation determines {', '.join(lost)}", hint="look for a loop of sources or a floating net")
+        raise AnalysisError(
+            "singular",
+            f"no equation determines {', '.join(lost)}",
+            hint="look for a loop of sources or a floating net",
+        )
     own = np.diag(pattern(system))
     # match[j]: the row that answers for unknown j; unknown j needs every unknown of that row
     count, labels = connected_components(csr_array(entries[match]), directed=True, connection="strong")

@@ -8,18 +8,50 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 from typing import Any
 
-from loopsim.circuit import Circuit, Coupling, Curve, FieldValue, Parameter, Part, Relation, Requirement, Tolerance, Waveform
+from loopsim.circuit import (
+    Circuit,
+    Coupling,
+    Curve,
+    FieldValue,
+    Parameter,
+    Part,
+    Relation,
+    Requirement,
+    Tolerance,
+    Waveform,
+)
 from loopsim.devices.catalogue import DEVICES, field_specs, is_polarised, waveform_specs
 from loopsim.devices.catalogue import pins as device_pins
 from loopsim.devices.fields import FieldSpec
 from loopsim.errors import CircuitError, Span
-from loopsim.expressions import CurrentRef, Expression, LetRef, NetRef, Number, Operation, evaluate, references
+from loopsim.expressions import (
+    CurrentRef,
+    Expression,
+    LetRef,
+    NetRef,
+    Number,
+    Operation,
+    evaluate,
+    references,
+)
 from loopsim.language import tree as t
 from loopsim.language.formulas import Scope, Typed, in_words, is_constant, lets_in, require, typed
 from loopsim.language.measures import MEASURES
 from loopsim.language.mistakes import nearest
 from loopsim.language.parser import Source
-from loopsim.units import AMPERE, FARAD, HENRY, KELVIN, NUMBER, OHM, SIEMENS, VOLT, Dimension, dimension_of, name_of
+from loopsim.units import (
+    AMPERE,
+    FARAD,
+    HENRY,
+    KELVIN,
+    NUMBER,
+    OHM,
+    SIEMENS,
+    VOLT,
+    Dimension,
+    dimension_of,
+    name_of,
+)
 
 MAX_PARTS = 50_000  # parts after expansion; a file that names more is a mistake or an attack
 MAX_DEPTH = 32  # blocks within blocks
@@ -68,13 +100,22 @@ class Definitions:
         """Error for a name that stands for something already."""
         where = self.source.span(word.place)
         if word.text in DEVICES:
-            raise CircuitError("duplicate-name", f"`{word.text}` is a built-in device", where, "choose another name")
+            raise CircuitError(
+                "duplicate-name", f"`{word.text}` is a built-in device", where, "choose another name"
+            )
         if word.text in self.places:
-            raise CircuitError("duplicate-name", f"`{word.text}` is already defined at {self.places[word.text]}", where, "choose another name")
+            raise CircuitError(
+                "duplicate-name",
+                f"`{word.text}` is already defined at {self.places[word.text]}",
+                where,
+                "choose another name",
+            )
         self.places[word.text] = where
 
 
-def define(source: Source, statements: tuple[t.Statement, ...], used: Callable[[t.Use], Definitions]) -> Definitions:
+def define(
+    source: Source, statements: tuple[t.Statement, ...], used: Callable[[t.Use], Definitions]
+) -> Definitions:
     """The kinds, curves and blocks of a file and of the parts files it uses."""
     found = Definitions(source)
     for statement in statements:
@@ -100,7 +141,9 @@ def _take(found: Definitions, other: Definitions, statement: t.Use) -> None:
     for name, span in other.places.items():
         if name in found.places and found.places[name] != span:
             raise CircuitError(
-                "duplicate-name", f"`{name}` of this file is already defined at {found.places[name]}", found.source.span(statement.place)
+                "duplicate-name",
+                f"`{name}` of this file is already defined at {found.places[name]}",
+                found.source.span(statement.place),
             )
         found.places[name] = span
     found.kinds.update(other.kinds)
@@ -113,7 +156,9 @@ def _block_pins(source: Source, pins: tuple[t.Word, ...]) -> None:
     seen: set[str] = set()
     for pin in pins:
         if pin.text == "gnd":
-            raise CircuitError("reserved-name", "`gnd` is the reference everywhere; it is no pin", source.span(pin.place))
+            raise CircuitError(
+                "reserved-name", "`gnd` is the reference everywhere; it is no pin", source.span(pin.place)
+            )
         if pin.text in seen:
             raise CircuitError("duplicate-name", f"the pin `{pin.text}` stands twice", source.span(pin.place))
         seen.add(pin.text)
@@ -122,16 +167,30 @@ def _block_pins(source: Source, pins: tuple[t.Word, ...]) -> None:
 def _curve(found: Definitions, name: t.Word, call: t.Call) -> None:
     scope = Scope(found.source)
     if call.name.text not in ("polynomial", "points"):
-        raise scope.mistake("curve-form", f"a curve is `polynomial(...)` or `points(...)`, not `{call.name.text}`", call.name.place)
+        raise scope.mistake(
+            "curve-form",
+            f"a curve is `polynomial(...)` or `points(...)`, not `{call.name.text}`",
+            call.name.place,
+        )
     if call.fields or not call.positional:
-        raise scope.mistake("curve-form", f"`{call.name.text}` takes values", call.place, "for example polynomial(2 mA/V, 1 mA/V^3)")
+        raise scope.mistake(
+            "curve-form",
+            f"`{call.name.text}` takes values",
+            call.place,
+            "for example polynomial(2 mA/V, 1 mA/V^3)",
+        )
     values: list[Typed] = []
     if call.name.text == "polynomial":
         values, needs, gives = _polynomial(call, scope)
     else:
         values, needs, gives = _points(call, scope)
     found.curves[name.text] = Curve(
-        name.text, call.name.text, tuple(v.tree for v in values), name_of(needs), name_of(gives), found.source.span(name.place)
+        name.text,
+        call.name.text,
+        tuple(v.tree for v in values),
+        name_of(needs),
+        name_of(gives),
+        found.source.span(name.place),
     )
     found.curve_forms[name.text] = (needs, gives)
 
@@ -145,7 +204,11 @@ def _polynomial(call: t.Call, scope: Scope) -> tuple[list[Typed], Dimension, Dim
     first = values[0].dimension
     gives = (first[0] + 1, first[1], first[2], first[3])
     if gives not in (AMPERE, VOLT):
-        raise scope.mistake("dimension", f"the first coefficient is in A/V or V/V, not {in_words(first)}", call.positional[0].value.place)
+        raise scope.mistake(
+            "dimension",
+            f"the first coefficient is in A/V or V/V, not {in_words(first)}",
+            call.positional[0].value.place,
+        )
     for k, (value, item) in enumerate(zip(values, call.positional, strict=True), start=1):
         wanted = (gives[0] - k, gives[1], gives[2], gives[3])
         require(value, wanted, item.value, scope, f"coefficient {k} is in")
@@ -158,7 +221,12 @@ def _points(call: t.Call, scope: Scope) -> tuple[list[Typed], Dimension, Dimensi
     last = -math.inf
     for k, item in enumerate(call.positional):
         if item.pair is None:
-            raise scope.mistake("curve-form", "`points` takes pairs x: y", item.value.place, "for example points(0 V: 0 A, 1 V: 2 mA)")
+            raise scope.mistake(
+                "curve-form",
+                "`points` takes pairs x: y",
+                item.value.place,
+                "for example points(0 V: 0 A, 1 V: 2 mA)",
+            )
         x, y = typed(item.value, scope), typed(item.pair, scope)
         if k == 0:
             needs, gives = x.dimension, y.dimension
@@ -185,7 +253,9 @@ def _kind(found: Definitions, call: t.Call, scope: Scope) -> Kind:
         device, fields = base, {}
     else:
         known = [*DEVICES, *found.kinds]
-        raise scope.mistake("unknown-device", f"there is no device or kind `{base}`", call.name.place, nearest(base, known))
+        raise scope.mistake(
+            "unknown-device", f"there is no device or kind `{base}`", call.name.place, nearest(base, known)
+        )
     for item in call.positional:
         raise scope.mistake("call", "fields are written name = value", item.value.place)
     _known_fields(device, call, scope)
@@ -201,7 +271,10 @@ def _known_fields(device: str, call: t.Call, scope: Scope, besides: tuple[str, .
         name = given.name.text
         if name not in specs and name not in besides:
             raise scope.mistake(
-                "unknown-field", f"{article} {device} has no field `{name}`", given.name.place, nearest(name, [*specs, *besides])
+                "unknown-field",
+                f"{article} {device} has no field `{name}`",
+                given.name.place,
+                nearest(name, [*specs, *besides]),
             )
         if name in seen:
             raise scope.mistake("duplicate-field", f"`{name}` is given twice", given.name.place)
@@ -242,7 +315,9 @@ class Builder:
         if name == "gnd":
             return "gnd"
         if name in frame.scope.values:
-            raise frame.scope.mistake("name-clash", f"`{name}` is a let; nets and lets share one name space", word.place)
+            raise frame.scope.mistake(
+                "name-clash", f"`{name}` is a let; nets and lets share one name space", word.place
+            )
         full = frame.pins.get(name, frame.prefix + name)
         if full != "gnd":
             self.nets.setdefault(full)
@@ -257,33 +332,51 @@ class Builder:
             if isinstance(statement, t.Let):
                 name = statement.name.text
                 if name in waiting or (frame.prefix and name in frame.scope.values):
-                    raise frame.scope.mistake("duplicate-name", f"the let `{name}` is given twice", statement.name.place)
+                    raise frame.scope.mistake(
+                        "duplicate-name", f"the let `{name}` is given twice", statement.name.place
+                    )
                 if name == "gnd" or "." in name:
-                    raise frame.scope.mistake("reserved-name", f"`{name}` cannot be a let", statement.name.place)
+                    raise frame.scope.mistake(
+                        "reserved-name", f"`{name}` cannot be a let", statement.name.place
+                    )
                 if name == "ambient" and frame.prefix:
-                    raise frame.scope.mistake("reserved-name", "`ambient` belongs to the whole circuit", statement.name.place)
+                    raise frame.scope.mistake(
+                        "reserved-name", "`ambient` belongs to the whole circuit", statement.name.place
+                    )
                 waiting[name] = statement
         order = list(waiting)
         while order:
             later: list[str] = []
             for name in order:
-                if all(word not in waiting or word not in order or word == name for word in _words(waiting[name].value.value)):
+                if all(
+                    word not in waiting or word not in order or word == name
+                    for word in _words(waiting[name].value.value)
+                ):
                     self._let(waiting[name], frame)
                 else:
                     later.append(name)
             if len(later) == len(order):
                 first = waiting[later[0]]
-                raise frame.scope.mistake("let-cycle", f"the value of `{first.name.text}` leads back to itself", first.name.place)
+                raise frame.scope.mistake(
+                    "let-cycle", f"the value of `{first.name.text}` leads back to itself", first.name.place
+                )
             order = later
 
     def _let(self, statement: t.Let, frame: _Frame) -> None:
         scope, name = frame.scope, statement.name.text
         if name in _words(statement.value.value):
-            raise scope.mistake("let-cycle", f"the value of `{name}` leads back to itself", statement.name.place)
+            raise scope.mistake(
+                "let-cycle", f"the value of `{name}` leads back to itself", statement.name.place
+            )
         value, tolerance = self._toleranced(statement.value, scope)
         self._constant(value, statement.value.value, scope, "a let")
         if name == "ambient" and value.scale != "degC":
-            raise scope.mistake("dimension", "`ambient` is a temperature in degC", statement.value.value.place, "let ambient = 25 degC")
+            raise scope.mistake(
+                "dimension",
+                "`ambient` is a temperature in degC",
+                statement.value.value.place,
+                "let ambient = 25 degC",
+            )
         ends = []
         for end in (statement.low, statement.high):
             if end is None:
@@ -292,21 +385,34 @@ class Builder:
             found = typed(end, scope)
             self._constant(found, end, scope, "a range")
             if found.dimension != value.dimension or found.scale != value.scale:
-                raise scope.mistake("dimension", f"the range of `{name}` is in {_unit(value)}, not {_unit(found)}", end.place)
+                raise scope.mistake(
+                    "dimension", f"the range of `{name}` is in {_unit(value)}, not {_unit(found)}", end.place
+                )
             ends.append(found.tree)
         full = frame.prefix + name
         unit = value.scale or name_of(value.dimension)
-        self.parameters[full] = Parameter(full, value.tree, unit, ends[0], ends[1], tolerance, scope.source.span(statement.name.place))
+        self.parameters[full] = Parameter(
+            full, value.tree, unit, ends[0], ends[1], tolerance, scope.source.span(statement.name.place)
+        )
         self.numbers[full] = self._number(value.tree, statement.value.value, scope)
         if ends[0] is not None and ends[1] is not None and statement.low is not None:
-            low, high = self._number(ends[0], statement.low, scope), self._number(ends[1], statement.low, scope)
+            low, high = (
+                self._number(ends[0], statement.low, scope),
+                self._number(ends[1], statement.low, scope),
+            )
             if not low < high:
                 raise scope.mistake("let-range", f"the range of `{name}` has to rise", statement.low.place)
         scope.values[name] = Typed(LetRef(full), value.dimension, value.scale)
 
     def _number(self, tree: Expression, formula: t.Formula, scope: Scope) -> float:
         try:
-            value = float(evaluate(tree, self.numbers, operations={"limit": lambda x, lo, hi: min(max(x, lo), hi), "curve": lambda *a: 0.0}))
+            value = float(
+                evaluate(
+                    tree,
+                    self.numbers,
+                    operations={"limit": lambda x, lo, hi: min(max(x, lo), hi), "curve": lambda *a: 0.0},
+                )
+            )
         except (ZeroDivisionError, OverflowError, ValueError, FloatingPointError):
             value = math.nan
         if not math.isfinite(value) or isinstance(value, complex):
@@ -323,7 +429,11 @@ class Builder:
         if given.tolerance is None and isinstance(formula, t.Chain) and formula.operators[-2:] == ("+", "-"):
             up, down = formula.operands[-2:]
             if isinstance(up, t.Num) and isinstance(down, t.Num) and up.percent and down.percent:
-                rest = formula.operands[0] if len(formula.operands) == 3 else t.Chain(formula.operators[:-2], formula.operands[:-2], formula.place)
+                rest = (
+                    formula.operands[0]
+                    if len(formula.operands) == 3
+                    else t.Chain(formula.operators[:-2], formula.operands[:-2], formula.place)
+                )
                 value = typed(rest, scope)
                 if value.dimension != NUMBER:
                     return value, Tolerance(-down.quantity.value, up.quantity.value, True)
@@ -335,13 +445,19 @@ class Builder:
         size = abs(self._number(spread.tree, given.tolerance, scope))
         if _is_share(given.tolerance):
             if size >= 1.0 and value.dimension != NUMBER:
-                raise scope.mistake("tolerance", "a tolerance of 100 % or more would let the value vanish", given.tolerance.place)
+                raise scope.mistake(
+                    "tolerance",
+                    "a tolerance of 100 % or more would let the value vanish",
+                    given.tolerance.place,
+                )
             return value, Tolerance(-size, size, True)
         if spread.dimension != value.dimension or spread.scale:
             if spread.scale and value.scale:
                 return value, Tolerance(-size, size, False)
             raise scope.mistake(
-                "dimension", f"the tolerance of {_unit(value)} is in %, ppm or {_unit(value)}, not {_unit(spread)}", given.tolerance.place
+                "dimension",
+                f"the tolerance of {_unit(value)} is in %, ppm or {_unit(value)}, not {_unit(spread)}",
+                given.tolerance.place,
             )
         return value, Tolerance(-size, size, False)
 
@@ -360,9 +476,19 @@ class Builder:
                 case _:
                     continue
 
-    def _add(self, name: str, device: str, pins: Mapping[str, str], fields: Mapping[str, FieldValue], where: t.Place, scope: Scope) -> None:
+    def _add(
+        self,
+        name: str,
+        device: str,
+        pins: Mapping[str, str],
+        fields: Mapping[str, FieldValue],
+        where: t.Place,
+        scope: Scope,
+    ) -> None:
         if len(self.parts) >= MAX_PARTS:
-            raise scope.mistake("too-many-parts", f"more than {MAX_PARTS:,} parts after the blocks are expanded", where)
+            raise scope.mistake(
+                "too-many-parts", f"more than {MAX_PARTS:,} parts after the blocks are expanded", where
+            )
         self.parts[name] = Part(name, device, dict(pins), dict(fields), scope.source.span(where))
 
     def _new_name(self, word: t.Word, frame: _Frame) -> str:
@@ -370,7 +496,12 @@ class Builder:
             raise frame.scope.mistake("reserved-name", "a part's own name has no point in it", word.place)
         full = frame.prefix + word.text
         if full in self.parts:
-            raise frame.scope.mistake("duplicate-part", f"the part `{full}` is already there", word.place, f"first at {self.parts[full].span}")
+            raise frame.scope.mistake(
+                "duplicate-part",
+                f"the part `{full}` is already there",
+                word.place,
+                f"first at {self.parts[full].span}",
+            )
         return full
 
     def _path(self, path: t.Path, frame: _Frame) -> None:
@@ -393,8 +524,15 @@ class Builder:
         for link, where in ((step.before, step.before_place), (step.after, step.after_place)):
             if link != wanted:
                 what = device.replace("_", " ")
-                why = "points the way its current (or its rise) goes" if wanted == "->" else "has no direction"
-                raise scope.mistake("polarity", f"{'an' if what[0] in 'aeiou' else 'a'} {what} {why}: write `{wanted}`", where, f"`{wanted}` on both sides of `{step.name.text}`")
+                why = (
+                    "points the way its current (or its rise) goes" if wanted == "->" else "has no direction"
+                )
+                raise scope.mistake(
+                    "polarity",
+                    f"{'an' if what[0] in 'aeiou' else 'a'} {what} {why}: write `{wanted}`",
+                    where,
+                    f"`{wanted}` on both sides of `{step.name.text}`",
+                )
 
     def _chain_part(self, step: t.Step, name: str, frame: _Frame) -> tuple[str, dict[str, FieldValue]]:
         """Device and fields that the value of a chain part stands for."""
@@ -404,12 +542,19 @@ class Builder:
             if formula.text in definitions.kinds:
                 return self._of_kind(definitions.kinds[formula.text], name, frame)
             if formula.text in definitions.curves:
-                return "curve_conductance", {"curve": self._use_curve(formula.text, definitions, formula, scope)}
+                return "curve_conductance", {
+                    "curve": self._use_curve(formula.text, definitions, formula, scope)
+                }
             if formula.text in DEVICES:
                 return self._of_kind(Kind(formula.text, {}), name, frame, formula)
             if formula.text not in scope.nets and formula.text != "gnd":
                 known = [*definitions.kinds, *definitions.curves, *scope.values, *scope.nets]
-                raise scope.mistake("unknown-name", f"there is no kind, curve, let or net `{formula.text}`", formula.place, nearest(formula.text, known))
+                raise scope.mistake(
+                    "unknown-name",
+                    f"there is no kind, curve, let or net `{formula.text}`",
+                    formula.place,
+                    nearest(formula.text, known),
+                )
         if isinstance(formula, t.Call):
             called = formula.name.text
             if called in definitions.kinds or (called in DEVICES and called not in WAVEFORMS):
@@ -417,32 +562,59 @@ class Builder:
             if called in WAVEFORMS:
                 wave, dimension = self._waveform(formula, scope)
                 if dimension not in (VOLT, AMPERE):
-                    raise scope.mistake("dimension", f"a source in time is in V or A, not {in_words(dimension)}", formula.place)
+                    raise scope.mistake(
+                        "dimension",
+                        f"a source in time is in V or A, not {in_words(dimension)}",
+                        formula.place,
+                    )
                 device, field_name = BY_UNIT[dimension]
                 return device, {field_name: wave}
             if formula.fields and called not in definitions.curves:
                 known = [*definitions.kinds, *DEVICES, *WAVEFORMS]
-                raise scope.mistake("unknown-device", f"there is no device, kind or waveform `{called}`", formula.name.place, nearest(called, known))
+                raise scope.mistake(
+                    "unknown-device",
+                    f"there is no device, kind or waveform `{called}`",
+                    formula.name.place,
+                    nearest(called, known),
+                )
         value, tolerance = self._toleranced(step.value, scope)
         if value.scale or value.dimension not in BY_UNIT:
-            raise scope.mistake("value-unit", f"{_unit(value)} is the value of no part", formula.place, "ohm, S, F, H, V or A")
+            raise scope.mistake(
+                "value-unit", f"{_unit(value)} is the value of no part", formula.place, "ohm, S, F, H, V or A"
+            )
         device, field_name = BY_UNIT[value.dimension]
         if not is_constant(value.tree):
             if tolerance is not None:
-                raise scope.mistake("tolerance", "a controlled source has no tolerance; give one to a let in its formula", formula.place)
+                raise scope.mistake(
+                    "tolerance",
+                    "a controlled source has no tolerance; give one to a let in its formula",
+                    formula.place,
+                )
             if value.dimension not in (VOLT, AMPERE):
-                raise scope.mistake("not-constant", f"the value of a {device} cannot depend on a net or a current", formula.place)
+                raise scope.mistake(
+                    "not-constant",
+                    f"the value of a {device} cannot depend on a net or a current",
+                    formula.place,
+                )
             self._use_formula_curves(value.tree, definitions)
             self._check_sum(value.tree, definitions, formula, scope)
             return f"controlled_{device}", {"formula": value.tree}
-        return device, {field_name: self._field_number(name, field_name, device, value, tolerance, formula, scope)}
+        return device, {
+            field_name: self._field_number(name, field_name, device, value, tolerance, formula, scope)
+        }
 
-    def _check_sum(self, tree: Expression, definitions: Definitions, formula: t.Formula, scope: Scope) -> None:
+    def _check_sum(
+        self, tree: Expression, definitions: Definitions, formula: t.Formula, scope: Scope
+    ) -> None:
         from loopsim.devices.curves import curve_values
         from loopsim.devices.formula import sum_of
 
         try:
-            sum_of(tree, self.numbers, {name: curve_values(curve, {}) for name, curve in definitions.curves.items()})
+            sum_of(
+                tree,
+                self.numbers,
+                {name: curve_values(curve, {}) for name, curve in definitions.curves.items()},
+            )
         except CircuitError as error:
             raise scope.mistake(error.code, error.message, formula.place, error.hint) from None
 
@@ -458,11 +630,17 @@ class Builder:
     def _use_curve(self, name: str, definitions: Definitions, word: t.Word, scope: Scope) -> Curve:
         curve = definitions.curves[name]
         if definitions.curve_forms[name][1] != AMPERE:
-            raise scope.mistake("dimension", f"`{name}` gives volts; a part between two nets needs a curve of amperes", word.place)
+            raise scope.mistake(
+                "dimension",
+                f"`{name}` gives volts; a part between two nets needs a curve of amperes",
+                word.place,
+            )
         self.curves[name] = curve
         return curve
 
-    def _of_kind(self, kind: Kind, name: str, frame: _Frame, word: t.Word | None = None) -> tuple[str, dict[str, FieldValue]]:
+    def _of_kind(
+        self, kind: Kind, name: str, frame: _Frame, word: t.Word | None = None
+    ) -> tuple[str, dict[str, FieldValue]]:
         if kind.device in CHAIN_WORDS and word is not None and not kind.fields:
             raise frame.scope.mistake("value-missing", f"a {kind.device} needs its value", word.place)
         return kind.device, self._fields(kind, name, frame)
@@ -470,14 +648,24 @@ class Builder:
     def _fields(self, kind: Kind, name: str, frame: _Frame) -> dict[str, FieldValue]:
         """Checked values of everything a kind gives."""
         specs = field_specs(kind.device)
-        return {key: self._field(specs[key], name, kind.device, value, scope, frame) for key, (value, scope) in kind.fields.items()}
+        return {
+            key: self._field(specs[key], name, kind.device, value, scope, frame)
+            for key, (value, scope) in kind.fields.items()
+        }
 
-    def _field(self, spec: FieldSpec, part: str, device: str, given: t.Toleranced, scope: Scope, frame: _Frame) -> FieldValue:
+    def _field(
+        self, spec: FieldSpec, part: str, device: str, given: t.Toleranced, scope: Scope, frame: _Frame
+    ) -> FieldValue:
         formula = given.value
         if spec.words:
             if not isinstance(formula, t.Word) or formula.text not in spec.words:
                 text = formula.text if isinstance(formula, t.Word) else "this"
-                raise scope.mistake("unknown-word", f"`{spec.name}` is {' or '.join(spec.words)}, not `{text}`", formula.place, nearest(text, spec.words))
+                raise scope.mistake(
+                    "unknown-word",
+                    f"`{spec.name}` is {' or '.join(spec.words)}, not `{text}`",
+                    formula.place,
+                    nearest(text, spec.words),
+                )
             return formula.text
         if spec.form == "net":
             if not isinstance(formula, t.Word):
@@ -496,23 +684,45 @@ class Builder:
         if wanted == KELVIN and value.scale == "degC" and spec.unit != "degC":
             raise scope.mistake("degrees", f"`{spec.name}` is a difference in K", formula.place)
         if value.dimension != wanted:
-            raise scope.mistake("dimension", f"`{spec.name}` is in {spec.unit or 'a pure number'}, not {_unit(value)}", formula.place)
+            raise scope.mistake(
+                "dimension",
+                f"`{spec.name}` is in {spec.unit or 'a pure number'}, not {_unit(value)}",
+                formula.place,
+            )
         self._constant(value, formula, scope, f"`{spec.name}`")
         return self._field_number(part, spec.name, device, value, tolerance, formula, scope)
 
     def _field_number(
-        self, part: str, field_name: str, device: str, value: Typed, tolerance: Tolerance | None, formula: t.Formula, scope: Scope
+        self,
+        part: str,
+        field_name: str,
+        device: str,
+        value: Typed,
+        tolerance: Tolerance | None,
+        formula: t.Formula,
+        scope: Scope,
     ) -> Expression:
         number = self._number(value.tree, formula, scope)
         spec = field_specs(device).get(field_name)
-        if spec is not None and spec.low is not None and spec.high is not None and not spec.low <= number <= spec.high:
+        if (
+            spec is not None
+            and spec.low is not None
+            and spec.high is not None
+            and not spec.low <= number <= spec.high
+        ):
             unit = f" {spec.unit}" if spec.unit else ""
-            raise scope.mistake("field-range", f"`{field_name}` of {number:g}{unit} is outside {spec.low:g} .. {spec.high:g}{unit}", formula.place)
+            raise scope.mistake(
+                "field-range",
+                f"`{field_name}` of {number:g}{unit} is outside {spec.low:g} .. {spec.high:g}{unit}",
+                formula.place,
+            )
         if tolerance is None:
             return value.tree
         full = f"{part}.{field_name}"
         unit = value.scale or name_of(value.dimension)
-        self.parameters[full] = Parameter(full, value.tree, unit, None, None, tolerance, scope.source.span(formula.place))
+        self.parameters[full] = Parameter(
+            full, value.tree, unit, None, None, tolerance, scope.source.span(formula.place)
+        )
         self.numbers[full] = number
         return LetRef(full)
 
@@ -528,11 +738,17 @@ class Builder:
         for given in call.fields:
             name = given.name.text
             if name not in specs:
-                raise scope.mistake("unknown-field", f"`{form}` has no field `{name}`", given.name.place, nearest(name, specs))
+                raise scope.mistake(
+                    "unknown-field", f"`{form}` has no field `{name}`", given.name.place, nearest(name, specs)
+                )
             if name in fields:
                 raise scope.mistake("duplicate-field", f"`{name}` is given twice", given.name.place)
             if given.value.tolerance is not None:
-                raise scope.mistake("tolerance", "a waveform's field has no tolerance; give one to a let", given.value.tolerance.place)
+                raise scope.mistake(
+                    "tolerance",
+                    "a waveform's field has no tolerance; give one to a let",
+                    given.value.tolerance.place,
+                )
             value = typed(given.value.value, scope)
             self._constant(value, given.value.value, scope, "a waveform")
             self._number(value.tree, given.value.value, scope)
@@ -555,7 +771,12 @@ class Builder:
         last = -math.inf
         for item in call.positional:
             if item.pair is None:
-                raise scope.mistake("call", "`points` takes pairs time: value", item.value.place, "for example points(0 s: 0 V, 1 ms: 5 V)")
+                raise scope.mistake(
+                    "call",
+                    "`points` takes pairs time: value",
+                    item.value.place,
+                    "for example points(0 s: 0 V, 1 ms: 5 V)",
+                )
             x, y = typed(item.value, scope), typed(item.pair, scope)
             require(x, (0, 0, 1, 0), item.value, scope, "a time is in")
             signal = signal or y.dimension
@@ -563,7 +784,9 @@ class Builder:
             here = self._number(x.tree, item.value, scope)
             self._number(y.tree, item.pair, scope)
             if here <= last:
-                raise scope.mistake("waveform-times", "times have to rise from pair to pair", item.value.place)
+                raise scope.mistake(
+                    "waveform-times", "times have to rise from pair to pair", item.value.place
+                )
             last = here
             pairs.append((x.tree, y.tree))
         if signal is None or call.fields:
@@ -582,7 +805,12 @@ class Builder:
             kind = Kind(base, {})
         else:
             known = [*DEVICES, *frame.definitions.kinds, *frame.definitions.blocks]
-            raise scope.mistake("unknown-device", f"there is no device, kind or block `{base}`", call.name.place, nearest(base, known))
+            raise scope.mistake(
+                "unknown-device",
+                f"there is no device, kind or block `{base}`",
+                call.name.place,
+                nearest(base, known),
+            )
         for item in call.positional:
             raise scope.mistake("call", "pins and fields are written name = value", item.value.place)
         wanted = device_pins(kind.device)
@@ -597,25 +825,47 @@ class Builder:
                 fields[given.name.text] = (given.value, scope)
         missing = [pin for pin in wanted if pin not in pins]
         if missing:
-            raise scope.mistake("pin-missing", f"`{statement.name.text}` leaves {', '.join(missing)} open", statement.name.place, "connect every pin")
+            raise scope.mistake(
+                "pin-missing",
+                f"`{statement.name.text}` leaves {', '.join(missing)} open",
+                statement.name.place,
+                "connect every pin",
+            )
         ordered = {pin: pins[pin] for pin in wanted}
-        self._add(name, kind.device, ordered, self._fields(Kind(kind.device, fields), name, frame), statement.name.place, scope)
+        self._add(
+            name,
+            kind.device,
+            ordered,
+            self._fields(Kind(kind.device, fields), name, frame),
+            statement.name.place,
+            scope,
+        )
 
     def _pin(self, given: t.Field, frame: _Frame) -> str:
         if not isinstance(given.value.value, t.Word) or given.value.tolerance is not None:
-            raise frame.scope.mistake("unknown-net", f"the pin `{given.name.text}` takes the name of a net", given.value.value.place)
+            raise frame.scope.mistake(
+                "unknown-net", f"the pin `{given.name.text}` takes the name of a net", given.value.value.place
+            )
         return self.net(given.value.value, frame)
 
     def _instance(self, statement: t.PartOf, block: BlockKind, frame: _Frame) -> None:
         scope, call, inner = frame.scope, statement.call, block.statement
         if frame.depth >= MAX_DEPTH or inner.name.text in frame.trail:
-            raise scope.mistake("block-depth", f"the block `{inner.name.text}` holds itself" if inner.name.text in frame.trail else f"blocks nest deeper than {MAX_DEPTH}", statement.name.place)
+            raise scope.mistake(
+                "block-depth",
+                f"the block `{inner.name.text}` holds itself"
+                if inner.name.text in frame.trail
+                else f"blocks nest deeper than {MAX_DEPTH}",
+                statement.name.place,
+            )
         prefix = self._new_name(statement.name, frame) + "."
         wanted = [pin.text for pin in inner.pins]
         defaults = {given.name.text: given for given in inner.defaults}
         pins: dict[str, str] = {}
         inner_scope = Scope(block.definitions.source, curves=block.definitions.curve_forms)
-        given_values: dict[str, tuple[t.Toleranced, Scope]] = {name: (d.value, Scope(block.definitions.source)) for name, d in defaults.items()}
+        given_values: dict[str, tuple[t.Toleranced, Scope]] = {
+            name: (d.value, Scope(block.definitions.source)) for name, d in defaults.items()
+        }
         seen: set[str] = set()
         for item in call.positional:
             raise scope.mistake("call", "pins and parameters are written name = value", item.value.place)
@@ -629,29 +879,60 @@ class Builder:
             elif name in defaults:
                 given_values[name] = (given.value, scope)
             else:
-                raise scope.mistake("unknown-pin", f"the block `{inner.name.text}` has no pin or parameter `{name}`", given.name.place, nearest(name, [*wanted, *defaults]))
+                raise scope.mistake(
+                    "unknown-pin",
+                    f"the block `{inner.name.text}` has no pin or parameter `{name}`",
+                    given.name.place,
+                    nearest(name, [*wanted, *defaults]),
+                )
         missing = [pin for pin in wanted if pin not in pins]
         if missing:
-            raise scope.mistake("pin-missing", f"`{statement.name.text}` leaves {', '.join(missing)} open", statement.name.place, "connect every pin")
+            raise scope.mistake(
+                "pin-missing",
+                f"`{statement.name.text}` leaves {', '.join(missing)} open",
+                statement.name.place,
+                "connect every pin",
+            )
         for name, (value, value_scope) in given_values.items():
             found, tolerance = self._toleranced(value, value_scope)
             self._constant(found, value.value, value_scope, "a parameter")
             expected = typed(defaults[name].value.value, Scope(block.definitions.source))
             if found.dimension != expected.dimension:
-                raise value_scope.mistake("dimension", f"`{name}` is in {_unit(expected)}, not {_unit(found)}", value.value.place)
+                raise value_scope.mistake(
+                    "dimension", f"`{name}` is in {_unit(expected)}, not {_unit(found)}", value.value.place
+                )
             if tolerance is not None:
                 full = prefix + name
-                self.parameters[full] = Parameter(full, found.tree, name_of(found.dimension), None, None, tolerance, value_scope.source.span(value.value.place))
+                self.parameters[full] = Parameter(
+                    full,
+                    found.tree,
+                    name_of(found.dimension),
+                    None,
+                    None,
+                    tolerance,
+                    value_scope.source.span(value.value.place),
+                )
                 self.numbers[full] = self._number(found.tree, value.value, value_scope)
                 found = replace(found, tree=LetRef(full))
             inner_scope.values[name] = found
         body = inner.body
         for piece in body:
             if isinstance(piece, t.Head | t.Use | t.Block | t.Expect | t.KindOf | t.CurveOf):
-                word = {t.Head: "circuit", t.Use: "use", t.Block: "block", t.Expect: "expect", t.KindOf: "kind", t.CurveOf: "curve"}[type(piece)]
+                word = {
+                    t.Head: "circuit",
+                    t.Use: "use",
+                    t.Block: "block",
+                    t.Expect: "expect",
+                    t.KindOf: "kind",
+                    t.CurveOf: "curve",
+                }[type(piece)]
                 where = piece.place if isinstance(piece, t.Use | t.Expect) else piece.name.place
-                raise inner_scope.mistake("misplaced", f"`{word}` does not stand inside a block", where, "put it beside the block")
-        inner_frame = _Frame(block.definitions, prefix, inner_scope, pins, frame.depth + 1, (*frame.trail, inner.name.text))
+                raise inner_scope.mistake(
+                    "misplaced", f"`{word}` does not stand inside a block", where, "put it beside the block"
+                )
+        inner_frame = _Frame(
+            block.definitions, prefix, inner_scope, pins, frame.depth + 1, (*frame.trail, inner.name.text)
+        )
         inner_scope.nets = {**{name: prefix + name for name in _nets_of(body)}, **pins}
         inner_scope.parts = {name: prefix + name for name in _parts_of(body)}
         self.lets(body, inner_frame)
@@ -662,16 +943,25 @@ class Builder:
         names = []
         for word in (statement.first, statement.second):
             if word.text not in scope.parts:
-                raise scope.mistake("unknown-part", f"there is no part `{word.text}`", word.place, nearest(word.text, scope.parts))
+                raise scope.mistake(
+                    "unknown-part",
+                    f"there is no part `{word.text}`",
+                    word.place,
+                    nearest(word.text, scope.parts),
+                )
             names.append(scope.parts[word.text])
         value = typed(statement.coefficient, scope)
         require(value, NUMBER, statement.coefficient, scope, "a coupling coefficient is")
         self._constant(value, statement.coefficient, scope, "a coupling coefficient")
         if abs(self._number(value.tree, statement.coefficient, scope)) > 1.0:
-            raise scope.mistake("field-range", "a coupling coefficient lies within -1 .. 1", statement.coefficient.place)
+            raise scope.mistake(
+                "field-range", "a coupling coefficient lies within -1 .. 1", statement.coefficient.place
+            )
         if names[0] == names[1]:
             raise scope.mistake("coupling", "an inductor cannot couple to itself", statement.second.place)
-        self.couplings.append(Coupling(names[0], names[1], value.tree, scope.source.span(statement.first.place)))
+        self.couplings.append(
+            Coupling(names[0], names[1], value.tree, scope.source.span(statement.first.place))
+        )
 
     # --- requirements ----------------------------------------------------------------------------------------------
 
@@ -681,7 +971,9 @@ class Builder:
         words = " ".join(word.text for word in statement.words)
         if words not in MEASURES:
             where = statement.words[0].place.to(statement.words[-1].place)
-            raise scope.mistake("unknown-measure", f"there is no measure `{words}`", where, nearest(words, MEASURES))
+            raise scope.mistake(
+                "unknown-measure", f"there is no measure `{words}`", where, nearest(words, MEASURES)
+            )
         form = MEASURES[words]
         target = typed(statement.target, scope) if statement.target is not None else None
         if form.target == "needed" and target is None:
@@ -700,7 +992,9 @@ class Builder:
         label = statement.label.text if statement.label is not None else self._made_label(words, statement)
         if any(label == r.label for r in self.requirements):
             if statement.label is not None:
-                raise scope.mistake("duplicate-label", f"the label `{label}` stands twice", statement.label.place)
+                raise scope.mistake(
+                    "duplicate-label", f"the label `{label}` stands twice", statement.label.place
+                )
             k = 2
             while any(f"{label}_{k}" == r.label for r in self.requirements):
                 k += 1
@@ -717,10 +1011,17 @@ class Builder:
 
     def _let_of(self, word: t.Word, scope: Scope) -> Typed:
         if word.text not in self.parameters:
-            raise scope.mistake("unknown-let", f"there is no let `{word.text}`", word.place, nearest(word.text, self.parameters))
+            raise scope.mistake(
+                "unknown-let",
+                f"there is no let `{word.text}`",
+                word.place,
+                nearest(word.text, self.parameters),
+            )
         return scope.values[word.text]
 
-    def _measured(self, form: Dimension | str, target: Typed | None, along: Typed | None) -> tuple[Dimension, str]:
+    def _measured(
+        self, form: Dimension | str, target: Typed | None, along: Typed | None
+    ) -> tuple[Dimension, str]:
         if form == "target" and target is not None:
             return target.dimension, ""
         if form == "along" and along is not None:
@@ -731,7 +1032,9 @@ class Builder:
         assert not isinstance(form, str)
         return form, ""
 
-    def _relation(self, relation: t.Relation, dimension: Dimension, scale: str, words: str, scope: Scope) -> Relation:
+    def _relation(
+        self, relation: t.Relation, dimension: Dimension, scale: str, words: str, scope: Scope
+    ) -> Relation:
         if relation.form == "set" and words != "values":
             raise scope.mistake("relation", "a set in braces goes with `values` only", relation.place)
         targets: list[tuple[Expression | None, Expression | None, Expression | None]] = []
@@ -740,7 +1043,9 @@ class Builder:
             self._constant(value, item.value, scope, "a requirement")
             if value.dimension != dimension or (value.scale and value.scale != scale):
                 wanted = scale or (name_of(dimension) or "a pure number")
-                raise scope.mistake("dimension", f"`{words}` is measured in {wanted}, not in {_unit(value)}", item.value.place)
+                raise scope.mistake(
+                    "dimension", f"`{words}` is measured in {wanted}, not in {_unit(value)}", item.value.place
+                )
             low: Expression = value.tree
             high: Expression = value.tree
             if tolerance is not None:
@@ -749,7 +1054,9 @@ class Builder:
         if relation.form == "range":
             low_end, high_end = targets[0][0], targets[1][0]
             assert low_end is not None and high_end is not None
-            if self._number(low_end, relation.items[0].value, scope) > self._number(high_end, relation.items[1].value, scope):
+            if self._number(low_end, relation.items[0].value, scope) > self._number(
+                high_end, relation.items[1].value, scope
+            ):
                 raise scope.mistake("relation", "the range has to rise", relation.items[0].value.place)
             return Relation("range", ((None, low_end, high_end),))
         if relation.form in ("below", "above"):
@@ -778,7 +1085,9 @@ class Builder:
                 value = typed(formula, scope)
                 self._constant(value, formula, scope, "a binding")
                 if value.dimension != let.dimension or value.scale != let.scale:
-                    raise scope.mistake("dimension", f"`{current.text}` is in {_unit(let)}, not {_unit(value)}", formula.place)
+                    raise scope.mistake(
+                        "dimension", f"`{current.text}` is in {_unit(let)}, not {_unit(value)}", formula.place
+                    )
                 found[current.text].append(value.tree)
         return tuple((name, tuple(values)) for name, values in found.items())
 
@@ -791,12 +1100,20 @@ class Builder:
         return re.sub(r"[^A-Za-z0-9]+", "_", " ".join(parts)).strip("_")
 
 
-def build(source: Source, statements: tuple[t.Statement, ...], definitions: Definitions, sources: Mapping[str, str]) -> Circuit:
+def build(
+    source: Source, statements: tuple[t.Statement, ...], definitions: Definitions, sources: Mapping[str, str]
+) -> Circuit:
     """The circuit of a file whose first statement is `circuit`."""
     head = _head(source, statements)
     builder = Builder(source, definitions)
     nets = _nets_of(statements)
-    scope = Scope(source, {}, {name: name for name in nets}, {name: name for name in _parts_of(statements)}, definitions.curve_forms)
+    scope = Scope(
+        source,
+        {},
+        {name: name for name in nets},
+        {name: name for name in _parts_of(statements)},
+        definitions.curve_forms,
+    )
     frame = _Frame(definitions, "", scope, {}, 0)
     ambient = Typed(LetRef("ambient"), KELVIN, "degC")
     builder.parameters["ambient"] = Parameter("ambient", Number(25.0), "degC")
@@ -805,7 +1122,11 @@ def build(source: Source, statements: tuple[t.Statement, ...], definitions: Defi
     definitions.scope.values = scope.values
     for statement in statements:
         if isinstance(statement, t.Let) and statement.name.text in nets:
-            raise scope.mistake("name-clash", f"`{statement.name.text}` is a net too; nets and lets share one name space", statement.name.place)
+            raise scope.mistake(
+                "name-clash",
+                f"`{statement.name.text}` is a net too; nets and lets share one name space",
+                statement.name.place,
+            )
     builder.lets(statements, frame)
     builder.expand(statements, frame)
     # nets and parts inside blocks are known by now and may be named in requirements
@@ -822,10 +1143,20 @@ def build(source: Source, statements: tuple[t.Statement, ...], definitions: Defi
 
 def _head(source: Source, statements: tuple[t.Statement, ...]) -> t.Head:
     if not statements:
-        raise CircuitError("empty-file", "there is no statement in this file", source.at(1, 1), 'begin with: circuit NAME "title"')
+        raise CircuitError(
+            "empty-file",
+            "there is no statement in this file",
+            source.at(1, 1),
+            'begin with: circuit NAME "title"',
+        )
     first = statements[0]
     if not isinstance(first, t.Head):
-        raise CircuitError("no-circuit", "a circuit file begins with `circuit NAME`", source.span(statement_place(first)), "a file without it holds parts for `use`")
+        raise CircuitError(
+            "no-circuit",
+            "a circuit file begins with `circuit NAME`",
+            source.span(statement_place(first)),
+            "a file without it holds parts for `use`",
+        )
     for other in statements[1:]:
         if isinstance(other, t.Head):
             raise CircuitError("second-circuit", "one circuit per file", source.span(other.name.place))
@@ -857,7 +1188,12 @@ def _nets_of(statements: tuple[t.Statement, ...]) -> dict[str, None]:
                 if isinstance(given.value.value, t.Word) and given.value.tolerance is None:
                     found.setdefault(given.value.value.text)
     lets = {statement.name.text for statement in statements if isinstance(statement, t.Let)}
-    chained = {w.text for s in statements if isinstance(s, t.Path) for w in (s.start, *(step.net for step in s.steps))}
+    chained = {
+        w.text
+        for s in statements
+        if isinstance(s, t.Path)
+        for w in (s.start, *(step.net for step in s.steps))
+    }
     found.pop("gnd", None)
     # a field may be given a let, which is no net
     return {name: None for name in found if name not in lets or name in chained}
@@ -915,7 +1251,11 @@ def _limits(value: Expression, tolerance: Tolerance) -> tuple[Expression, Expres
 
 def _written(source: Source, formula: t.Formula) -> str:
     where = formula.place
-    return source.lines[where.line - 1][where.column - 1 : where.end_column - 1] if where.line == where.end_line else "formula"
+    return (
+        source.lines[where.line - 1][where.column - 1 : where.end_column - 1]
+        if where.line == where.end_line
+        else "formula"
+    )
 
 
 def _without_comment(line: str) -> str:
@@ -928,4 +1268,4 @@ def _without_comment(line: str) -> str:
     return line
 
 
-__all__ = ["Definitions", "build", "define", "lets_in", "references", "CurrentRef", "NetRef"]
+__all__ = ["CurrentRef", "Definitions", "NetRef", "build", "define", "lets_in", "references"]

@@ -75,7 +75,9 @@ def _named(text: str, where: t.Place, scope: Scope) -> Typed:
         return Typed(NetRef(scope.nets[text]), VOLT)
     known: Iterable[str] = [*scope.values, *scope.nets, *scope.curves, *FUNCTIONS]
     if text in scope.curves:
-        raise scope.mistake("unknown-name", f"`{text}` is a curve; it needs an argument here", where, f"write {text}(...)")
+        raise scope.mistake(
+            "unknown-name", f"`{text}` is a curve; it needs an argument here", where, f"write {text}(...)"
+        )
     raise scope.mistake("unknown-name", f"there is no net or let `{text}`", where, nearest(text, known))
 
 
@@ -83,7 +85,12 @@ def _plain(formula: t.Formula, scope: Scope) -> Typed:
     """Not a temperature in degrees Celsius, which stands alone."""
     found = typed(formula, scope)
     if found.scale:
-        raise scope.mistake("degrees", "a temperature in degC stands alone; it takes no part in a formula", formula.place, "use K for a difference")
+        raise scope.mistake(
+            "degrees",
+            "a temperature in degC stands alone; it takes no part in a formula",
+            formula.place,
+            "use K for a difference",
+        )
     return found
 
 
@@ -112,11 +119,19 @@ def _chain(formula: t.Chain, scope: Scope) -> Typed:
 def _power(base: t.Formula, exponent: t.Formula, where: t.Place, scope: Scope) -> Typed:
     left, right = _plain(base, scope), _plain(exponent, scope)
     if right.dimension != NUMBER:
-        raise scope.mistake("dimension", f"an exponent is a pure number, not {in_words(right.dimension)}", exponent.place)
+        raise scope.mistake(
+            "dimension", f"an exponent is a pure number, not {in_words(right.dimension)}", exponent.place
+        )
     if left.dimension == NUMBER:
         return Typed(Operation("^", (left.tree, right.tree)), NUMBER)
-    if not isinstance(right.tree, Number) or right.tree.value != int(right.tree.value) or abs(right.tree.value) > 20:
-        raise scope.mistake("dimension", f"{in_words(left.dimension)} takes a whole number as its exponent", exponent.place)
+    if (
+        not isinstance(right.tree, Number)
+        or right.tree.value != int(right.tree.value)
+        or abs(right.tree.value) > 20
+    ):
+        raise scope.mistake(
+            "dimension", f"{in_words(left.dimension)} takes a whole number as its exponent", exponent.place
+        )
     k = int(right.tree.value)
     d = left.dimension
     return Typed(Operation("^", (left.tree, right.tree)), (d[0] * k, d[1] * k, d[2] * k, d[3] * k))
@@ -138,7 +153,12 @@ def _call(call: t.Call, scope: Scope) -> Typed:
         _same(inner, needs, given[0], scope, f"`{name}` takes")
         return Typed(Operation("curve", (inner.tree,), name), gives)
     if name not in FUNCTIONS:
-        raise scope.mistake("unknown-function", f"there is no function `{name}`", call.name.place, nearest(name, [*FUNCTIONS, *scope.curves]))
+        raise scope.mistake(
+            "unknown-function",
+            f"there is no function `{name}`",
+            call.name.place,
+            nearest(name, [*FUNCTIONS, *scope.curves]),
+        )
     counts = {"min": (2, 16), "max": (2, 16), "limit": (3, 3)}.get(name, (1, 1))
     _count(call, given, counts, scope)
     inners = [_plain(g, scope) for g in given]
@@ -161,19 +181,27 @@ def _current(call: t.Call, given: list[t.Formula], scope: Scope) -> Typed:
     if not isinstance(part, t.Word):
         raise scope.mistake("call", "`current(...)` takes the name of a part", part.place)
     if part.text not in scope.parts:
-        raise scope.mistake("unknown-part", f"there is no part `{part.text}`", part.place, nearest(part.text, scope.parts))
+        raise scope.mistake(
+            "unknown-part", f"there is no part `{part.text}`", part.place, nearest(part.text, scope.parts)
+        )
     return Typed(CurrentRef(scope.parts[part.text]), AMPERE)
 
 
 def _count(call: t.Call, given: list[t.Formula], counts: tuple[int, int], scope: Scope) -> None:
     if not counts[0] <= len(given) <= counts[1]:
         wanted = str(counts[0]) if counts[0] == counts[1] else f"{counts[0]} to {counts[1]}"
-        raise scope.mistake("call", f"`{call.name.text}` takes {wanted} argument{'' if wanted == '1' else 's'}, not {len(given)}", call.place)
+        raise scope.mistake(
+            "call",
+            f"`{call.name.text}` takes {wanted} argument{'' if wanted == '1' else 's'}, not {len(given)}",
+            call.place,
+        )
 
 
 def _same(found: Typed, wanted: Dimension, formula: t.Formula, scope: Scope, who: str) -> None:
     if found.dimension != wanted:
-        raise scope.mistake("dimension", f"{who} {in_words(wanted)}, not {in_words(found.dimension)}", formula.place)
+        raise scope.mistake(
+            "dimension", f"{who} {in_words(wanted)}, not {in_words(found.dimension)}", formula.place
+        )
 
 
 def require(found: Typed, wanted: Dimension, formula: t.Formula, scope: Scope, who: str) -> None:

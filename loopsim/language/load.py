@@ -37,12 +37,19 @@ def load(path: str | os.PathLike[str], library_root: str | os.PathLike[str] | No
 
 
 def parse(
-    text: str, file: str = "<text>", library_root: str | os.PathLike[str] | None = None, sources: Mapping[str, str] | None = None
+    text: str,
+    file: str = "<text>",
+    library_root: str | os.PathLike[str] | None = None,
+    sources: Mapping[str, str] | None = None,
 ) -> Circuit:
     """The circuit in a text. `use` reads below library_root, or takes the texts of `sources` (as `Circuit.sources` holds them, by path from
     the root), or is an error where neither is given."""
     root = Path(library_root).resolve() if library_root is not None else None
-    key = next((name for name in sources if sources[name] == text), posixpath.basename(file)) if sources else posixpath.basename(file)
+    key = (
+        next((name for name in sources if sources[name] == text), posixpath.basename(file))
+        if sources
+        else posixpath.basename(file)
+    )
     return _Reader(root, sources).circuit(Source(file, text), key)
 
 
@@ -59,13 +66,19 @@ def _read(path: Path, shown: str) -> str:
     except OSError as error:
         raise CircuitError("cannot-read", f"cannot read `{shown}`: {error.strerror}") from None
     if len(data) > 4 * MAX_CHARACTERS:
-        raise CircuitError("file-size", f"`{shown}` holds more than {MAX_CHARACTERS:,} characters", hint="one circuit per file")
+        raise CircuitError(
+            "file-size",
+            f"`{shown}` holds more than {MAX_CHARACTERS:,} characters",
+            hint="one circuit per file",
+        )
     try:
         text = data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         line = data[: error.start].count(b"\n") + 1
         column = error.start - (data.rfind(b"\n", 0, error.start) + 1) + 1
-        raise CircuitError("not-text", "this is no UTF-8 text", Source(shown, "\n" * line).at(line, column)) from None
+        raise CircuitError(
+            "not-text", "this is no UTF-8 text", Source(shown, "\n" * line).at(line, column)
+        ) from None
     return text
 
 
@@ -86,11 +99,27 @@ class _Reader:
 
     def _used(self, use: t.Use, source: Source, key: str, trail: tuple[str, ...]) -> Definitions:
         where = source.span(use.place)
-        if not use.path or posixpath.isabs(use.path) or "\\" in use.path or ":" in use.path or "\0" in use.path:
-            raise CircuitError("use-path", f"`{use.path}` is no path relative to this file", where, "forward slashes, below the library root")
+        if (
+            not use.path
+            or posixpath.isabs(use.path)
+            or "\\" in use.path
+            or ":" in use.path
+            or "\0" in use.path
+        ):
+            raise CircuitError(
+                "use-path",
+                f"`{use.path}` is no path relative to this file",
+                where,
+                "forward slashes, below the library root",
+            )
         name = posixpath.normpath(posixpath.join(posixpath.dirname(key), use.path))
         if name.startswith("..") or name == ".":
-            raise CircuitError("use-outside", f"`{use.path}` leads out of the library", where, "`use` stays inside the library root")
+            raise CircuitError(
+                "use-outside",
+                f"`{use.path}` leads out of the library",
+                where,
+                "`use` stays inside the library root",
+            )
         if name in trail:
             raise CircuitError("use-cycle", f"`{use.path}` leads back to itself", where)
         if name not in self.done:
@@ -104,7 +133,9 @@ class _Reader:
             for statement in found:
                 if not isinstance(statement, t.Use | t.KindOf | t.CurveOf | t.Block):
                     raise CircuitError(
-                        "parts-file", "a parts file holds only `use`, `kind`, `curve` and `block`", inner.span(statement_place(statement))
+                        "parts-file",
+                        "a parts file holds only `use`, `kind`, `curve` and `block`",
+                        inner.span(statement_place(statement)),
                     )
             self.done[name] = define(inner, found, lambda more: self._used(more, inner, name, (*trail, name)))
         return self.done[name]
@@ -114,12 +145,18 @@ class _Reader:
         if self.texts is not None and name in self.texts:
             return self.texts[name]
         if self.root is None:
-            raise CircuitError("use-path", f"`{use.path}` cannot be found: this text has no library root", span)  # type: ignore[arg-type]
+            raise CircuitError(
+                "use-path", f"`{use.path}` cannot be found: this text has no library root", span
+            )  # type: ignore[arg-type]
         path = self.root / name
         real = path.resolve()
         if real != self.root and self.root not in real.parents:
-            raise CircuitError("use-outside", f"`{use.path}` leads out of the library", span, "no link may lead out")  # type: ignore[arg-type]
+            raise CircuitError(
+                "use-outside", f"`{use.path}` leads out of the library", span, "no link may lead out"
+            )  # type: ignore[arg-type]
         if not real.is_file():
             near = [p.name for p in path.parent.glob("*.loop")] if path.parent.is_dir() else []
-            raise CircuitError("use-missing", f"there is no file `{use.path}`", span, nearest(path.name, near))  # type: ignore[arg-type]
+            raise CircuitError(
+                "use-missing", f"there is no file `{use.path}`", span, nearest(path.name, near)
+            )  # type: ignore[arg-type]
         return _read(real, shown)

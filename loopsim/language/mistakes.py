@@ -33,29 +33,78 @@ def nearest(word: str, known: Iterable[str]) -> str:
 def syntax_mistake(span: Span, kind: str, text: str, expected: Iterable[str], before: str) -> CircuitError:
     """The error for a place where the grammar cannot go on. kind: the terminal found ("" for none); before: the line up to there."""
     wanted = sorted({TERMINALS[name] for name in expected if name in TERMINALS and name != "_LINE_END"})
-    hint = f"expected {', '.join(wanted[:-1])}{' or ' if len(wanted) > 1 else ''}{wanted[-1]}" if 0 < len(wanted) <= 6 else ""
+    hint = (
+        f"expected {', '.join(wanted[:-1])}{' or ' if len(wanted) > 1 else ''}{wanted[-1]}"
+        if 0 < len(wanted) <= 6
+        else ""
+    )
     if kind == "$END":
-        return CircuitError("unfinished", "the file ends inside a statement", span, hint or "a bracket or brace is still open")
+        return CircuitError(
+            "unfinished", "the file ends inside a statement", span, hint or "a bracket or brace is still open"
+        )
     if kind == "_LINE_END":
         return CircuitError("unfinished", "the line ends before the statement does", span, hint)
-    if kind == "NAME" and re.search(r"[0-9]\s*$", before) and not re.search(r"[A-Za-z_][A-Za-z0-9_]*\s*$", before):
+    if (
+        kind == "NAME"
+        and re.search(r"[0-9]\s*$", before)
+        and not re.search(r"[A-Za-z_][A-Za-z0-9_]*\s*$", before)
+    ):
         return CircuitError("unknown-unit", f"`{text}` is no unit", span, _unit_hint(text))
     if text == '"':
         return CircuitError("open-text", "a text in quotes does not end on its line", span, 'close it with "')
     if kind == "" and re.search(r"[0-9]$", before) and (text in "_." or text.isdigit() or not text.isascii()):
-        return CircuitError("bad-number", f"`{text}` cannot stand in a number", span, "digits 0-9, one point, an exponent like 1e3")
+        return CircuitError(
+            "bad-number",
+            f"`{text}` cannot stand in a number",
+            span,
+            "digits 0-9, one point, an exponent like 1e3",
+        )
     if kind == "" and not text.isascii():
-        return CircuitError("unknown-character", f"the character {text!r} has no meaning here", span, hint or "names use letters, digits and _")
+        return CircuitError(
+            "unknown-character",
+            f"the character {text!r} has no meaning here",
+            span,
+            hint or "names use letters, digits and _",
+        )
     if kind == "":
         return CircuitError("unknown-character", f"the character `{text}` has no meaning here", span, hint)
     if not before.strip() and kind == "NAME":
-        return CircuitError("unexpected", f"a statement cannot begin with `{text}`", span, nearest(text, STATEMENTS) or hint)
+        return CircuitError(
+            "unexpected", f"a statement cannot begin with `{text}`", span, nearest(text, STATEMENTS) or hint
+        )
     return CircuitError("unexpected", f"`{text}` does not fit here", span, hint)
 
 
 def _unit_hint(text: str) -> str:
-    units = ["V", "A", "ohm", "S", "F", "H", "Hz", "s", "K", "W", "J", "C", "degC", "ppm", "dB", "kohm", "Mohm", "mV", "uA", "nF", "pF", "mA"]
+    units = [
+        "V",
+        "A",
+        "ohm",
+        "S",
+        "F",
+        "H",
+        "Hz",
+        "s",
+        "K",
+        "W",
+        "J",
+        "C",
+        "degC",
+        "ppm",
+        "dB",
+        "kohm",
+        "Mohm",
+        "mV",
+        "uA",
+        "nF",
+        "pF",
+        "mA",
+    ]
     found = difflib.get_close_matches(text, units, n=1, cutoff=0.5)
     if not found and text.lower() in {unit.lower() for unit in units}:
         found = [unit for unit in units if unit.lower() == text.lower()][:1]
-    return f"did you mean `{found[0]}`?" if found else "units are V A ohm S F H Hz s K W J C degC % ppm dB with prefixes f p n u m k M G T"
+    return (
+        f"did you mean `{found[0]}`?"
+        if found
+        else "units are V A ohm S F H Hz s K W J C degC % ppm dB with prefixes f p n u m k M G T"
+    )

@@ -213,7 +213,15 @@ class _Make(Transformer[Token, Any]):
         for i in range(1, len(c), 6):
             before, name, _, value, after, net = c[i : i + 6]
             steps.append(
-                t.Step(str(before), place(before), self.name([name]), value, str(after), place(after), self.name([net]))
+                t.Step(
+                    str(before),
+                    place(before),
+                    self.name([name]),
+                    value,
+                    str(after),
+                    place(after),
+                    self.name([net]),
+                )
             )
         return t.Path(self.name(c[:1]), tuple(steps))
 
@@ -233,7 +241,9 @@ class _Make(Transformer[Token, Any]):
         return "stable", True
 
     def _relation(self, form: str, c: list[Any]) -> tuple[str, t.Relation]:
-        items = tuple(x if isinstance(x, t.Toleranced) else t.Toleranced(x) for x in c if not isinstance(x, Token))
+        items = tuple(
+            x if isinstance(x, t.Toleranced) else t.Toleranced(x) for x in c if not isinstance(x, Token)
+        )
         return "relation", t.Relation(form, items, place(c[0]))
 
     def equal(self, c: list[Any]) -> tuple[str, t.Relation]:
@@ -292,13 +302,19 @@ def _parser() -> Lark:
 def statements(source: Source) -> tuple[t.Statement, ...]:
     """The statements of a text. CircuitError with place and hint for what is not one."""
     if len(source.text) > MAX_CHARACTERS:
-        raise CircuitError("file-size", f"more than {MAX_CHARACTERS:,} characters", source.at(1, 1), "one circuit per file")
+        raise CircuitError(
+            "file-size", f"more than {MAX_CHARACTERS:,} characters", source.at(1, 1), "one circuit per file"
+        )
     try:
         return cast("tuple[t.Statement, ...]", _parser().parse(source.text + "\n"))
     except _TooDeep as deep:
-        raise CircuitError("nesting", f"brackets nest deeper than {MAX_NESTING}", source.span(place(deep.token))) from None
+        raise CircuitError(
+            "nesting", f"brackets nest deeper than {MAX_NESTING}", source.span(place(deep.token))
+        ) from None
     except _TooManySigns as deep:
-        raise CircuitError("nesting", f"signs or powers nest deeper than {MAX_NESTING}", source.span(deep.where)) from None
+        raise CircuitError(
+            "nesting", f"signs or powers nest deeper than {MAX_NESTING}", source.span(deep.where)
+        ) from None
     except _BadNumber as bad:
         raise CircuitError("bad-number", bad.reason, source.span(place(bad.token))) from None
     except UnexpectedInput as error:
@@ -309,21 +325,35 @@ def _explained(source: Source, error: UnexpectedInput) -> CircuitError:
     if isinstance(error, UnexpectedCharacters):
         line, column = error.line, error.column
         found = error.char
-        return syntax_mistake(source.at(line, column), "", found, error.allowed or set(), _before(source, line, column))
+        return syntax_mistake(
+            source.at(line, column), "", found, error.allowed or set(), _before(source, line, column)
+        )
     if isinstance(error, UnexpectedToken) and error.token.type != "$END":
         where = place(error.token)
         if error.token.type == "_LINE_END":
             # the statement breaks off: point behind its last character
             line = source.lines[where.line - 1]
             column = min(where.column, len(line) + 1)
-            return syntax_mistake(source.at(where.line, column), "_LINE_END", "", error.accepts or error.expected, _before(source, where.line, column))
+            return syntax_mistake(
+                source.at(where.line, column),
+                "_LINE_END",
+                "",
+                error.accepts or error.expected,
+                _before(source, where.line, column),
+            )
         return syntax_mistake(
-            source.span(where), error.token.type, str(error.token), error.accepts or error.expected, _before(source, where.line, where.column)
+            source.span(where),
+            error.token.type,
+            str(error.token),
+            error.accepts or error.expected,
+            _before(source, where.line, where.column),
         )
     last = max(1, len(source.lines))
     while last > 1 and not source.lines[last - 1].strip():
         last -= 1
-    return syntax_mistake(source.at(last, len(source.lines[last - 1]) + 1), "$END", "", getattr(error, "expected", set()), "")
+    return syntax_mistake(
+        source.at(last, len(source.lines[last - 1]) + 1), "$END", "", getattr(error, "expected", set()), ""
+    )
 
 
 def _before(source: Source, line: int, column: int) -> str:

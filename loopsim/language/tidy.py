@@ -105,13 +105,24 @@ def _gap(before_previous: tuple[str, str], previous: tuple[str, str], token: tup
     if token[1] in (",", ";", ")", ":"):
         return ""
     if token[1] == "(":
-        return "" if previous[0] == "name" else " " if previous[1] not in ("(", "-") or before_previous[0] in ("number", "unit", "name") else ""
+        return (
+            ""
+            if previous[0] == "name"
+            else " "
+            if previous[1] not in ("(", "-") or before_previous[0] in ("number", "unit", "name")
+            else ""
+        )
     if previous[1] == "(":
         return ""
     if token[1] == "^" or previous[1] == "^":
         return ""
-    if previous[1] in ("-", "+") and previous[0] == "mark" and (
-        before_previous[0] in ("", "link", "range", "spread") or before_previous[1] in ("(", ",", "=", "+", "-", "*", "/", "^", "<", ">", "{", ":", ";", "in")
+    if (
+        previous[1] in ("-", "+")
+        and previous[0] == "mark"
+        and (
+            before_previous[0] in ("", "link", "range", "spread")
+            or before_previous[1] in ("(", ",", "=", "+", "-", "*", "/", "^", "<", ">", "{", ":", ";", "in")
+        )
     ):
         return ""
     return " "

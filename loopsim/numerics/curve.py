@@ -101,7 +101,14 @@ def correct(
 
 
 def follow(
-    equations: CurveEquations, x: Array, level: float, toward: float, low: float, high: float, scale: Array, deadline: float
+    equations: CurveEquations,
+    x: Array,
+    level: float,
+    toward: float,
+    low: float,
+    high: float,
+    scale: Array,
+    deadline: float,
 ) -> Curve:
     """The curve from (x, level) in the direction in which the level first moves `toward` (+1 or -1), until it leaves [low, high], closes,
     sticks, or time is up. scale: (n + 1,) size of each unknown and of the level. The last point lies outside the range where it left it."""
@@ -120,7 +127,9 @@ def follow(
         if time.monotonic() > deadline:
             end = "time"
             break
-        corrected = correct(equations, x + step * here[:n] * scale[:n], level + step * here[n] * scale[n], scale, here, step)
+        corrected = correct(
+            equations, x + step * here[:n] * scale[:n], level + step * here[n] * scale[n], scale, here, step
+        )
         new = tangent(equations, corrected[0], corrected[1], scale, here) if corrected is not None else None
         turn = float(np.arccos(np.clip(new @ here, -1.0, 1.0))) if new is not None else np.pi
         if corrected is None or new is None or turn > TURN:
@@ -130,7 +139,12 @@ def follow(
             continue
         point = np.append(corrected[0] / scale[:n], corrected[1] / scale[n])
         away = float(np.linalg.norm(point - start))
-        if left_start and away < 1.5 * step and float(new @ start_tangent) > 0.5 and float((start - point) @ new) < step:
+        if (
+            left_start
+            and away < 1.5 * step
+            and float(new @ start_tangent) > 0.5
+            and float((start - point) @ new) < step
+        ):
             xs.append(xs[0])
             levels.append(levels[0])
             tangents.append(start_tangent)
@@ -185,7 +199,9 @@ def fold(
         matrix[n : 2 * n, n : 2 * n] = matrix[:n, :n]
         matrix[n : 2 * n, 2 * n] = rows * slope_along(x, level, real) * sl
         matrix[2 * n, n : 2 * n] = fixed
-        right = np.concatenate([-rows * equations.residual(x, level), -rows * (jacobian @ v), [1.0 - fixed @ v]])
+        right = np.concatenate(
+            [-rows * equations.residual(x, level), -rows * (jacobian @ v), [1.0 - fixed @ v]]
+        )
         # the second block can be larger than the first by the curvature of the devices: one more scaling of its rows
         tops = np.max(np.abs(matrix), axis=1)
         tops = np.where(tops > 0.0, tops, 1.0)
@@ -201,6 +217,6 @@ def fold(
         v = v + damping * change[n : 2 * n]
         level = float(level + damping * change[2 * n] * sl)
         previous, step = step, abs(float(change[2 * n]))
-        if size < 1e-9 and step < 1e-13 or (size < 1e-7 and step >= previous and step < 1e-11):
+        if (size < 1e-9 and step < 1e-13) or (size < 1e-7 and step >= previous and step < 1e-11):
             return FoldPoint(x, level, v * sx / np.linalg.norm(v * sx), step)
     return None

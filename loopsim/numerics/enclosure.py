@@ -16,7 +16,9 @@ Array: TypeAlias = NDArray[np.float64]
 
 UNIT = 2.0**-53  # unit roundoff of IEEE double
 TINY = 1e-290  # covers what underflow loses in sums of products whose factors exceed 1e-10
-FUNCTION_ERROR = 16.0 * UNIT  # library functions were measured below 4 units in the last place; formulas here chain up to three
+FUNCTION_ERROR = (
+    16.0 * UNIT
+)  # library functions were measured below 4 units in the last place; formulas here chain up to three
 HUGE = 1e150  # a bound that stands for "not known"; squares of it are still finite
 
 
@@ -48,7 +50,9 @@ def radius(low: Array, high: Array, centre: Array) -> Array:
 def multiply(a_low: Array, a_high: Array, b_low: Array, b_high: Array) -> tuple[Array, Array]:
     """Product of two intervals, elementwise."""
     p, q, r, t = a_low * b_low, a_low * b_high, a_high * b_low, a_high * b_high
-    return down(np.minimum(np.minimum(p, q), np.minimum(r, t))), up(np.maximum(np.maximum(p, q), np.maximum(r, t)))
+    return down(np.minimum(np.minimum(p, q), np.minimum(r, t))), up(
+        np.maximum(np.maximum(p, q), np.maximum(r, t))
+    )
 
 
 def scale(factor: Array, low: Array, high: Array) -> tuple[Array, Array]:

@@ -70,7 +70,9 @@ def newton(
             f_trial = residual(trial)
             next_step = solve(matrices, -f_trial)
             next_size = np.max(np.abs(next_step) / (1.0 + np.abs(x)), axis=1)
-            good = active & (next_size <= (1.0 - 0.25 * damping) * size + 1e-16) | (active & (size <= tolerance))
+            good = active & (next_size <= (1.0 - 0.25 * damping) * size + 1e-16) | (
+                active & (size <= tolerance)
+            )
             x = np.where(good[:, None], trial, x)
             f = np.where(good[:, None], f_trial, f)
             converged |= good & (size * damping <= tolerance)

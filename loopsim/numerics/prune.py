@@ -18,7 +18,19 @@ from typing import Protocol, TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
-from loopsim.numerics.enclosure import HUGE, TINY, UNIT, divide_clear, down, gamma, middle, multiply, radius, scale, up
+from loopsim.numerics.enclosure import (
+    HUGE,
+    TINY,
+    UNIT,
+    divide_clear,
+    down,
+    gamma,
+    middle,
+    multiply,
+    radius,
+    scale,
+    up,
+)
 from loopsim.numerics.newton import newton
 
 Array: TypeAlias = NDArray[np.float64]
@@ -41,7 +53,7 @@ class Rows(Protocol):
 
     @property
     def steep(self) -> NDArray[np.bool_]: ...
-    def take(self, rows: Index) -> "Rows": ...
+    def take(self, rows: Index) -> Rows: ...
     def value(self, w: Array) -> Array: ...
     def slope(self, w: Array) -> Array: ...
     def bounds(self, low: Array, high: Array) -> tuple[Array, Array]: ...
@@ -103,11 +115,13 @@ class Problem:
         if least <= 0.0 or np.any(d < 0.0) or np.any((size == 0.0) & np.any(self.B != 0.0, axis=0)):
             return None
         line = d[:, None] * self.W
-        rest = np.linalg.norm(self.B.T - line, axis=1) + 4.0 * UNIT * (np.linalg.norm(self.B, axis=0) + np.linalg.norm(line, axis=1))
+        rest = np.linalg.norm(self.B.T - line, axis=1) + 4.0 * UNIT * (
+            np.linalg.norm(self.B, axis=0) + np.linalg.norm(line, axis=1)
+        )
         return least * (1.0 - 1e-9), rest * np.sqrt(size) * (1.0 + 1e-9)
 
     @cached_property
-    def layout(self) -> "Layout":
+    def layout(self) -> Layout:
         """Where each quantity stands in a box."""
         n, m, q = self.n, self.m, len(self.product)
         ends = np.cumsum([0, n, m, m, q, q]).tolist()
@@ -128,7 +142,7 @@ class Problem:
         return np.abs(self.G), np.abs(self.B), np.abs(self.W), np.abs(self.V)
 
     @cached_property
-    def table(self) -> "LinearTable":
+    def table(self) -> LinearTable:
         """The linear rows G x + B psi = s, W x - w = -c, V x - u = -d over the variables (x, w, psi, u)."""
         n, m, q = self.n, self.m, len(self.product)
         total = n + 2 * m + q
@@ -144,7 +158,7 @@ class Problem:
         return linear_table(np.concatenate([top, mid, end, extra]), low, high)
 
     @cached_property
-    def nodal(self) -> "NodalTable | None":
+    def nodal(self) -> NodalTable | None:
         """What the nodal contraction needs, None where no unknown enters its own row both ways."""
         return nodal_table(self)
 
@@ -169,7 +183,9 @@ def linear_table(matrix: Array, low: Array, high: Array) -> LinearTable:
     matrix, low, high = matrix[keep], low[keep], high[keep]
     counts = np.count_nonzero(matrix, axis=1)
     width = max(1, int(counts.max(initial=1)))
-    index = np.full((len(matrix), width), matrix.shape[1], dtype=np.int64)  # one past the end: a constant zero
+    index = np.full(
+        (len(matrix), width), matrix.shape[1], dtype=np.int64
+    )  # one past the end: a constant zero
     coefficient = np.ones((len(matrix), width))
     where: list[list[int]] = [[] for _ in range(matrix.shape[1])]
     for r, row in enumerate(matrix):
@@ -183,7 +199,9 @@ def linear_table(matrix: Array, low: Array, high: Array) -> LinearTable:
     for column, spots in enumerate(where):
         places[column, : len(spots)] = spots
     size = np.maximum(np.abs(low), np.abs(high))[:, None]
-    return LinearTable(index, coefficient, low[:, None], high[:, None], places, np.ones((width, width)) - np.eye(width), size)
+    return LinearTable(
+        index, coefficient, low[:, None], high[:, None], places, np.ones((width, width)) - np.eye(width), size
+    )
 
 
 def differences(matrix: Array, low: Array, high: Array, n: int) -> tuple[Array, Array, Array]:
@@ -259,7 +277,9 @@ def nodal_table(problem: Problem) -> NodalTable | None:
     columns = np.array([one.column for one in found], dtype=np.int64)
     off, keep = problem.G[equation].copy(), problem.B[equation].copy()
     own = np.zeros(len(found))
-    pairs = [(u, k, lever) for u, one in enumerate(found) for k, lever in zip(one.rows, one.levers, strict=True)]
+    pairs = [
+        (u, k, lever) for u, one in enumerate(found) for k, lever in zip(one.rows, one.levers, strict=True)
+    ]
     which = np.array([u for u, _, _ in pairs], dtype=np.int64)
     ks = np.array([k for _, k, _ in pairs], dtype=np.int64)
     keep[which, ks] = 0.0
@@ -293,7 +313,9 @@ def _own_unknowns(problem: Problem) -> list[_Lever]:
         for k in ks:
             rest = problem.W[k].copy()
             rest[j] = 0.0
-            levers.append((float(problem.W[k, j]), rest, none, float(problem.c_low[k]), float(problem.c_high[k])))
+            levers.append(
+                (float(problem.W[k, j]), rest, none, float(problem.c_low[k]), float(problem.c_high[k]))
+            )
         found.append(_Lever(j, j, tuple(ks.tolist()), tuple(levers)))
     return found
 
@@ -316,16 +338,30 @@ def _shared_arguments(problem: Problem) -> list[_Lever]:
             # w_k = ratio (w_first - c_first) + c_k, up to the rounding of the ratio
             ends = (problem.c_low[k] - ratio * problem.c_low[first], problem.c_high[k] - ratio * problem.c_high[first],
                     problem.c_low[k] - ratio * problem.c_high[first], problem.c_high[k] - ratio * problem.c_low[first])  # fmt: skip
-            room = 8.0 * UNIT * (abs(problem.c_high[k]) + abs(problem.c_low[k]) + abs(ratio) * (abs(problem.c_low[first]) + abs(problem.c_high[first])))
+            room = (
+                8.0
+                * UNIT
+                * (
+                    abs(problem.c_high[k])
+                    + abs(problem.c_low[k])
+                    + abs(ratio) * (abs(problem.c_low[first]) + abs(problem.c_high[first]))
+                )
+            )
             group.append(k)
-            levers.append((ratio, np.zeros(problem.n), fuzz, float(min(ends) - room), float(max(ends) + room)))
+            levers.append(
+                (ratio, np.zeros(problem.n), fuzz, float(min(ends) - room), float(max(ends) + room))
+            )
         if len(group) < 2:
             continue
         taken |= set(group)
         equation = int(np.argmax(np.max(np.abs(problem.B[:, group]), axis=1)))
         used = [i for i, k in enumerate(group) if problem.B[equation, k] != 0.0]
         if len(used) >= 2:
-            found.append(_Lever(problem.n + first, equation, tuple(group[i] for i in used), tuple(levers[i] for i in used)))
+            found.append(
+                _Lever(
+                    problem.n + first, equation, tuple(group[i] for i in used), tuple(levers[i] for i in used)
+                )
+            )
     return found
 
 
@@ -342,7 +378,7 @@ class Boxes:
     def __len__(self) -> int:
         return len(self.low)
 
-    def pick(self, chosen: NDArray[np.bool_] | Index | slice) -> "Boxes":
+    def pick(self, chosen: NDArray[np.bool_] | Index | slice) -> Boxes:
         return Boxes(self.low[chosen], self.high[chosen])
 
     def empty(self) -> NDArray[np.bool_]:
@@ -376,7 +412,9 @@ def boxes_over(problem: Problem, x_low: Array, x_high: Array) -> Boxes:
         return Boxes(x_low, x_high)
     f_low, f_high = problem.rows.bounds(w_low, w_high)
     if len(q) == 0:
-        return Boxes(np.concatenate([x_low, w_low, f_low], axis=1), np.concatenate([x_high, w_high, f_high], axis=1))
+        return Boxes(
+            np.concatenate([x_low, w_low, f_low], axis=1), np.concatenate([x_high, w_high, f_high], axis=1)
+        )
     u_low, u_high = _affine(problem.V[q], x_low, x_high, problem.d_low[q], problem.d_high[q])
     p_low, p_high = f_low.copy(), f_high.copy()
     p_low[:, q], p_high[:, q] = multiply(f_low[:, q], f_high[:, q], u_low, u_high)
@@ -391,7 +429,9 @@ def _affine(matrix: Array, x_low: Array, x_high: Array, c_low: Array, c_high: Ar
     plus, minus = np.maximum(matrix, 0.0), np.minimum(matrix, 0.0)
     low = x_low @ plus.T + x_high @ minus.T + c_low
     high = x_high @ plus.T + x_low @ minus.T + c_high
-    size = np.maximum(np.abs(x_low), np.abs(x_high)) @ np.abs(matrix).T + np.maximum(np.abs(c_low), np.abs(c_high))
+    size = np.maximum(np.abs(x_low), np.abs(x_high)) @ np.abs(matrix).T + np.maximum(
+        np.abs(c_low), np.abs(c_high)
+    )
     error = size * gamma(matrix.shape[1] + 2) + TINY
     return low - error, high + error
 
@@ -407,7 +447,11 @@ def hull(problem: Problem, boxes: Boxes) -> Boxes:
     t_low, t_high = np.minimum(first, second), np.maximum(first, second)
     size = np.maximum(-t_low, t_high)
     if len(table.exclude) <= 24:
-        others_low, others_high, others_size = t_low @ table.exclude, t_high @ table.exclude, size @ table.exclude
+        others_low, others_high, others_size = (
+            t_low @ table.exclude,
+            t_high @ table.exclude,
+            size @ table.exclude,
+        )
     else:
         others_low, others_high, others_size = _others(t_low), _others(t_high), _others(size)
     # every term carries one rounding itself, the right side two more
@@ -479,7 +523,9 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     x_low, x_high = boxes.low[:, at.x], boxes.high[:, at.x]
     i = table.equation
     fixed_low, fixed_high = _affine(table.off, x_low, x_high, -problem.s_high[i], -problem.s_low[i])
-    term_low, term_high = _affine(table.keep, boxes.low[:, at.p], boxes.high[:, at.p], np.zeros(len(j)), np.zeros(len(j)))
+    term_low, term_high = _affine(
+        table.keep, boxes.low[:, at.p], boxes.high[:, at.p], np.zeros(len(j)), np.zeros(len(j))
+    )
     fixed_low, fixed_high = down(fixed_low + term_low), up(fixed_high + term_high)
     k = table.pair_row
     rest_low, rest_high = _affine(table.rest, x_low, x_high, table.c_low, table.c_high)
@@ -487,7 +533,9 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     rest_low, rest_high = down(rest_low - slack), up(rest_high + slack)
     has_product = len(problem.product) > 0
     if has_product:
-        u_rest_low, u_rest_high = _affine(table.factor_rest, x_low, x_high, problem.d_low[k], problem.d_high[k])
+        u_rest_low, u_rest_high = _affine(
+            table.factor_rest, x_low, x_high, problem.d_low[k], problem.d_high[k]
+        )
     own_low, own_high = boxes.low[:, j], boxes.high[:, j]
     cuts = slices(own_low, own_high, SLICES)  # (q + 1, b, u)
     start, stop = cuts[:-1], cuts[1:]
@@ -508,7 +556,11 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     own_term_low, own_term_high = scale(table.own, start, stop)
     low = sum_low + own_term_low + fixed_low
     high = sum_high + own_term_high + fixed_high
-    error = (size + np.maximum(np.abs(own_term_low), np.abs(own_term_high)) + np.maximum(np.abs(fixed_low), np.abs(fixed_high)))
+    error = (
+        size
+        + np.maximum(np.abs(own_term_low), np.abs(own_term_high))
+        + np.maximum(np.abs(fixed_low), np.abs(fixed_high))
+    )
     error = error * gamma(t + 4) + TINY
     hit = (low - error <= 0.0) & (high + error >= 0.0) & ((missed.astype(float) @ table.gather) == 0.0)
     some = hit.any(axis=0)
@@ -595,8 +647,12 @@ def relax(problem: Problem, boxes: Boxes) -> Relaxed:
         er = up(np.abs(u) * er)
         er[:, q] = up(er[:, q] + up(fr * ur))
         em = em * u
-        er = er + (np.abs(em) * 2.0 + np.abs(lines) * np.maximum(np.abs(w_low), np.abs(w_high))) * (2.0 * UNIT)
-    slope = lines[..., None] * problem.W + f[..., None] * problem.V if len(q) else lines[..., None] * problem.W
+        er = er + (np.abs(em) * 2.0 + np.abs(lines) * np.maximum(np.abs(w_low), np.abs(w_high))) * (
+            2.0 * UNIT
+        )
+    slope = (
+        lines[..., None] * problem.W + f[..., None] * problem.V if len(q) else lines[..., None] * problem.W
+    )
     matrix = problem.G + problem.B @ slope
     inverse = invert(matrix)
     wm = _times(problem.W, xm) + c
@@ -638,7 +694,11 @@ def relax(problem: Problem, boxes: Boxes) -> Relaxed:
     w_through = problem.W @ through
     w_rad = (
         _times(np.abs(w_through), inner_rad)
-        + _times(w, _times(np.abs(error), rx) + _times(size_n, residual_rad + 2.0 * (spread_b + reach + np.abs(residual)) * gamma(k)))
+        + _times(
+            w,
+            _times(np.abs(error), rx)
+            + _times(size_n, residual_rad + 2.0 * (spread_b + reach + np.abs(residual)) * gamma(k)),
+        )
         + _times(w, rx * (4.0 * UNIT) + (size_x + np.abs(dx)) * gamma(k))
         + np.abs(c) * gamma(2)
         + c_rad
@@ -667,7 +727,9 @@ def injective(problem: Problem, boxes: Boxes) -> NDArray[np.bool_]:
     fr = np.zeros_like(a_low)
     if len(q):
         a_low, a_high = a_low.copy(), a_high.copy()
-        a_low[:, q], a_high[:, q] = multiply(a_low[:, q], a_high[:, q], boxes.low[:, at.u], boxes.high[:, at.u])
+        a_low[:, q], a_high[:, q] = multiply(
+            a_low[:, q], a_high[:, q], boxes.low[:, at.u], boxes.high[:, at.u]
+        )
         f[:, q] = middle(boxes.low[:, at.f], boxes.high[:, at.f])
         fr[:, q] = radius(boxes.low[:, at.f], boxes.high[:, at.f], f[:, q])
     a = middle(a_low, a_high)
@@ -701,7 +763,9 @@ def injective(problem: Problem, boxes: Boxes) -> NDArray[np.bool_]:
     slack = _times(loose, z)
     image_z = _times(through, load) + slack + _times(size_n @ b, load) * gamma(k)
     image_y = _times(w_through, load) + _times(w, slack)
-    good = np.all(image_z * (1.0 + 8 * gamma(k)) < z, axis=1) & np.all(image_y * (1.0 + 8 * gamma(k)) < y, axis=1)
+    good = np.all(image_z * (1.0 + 8 * gamma(k)) < z, axis=1) & np.all(
+        image_y * (1.0 + 8 * gamma(k)) < y, axis=1
+    )
     if v_through is not None:
         image_v = _times(v_through, load) + _times(v, slack)
         good &= np.all(image_v * (1.0 + 8 * gamma(k)) < yv, axis=1)
@@ -785,15 +849,24 @@ def certify(problem: Problem, x: Array) -> Certified:
         a_low, a_high = problem.rows.slope_bounds(here.low[:, at.w], here.high[:, at.w]) if m else (a, a)
         if len(q):
             a_low, a_high = a_low.copy(), a_high.copy()
-            a_low[:, q], a_high[:, q] = multiply(a_low[:, q], a_high[:, q], here.low[:, at.u], here.high[:, at.u])
+            a_low[:, q], a_high[:, q] = multiply(
+                a_low[:, q], a_high[:, q], here.low[:, at.u], here.high[:, at.u]
+            )
         ar = radius(a_low, a_high, a)
         fr = np.zeros_like(a)
         if len(q):
             fr[:, q] = radius(here.low[:, at.f], here.high[:, at.f], f[:, q])
         move = ar * _times(w, spread) + fr * _times(v, spread)
-        size_row = _times(g, spread) + _times(b, (np.abs(a) + ar) * _times(w, spread) + (np.abs(f) + fr) * _times(v, spread))
+        size_row = _times(g, spread) + _times(
+            b, (np.abs(a) + ar) * _times(w, spread) + (np.abs(f) + fr) * _times(v, spread)
+        )
         error = _times(np.abs(np.eye(n) - inverse @ matrix), spread)
-        image = shift + error + _times(through, move) + _times(size_n, size_row + _times(b, move)) * (3.0 * gamma(k))
+        image = (
+            shift
+            + error
+            + _times(through, move)
+            + _times(size_n, size_row + _times(b, move)) * (3.0 * gamma(k))
+        )
         image = up(image * (1.0 + gamma(k))) + TINY
         inside = np.all(image < spread, axis=1) & proved & ~good
         good |= inside
@@ -846,7 +919,13 @@ class _Search:
 
 
 def search(
-    problem: Problem, low: Array, high: Array, *, deadline: float = np.inf, scale: Array | None = None, max_boxes: int = 10_000_000
+    problem: Problem,
+    low: Array,
+    high: Array,
+    *,
+    deadline: float = np.inf,
+    scale: Array | None = None,
+    max_boxes: int = 10_000_000,
 ) -> Found:
     """Every solution with x in [low, high]: (n,) each. deadline: time.monotonic() after which the rest is left. scale: (n,) size of each
     unknown for the word small (default 1)."""
@@ -866,8 +945,12 @@ def search(
     clusters = [_ends(problem, part) for part in state.clusters] + doubtful
     n = problem.n
     return Found(
-        x, spread, np.concatenate(clusters) if clusters else np.zeros((0, 2, n)), np.concatenate(left) if left else np.zeros((0, 2, n)),
-        state.boxes, time.monotonic() - began,
+        x,
+        spread,
+        np.concatenate(clusters) if clusters else np.zeros((0, 2, n)),
+        np.concatenate(left) if left else np.zeros((0, 2, n)),
+        state.boxes,
+        time.monotonic() - began,
     )
 
 
@@ -981,7 +1064,11 @@ def _settle(state: _Search, boxes: Boxes) -> NDArray[np.bool_]:
         points = newton_points(problem, middle(part.low[:, at.x], part.high[:, at.x]))
         certified = certify(problem, points)
         if not certified.good.all():
-            points = np.where(certified.good[:, None], points, _damped_points(problem, middle(part.low[:, at.x], part.high[:, at.x])))
+            points = np.where(
+                certified.good[:, None],
+                points,
+                _damped_points(problem, middle(part.low[:, at.x], part.high[:, at.x])),
+            )
             certified = certify(problem, points)
         joined = _join(part, start_points(problem, certified.x, certified.spread))
         # one to one over the hull of the box and the point: the point is the only solution either holds
@@ -1004,7 +1091,9 @@ def _settle(state: _Search, boxes: Boxes) -> NDArray[np.bool_]:
 
 def _outside(boxes: Boxes, region: Boxes, n: int) -> NDArray[np.bool_]:
     """(b,) not wholly within a region that is known to hold one solution. The x columns do not count: the proof there was of w, u, phi."""
-    return np.asarray(((boxes.low[:, n:] < region.low[:, n:]) | (boxes.high[:, n:] > region.high[:, n:])).any(axis=1))
+    return np.asarray(
+        ((boxes.low[:, n:] < region.low[:, n:]) | (boxes.high[:, n:] > region.high[:, n:])).any(axis=1)
+    )
 
 
 def _join(a: Boxes, b: Boxes) -> Boxes:
@@ -1073,7 +1162,10 @@ def _distinct(problem: Problem, points: list[tuple[Array, Array]]) -> tuple[Arra
             if np.all(np.abs(x[i] - x[k]) <= (spread[i] + spread[k]) * (1.0 + 1e-12)):
                 near.append(k)
         for k in near:
-            pair = _join(start_points(problem, x[i][None], spread[i][None]), start_points(problem, x[k][None], spread[k][None]))
+            pair = _join(
+                start_points(problem, x[i][None], spread[i][None]),
+                start_points(problem, x[k][None], spread[k][None]),
+            )
             if not injective(problem, pair)[0]:
                 doubtful.append(_ends(problem, pair))
         if not near:

@@ -122,7 +122,11 @@ def _ordinary(matrices: Array) -> list[Spectrum]:
     forward, forward_error = _eigen(matrices)
     backward, backward_error = np.full(forward.shape, np.nan + 0j), np.full(forward.shape, np.inf)
     with np.errstate(all="ignore"):
-        clear = np.isfinite(np.linalg.cond(matrices)) if matrices.shape[1] else np.zeros(len(matrices), dtype=bool)
+        clear = (
+            np.isfinite(np.linalg.cond(matrices))
+            if matrices.shape[1]
+            else np.zeros(len(matrices), dtype=bool)
+        )
         if np.any(clear):
             inverse = np.linalg.inv(matrices[clear])
             finite = np.isfinite(inverse).all(axis=(1, 2))
@@ -136,12 +140,19 @@ def _ordinary(matrices: Array) -> list[Spectrum]:
                 backward_error[rows] = 2.0 * np.abs(lam) ** 2 * mu_error
     found = []
     for one, one_error, two, two_error in zip(forward, forward_error, backward, backward_error, strict=True):
-        order_one, order_two = np.argsort(np.abs(one)), np.argsort(np.abs(np.where(np.isfinite(two), two, np.inf)))
+        order_one, order_two = (
+            np.argsort(np.abs(one)),
+            np.argsort(np.abs(np.where(np.isfinite(two), two, np.inf))),
+        )
         a, a_error, b, b_error = one[order_one], one_error[order_one], two[order_two], two_error[order_two]
         better = np.isfinite(b_error) & (b_error < a_error)
         # the cut between the two lists must not part a conjugate pair
         count = int(np.count_nonzero(better))
-        if 0 < count < len(a) and abs(b[count - 1].imag) > 0.0 and np.isclose(b[count - 1], np.conj(b[count]), rtol=1e-6):
+        if (
+            0 < count < len(a)
+            and abs(b[count - 1].imag) > 0.0
+            and np.isclose(b[count - 1], np.conj(b[count]), rtol=1e-6)
+        ):
             count += 1
         values = np.concatenate([b[:count], a[count:]])
         errors = np.concatenate([b_error[:count], a_error[count:]])
@@ -160,7 +171,9 @@ def _eigen(matrices: Array) -> tuple[Complex, Array]:
         off = np.abs(balanced) * (1.0 - np.eye(balanced.shape[1]))
         rows, columns = off.sum(axis=2), off.sum(axis=1)
         with np.errstate(divide="ignore", invalid="ignore"):
-            factor = np.where((rows > 0.0) & (columns > 0.0), np.exp2(np.round(0.5 * np.log2(columns / rows))), 1.0)
+            factor = np.where(
+                (rows > 0.0) & (columns > 0.0), np.exp2(np.round(0.5 * np.log2(columns / rows))), 1.0
+            )
         factor = np.where(np.isfinite(factor) & (factor > 0.0), factor, 1.0)
         balanced = balanced * factor[:, :, None] / factor[:, None, :]
     values, vectors = np.linalg.eig(balanced)
