@@ -136,4 +136,4 @@ def dimension_of(unit: str) -> Dimension:
     if unit == "degC":
         return KELVIN
     text = unit.removeprefix("1")
-    return unit_of(text or "")[1] if text != unit or unit[0] not in "/" else unit_of(unit)[1]
+    return unit_of(text or "")[1] if text != unit or unit[0] != "/" else unit_of(unit)[1]

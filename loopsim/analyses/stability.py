@@ -80,8 +80,8 @@ def _spectra(order: Groups, jacobians: Array, dynamics: Array) -> list[Spectrum]
     for i in range(len(jacobians)):
         values = np.concatenate([part[i].values for part in parts]) if parts else np.zeros(0, dtype=complex)
         errors = np.concatenate([part[i].errors for part in parts]) if parts else np.zeros(0)
-        order = np.lexsort((-values.imag, -values.real))
-        joined.append(Spectrum(values[order], errors[order]))
+        sequence = np.lexsort((-values.imag, -values.real))
+        joined.append(Spectrum(values[sequence], errors[sequence]))
     return joined
 
 
@@ -170,7 +170,7 @@ def _verdict(
     system: System, jacobian: Array, wrong: bool, own: Spectrum, strayed: list[Spectrum], trials: list[Array],
     candidates: NDArray[np.int64], dynamic: bool,
 ) -> Verdict:  # fmt: skip
-    growth, grows = _growth(own)
+    _, grows = _growth(own)
     outcomes = [_growth(s)[1] for s in strayed]
     assumed = (
         f"assumed {STRAY * 1e12:g} pF from each net without capacitance to gnd, each varied by 1/10 to 10"
@@ -261,7 +261,8 @@ def _filled(
     values = spectrum.values
     pairs = values[values.imag > 0.0]
     growing = pairs[pairs.real > 0.0]
-    frequency, swings = None, ()
+    frequency: float | None = None
+    swings: tuple[str, ...] = ()
     if stable is False and len(values) and values[0].real > 0.0:
         swings = _swings(system, jacobian, dynamics, values[0])
     if len(growing):

@@ -2,8 +2,8 @@
 
 States are proved at both ends and at stations between; from every one of them the curve is followed both ways; a proved state that lies on
 no curve yet starts a new one (a closed loop between the ends is found that way). Folds are located by Newton on the fold equations, points
-where a growing pair appears by the eigenvalues. For a let that is a quasi-static input, each jump is followed to where it lands. Last, where
-the let only moves sources, the range is cut into pieces over which the proof itself covers every value of the let at once.
+where a growing pair appears by the eigenvalues. For a let that is a quasi-static input, each jump is followed to where it lands. Last,
+where the let only moves sources, the range is cut into pieces over which the proof itself covers every value of the let at once.
 """
 
 from __future__ import annotations
@@ -11,6 +11,7 @@ from __future__ import annotations
 import time
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -211,7 +212,7 @@ def trace(
     """The static characteristic along a let.
 
     over: range [SI of the let], by default the one it was given with `in`. watch: nets of interest. stations: values between the ends at
-    which the states are proved. budget: wall time [s]; range_budget: what of it the proof over the whole range may take, 0 to leave that out.
+    which the states are proved. budget: wall time [s]; range_budget: what of it the proof over the range may take, 0 to leave that out.
     CircuitError for an unknown let or net, or a let without a range.
     """
     began = time.monotonic()
@@ -710,7 +711,7 @@ def _prove_range(
             cuts |= {f.at - reach, f.at + reach}
             reach *= GRADING
     edges = sorted(c for c in cuts if family.low <= c <= family.high)
-    waiting = [(a, b) for a, b in zip(edges[:-1], edges[1:], strict=True) if b > a][::-1]
+    waiting = [(a, b) for a, b in pairwise(edges) if b > a][::-1]
     gaps: list[tuple[float, float]] = []
     while waiting:
         low, high = waiting.pop()

@@ -42,7 +42,7 @@ def value_error(kind: int, w: Array, p: Any, value: Array) -> Array:
         total = np.abs(p[0]) + np.abs(p[1] * w)
         for j in range(2, len(p) - 1, 2):
             total = total + np.abs(p[j + 1]) * (np.abs(w) + 2.0 * np.abs(p[j]))
-        return total * ((len(p) + 6) * UNIT) + TINY
+        return total * ((len(p) + 6) * UNIT) + TINY  # type: ignore[no-any-return]
     if kind == Kind.RECIPROCAL:
         return (3.0 * np.minimum(np.abs(w), 1.0) + np.abs(value)) * FUNCTION_ERROR + TINY
     # the continued exponential adds terms of one sign; the others are single functions of the library: relative bounds hold

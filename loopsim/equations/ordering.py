@@ -1,7 +1,7 @@
 """Which unknowns can be found before which: the block triangular form of the equations.
 
 Rows are matched to unknowns, an unknown then needs every unknown of its row; strongly connected groups are solved together, in topological
-order (A. L. Dulmage, N. S. Mendelsohn 1958; I. S. Duff, J. K. Reid 1978, both from memory). Nothing numeric is decided here: an entry counts
+order (Dulmage, Mendelsohn 1958; Duff, Reid 1978, both from memory). Nothing numeric is decided here: an entry counts
 as soon as it is not exactly zero.
 """
 
@@ -55,7 +55,7 @@ def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.
         )
     own = np.diag(pattern(system))
     # match[j]: the row that answers for unknown j; unknown j needs every unknown of that row
-    count, labels = connected_components(csr_array(entries[match]), directed=True, connection="strong")
+    count, labels = connected_components(csr_array(entries[match]), directed=True, connection="strong")  # type: ignore[arg-type]
     members: list[list[int]] = [[] for _ in range(count)]
     for j, label in enumerate(labels.tolist()):
         members[label].append(j)

@@ -377,7 +377,7 @@ class Builder:
                 statement.value.value.place,
                 "let ambient = 25 degC",
             )
-        ends = []
+        ends: list[Expression | None] = []
         for end in (statement.low, statement.high):
             if end is None:
                 ends.append(None)
@@ -606,14 +606,18 @@ class Builder:
     def _check_sum(
         self, tree: Expression, definitions: Definitions, formula: t.Formula, scope: Scope
     ) -> None:
-        from loopsim.devices.curves import curve_values
+        from loopsim.devices.curves import CurveValues, points_curve, polynomial_curve
         from loopsim.devices.formula import sum_of
+
+        def numbers(curve: Curve) -> CurveValues:
+            values = [float(evaluate(v, self.numbers)) for v in curve.values]
+            return polynomial_curve(values) if curve.form == "polynomial" else points_curve(values)
 
         try:
             sum_of(
                 tree,
                 self.numbers,
-                {name: curve_values(curve, {}) for name, curve in definitions.curves.items()},
+                {name: numbers(curve) for name, curve in definitions.curves.items()},
             )
         except CircuitError as error:
             raise scope.mistake(error.code, error.message, formula.place, error.hint) from None
@@ -1053,7 +1057,8 @@ class Builder:
             targets.append((value.tree, low, high))
         if relation.form == "range":
             low_end, high_end = targets[0][0], targets[1][0]
-            assert low_end is not None and high_end is not None
+            assert low_end is not None
+            assert high_end is not None
             if self._number(low_end, relation.items[0].value, scope) > self._number(
                 high_end, relation.items[1].value, scope
             ):

@@ -100,9 +100,9 @@ def _chain(formula: t.Chain, scope: Scope) -> Typed:
     for operator, part, operand in zip(formula.operators, parts[1:], formula.operands[1:], strict=True):
         if operator in "+-":
             if part.dimension != total.dimension:
-                word = "add" if operator == "+" else "subtract"
+                word, preposition = ("add", "to") if operator == "+" else ("subtract", "from")
                 raise scope.mistake(
-                    "dimension", f"cannot {word} {in_words(part.dimension)} {'to' if operator == '+' else 'from'} {in_words(total.dimension)}",
+                    "dimension", f"cannot {word} {in_words(part.dimension)} {preposition} {in_words(total.dimension)}",
                     operand.place,
                 )  # fmt: skip
             dimension = total.dimension

@@ -8,7 +8,7 @@ from collections.abc import Mapping
 from pathlib import Path
 
 from loopsim.circuit import Circuit
-from loopsim.errors import CircuitError
+from loopsim.errors import CircuitError, Span
 from loopsim.language import tree as t
 from loopsim.language.builder import Definitions, build, define, statement_place
 from loopsim.language.mistakes import nearest
@@ -140,23 +140,23 @@ class _Reader:
             self.done[name] = define(inner, found, lambda more: self._used(more, inner, name, (*trail, name)))
         return self.done[name]
 
-    def _text(self, name: str, use: t.Use, where: object, shown: str) -> str:
-        span = where if where is None else where
+    def _text(self, name: str, use: t.Use, where: Span | None, shown: str) -> str:
+        span = where
         if self.texts is not None and name in self.texts:
             return self.texts[name]
         if self.root is None:
             raise CircuitError(
                 "use-path", f"`{use.path}` cannot be found: this text has no library root", span
-            )  # type: ignore[arg-type]
+            )
         path = self.root / name
         real = path.resolve()
         if real != self.root and self.root not in real.parents:
             raise CircuitError(
                 "use-outside", f"`{use.path}` leads out of the library", span, "no link may lead out"
-            )  # type: ignore[arg-type]
+            )
         if not real.is_file():
             near = [p.name for p in path.parent.glob("*.loop")] if path.parent.is_dir() else []
             raise CircuitError(
                 "use-missing", f"there is no file `{use.path}`", span, nearest(path.name, near)
-            )  # type: ignore[arg-type]
+            )
         return _read(real, shown)

@@ -332,8 +332,7 @@ def _explained(source: Source, error: UnexpectedInput) -> CircuitError:
         where = place(error.token)
         if error.token.type == "_LINE_END":
             # the statement breaks off: point behind its last character
-            line = source.lines[where.line - 1]
-            column = min(where.column, len(line) + 1)
+            column = min(where.column, len(source.lines[where.line - 1]) + 1)
             return syntax_mistake(
                 source.at(where.line, column),
                 "_LINE_END",

@@ -1,4 +1,4 @@
-"""The standard layout of a circuit file: spacing, indentation, blank lines. Comments stay, meaning stays, and it is checked that it does."""
+"""The standard layout of a circuit file: spacing, indentation, blank lines. Comments and meaning stay, which is checked."""
 
 from __future__ import annotations
 

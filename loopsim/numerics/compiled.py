@@ -33,7 +33,7 @@ def compile_kernel(function: F) -> F:
         return function
     import numba
 
-    compiled: F = numba.njit(error_model="numpy", forceinline=True)(function)
+    compiled: F = numba.njit(error_model="numpy", forceinline=True)(function)  # type: ignore[assignment]
     return compiled
 
 
@@ -51,7 +51,7 @@ def compile_entry(*modules: ModuleType) -> Callable[[F], F]:
         code = function.__code__.replace(co_freevars=(*function.__code__.co_freevars, "source_key"))
         cells = (*(function.__closure__ or ()), CellType(source_stamp(__file__, function.__code__.co_filename, *modules)))
         keyed = FunctionType(code, function.__globals__, function.__name__, function.__defaults__, cells)
-        compiled: F = numba.njit(cache=True, error_model="numpy")(keyed)
+        compiled: F = numba.njit(cache=True, error_model="numpy")(keyed)  # type: ignore[assignment]
         return compiled
 
     return decorate

@@ -64,7 +64,7 @@ def tangent(equations: CurveEquations, x: Array, level: float, scale: Array, las
     except np.linalg.LinAlgError:
         return None
     length = float(np.linalg.norm(found))
-    return found / length if np.isfinite(length) and length > 0.0 else None
+    return found / length if np.isfinite(length) and length > 0.0 else None  # type: ignore[return-value]
 
 
 def correct(
@@ -179,7 +179,7 @@ def fold(
     equations: CurveEquations, bend: Callable[[Array, float, Array], Array], slope_along: Callable[[Array, float, Array], Array],
     x: Array, level: float, v: Array, scale: Array,
 ) -> FoldPoint | None:  # fmt: skip
-    """Newton on the fold equations from a point near one. bend(x, l, v): d(J v)/dx (n, n); slope_along(x, l, v): d(J v)/dl (n,); v: (n,) near
+    """Newton on the fold equations from a point near one. bend(x, l, v): d(J v)/dx (n, n); slope_along(x, l, v): d(J v)/dl; v: (n,) near
     the null direction; scale: (n + 1,). None where it does not converge."""
     n = len(x)
     sx, sl = scale[:n], scale[n]

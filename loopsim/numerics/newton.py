@@ -59,7 +59,8 @@ def newton(
     steps = 0
     with np.errstate(all="ignore"):
         f = residual(x)
-        for steps in range(1, max_steps + 1):
+        for count in range(1, max_steps + 1):
+            steps = count
             matrices = jacobian(x)
             step = solve(matrices, -f)
             lost |= ~np.isfinite(step).all(axis=1)

@@ -13,6 +13,7 @@ from __future__ import annotations
 import time
 from dataclasses import dataclass, field
 from functools import cached_property
+from itertools import pairwise
 from typing import Protocol, TypeAlias
 
 import numpy as np
@@ -125,7 +126,7 @@ class Problem:
         """Where each quantity stands in a box."""
         n, m, q = self.n, self.m, len(self.product)
         ends = np.cumsum([0, n, m, m, q, q]).tolist()
-        return Layout(*(slice(a, b) for a, b in zip(ends[:-1], ends[1:], strict=True)))
+        return Layout(*(slice(a, b) for a, b in pairwise(ends)))
 
     @cached_property
     def centres(self) -> tuple[Array, Array, Array, Array, Array, Array]:
@@ -196,7 +197,7 @@ def linear_table(matrix: Array, low: Array, high: Array) -> LinearTable:
             where[column].append(r * width + k)
     length = max(1, max((len(w) for w in where), default=1))
     places = np.full((matrix.shape[1], length), len(matrix) * width, dtype=np.int64)
-    for column, spots in enumerate(where):
+    for column, spots in enumerate(where):  # type: ignore[assignment]
         places[column, : len(spots)] = spots
     size = np.maximum(np.abs(low), np.abs(high))[:, None]
     return LinearTable(
@@ -321,7 +322,7 @@ def _own_unknowns(problem: Problem) -> list[_Lever]:
 
 
 def _shared_arguments(problem: Problem) -> list[_Lever]:
-    """Rows whose arguments are multiples of one difference (a pair of diodes back to back): none of them alone bounds it, together they do."""
+    """Rows whose arguments are multiples of one difference (a pair of diodes back to back): only together they bound it."""
     found = []
     taken: set[int] = set()
     for first in range(problem.m):
@@ -595,7 +596,7 @@ class Relaxed:
 
 
 def invert(matrices: Array) -> Array:
-    """Approximate inverses (b, n, n); zeros where a matrix is singular or not finite (a zero preconditioner proves nothing, and is safe)."""
+    """Approximate inverses (b, n, n); zeros where a matrix is singular or not finite (which proves nothing, and is safe)."""
     good = np.all(np.isfinite(matrices), axis=(1, 2))
     matrices = np.where(good[:, None, None], matrices, np.eye(matrices.shape[1]))
     try:
@@ -1014,9 +1015,9 @@ def _round(state: _Search, boxes: Boxes, deadline: float) -> list[Boxes]:
         after = boxes.high[:, :columns] - boxes.low[:, :columns]
         moving = ((after < (1.0 - PROGRESS) * before) & (before > floor)).any(axis=1)
         if not moving.all():
-            settled.append(boxes.pick(~moving))
+            settled.append(boxes.pick(~moving))  # type: ignore[arg-type]
             impacts.append(impact[~moving])
-            boxes, impact = boxes.pick(moving), impact[moving]
+            boxes, impact = boxes.pick(moving), impact[moving]  # type: ignore[arg-type]
         if len(boxes) == 0:
             break
         if time.monotonic() > deadline:

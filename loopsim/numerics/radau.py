@@ -99,7 +99,7 @@ def tableau(stages: int) -> Tableau:
     return Tableau(
         nodes=np.asarray(c, dtype=np.float64),
         A=A,
-        A_inverse=np.linalg.inv(A),
+        A_inverse=np.linalg.inv(A),  # type: ignore[arg-type]
         transform=np.ascontiguousarray(transform),
         inverse=np.linalg.inv(transform),
         order_real=gamma,
@@ -166,7 +166,7 @@ class Equations:
         """A^-1 x C of all stages together, row by row."""
         stages = len(method.nodes)
         if stages not in self.stage_masses:
-            self.stage_masses[stages] = np.kron(method.A_inverse, self.mass.reshape(self.n, self.n)).ravel()
+            self.stage_masses[stages] = np.kron(method.A_inverse, self.mass.reshape(self.n, self.n)).ravel()  # type: ignore[assignment]
         return self.stage_masses[stages]
 
 
@@ -440,7 +440,7 @@ def integrate(
         if outcome not in (kernel.FULL, kernel.PIVOT):
             break
     joined = records[0] if len(records) == 1 else tuple(np.concatenate(parts) for parts in zip(*records, strict=True))
-    return Path(
+    return Path(  # type: ignore[misc]
         *joined,
         end=float(state[kernel.TIME]),
         end_x=x,

@@ -123,7 +123,7 @@ def advance(
             rejected_last = True
             counts[kernel.REJECTED] += 1
             continue
-        Z = _carried_on(polynomial, step / state[kernel.POLYNOMIAL_STEP], method.nodes) if state[kernel.POLYNOMIAL_STEP] > 0.0 else np.zeros((stages, n))
+        Z = _carried_on(polynomial, step / state[kernel.POLYNOMIAL_STEP], method.nodes) if state[kernel.POLYNOMIAL_STEP] > 0.0 else np.zeros((stages, n))  # noqa: E501
         P = method.inverse @ Z
         sources = np.array([source(time + c * step) for c in method.nodes])
         state[kernel.RATE] = max(state[kernel.RATE], 1e-16) ** 0.8
