@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from loopsim.analyses.results import States
     from loopsim.analyses.trace import Trace
     from loopsim.analyses.transient import Transient
+    from loopsim.requirements.outcomes import RequirementOutcome
 
 
 @dataclass(frozen=True, slots=True)
@@ -192,6 +193,12 @@ class Circuit:
         from loopsim.analyses.states import states
 
         return states(self, settings=lets, box=box, budget=budget)
+
+    def verify(self, *, box: float = 1e3, budget: float = 60.0, **lets: Any) -> tuple[RequirementOutcome, ...]:
+        """What became of every requirement, in order; see `loopsim.requirements.verify.verify`."""
+        from loopsim.requirements.verify import verify
+
+        return verify(self, lets, box=box, budget=budget)
 
     def transient(
         self,

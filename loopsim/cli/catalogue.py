@@ -106,7 +106,19 @@ TIDY = Verb(
     "loopsim.cli.tidy:run",
 )
 
-VERBS = {verb.name: verb for verb in (STATES, TRANSIENT, CYCLE, INSPECT, TIDY)}
+VERIFY = Verb(
+    "verify",
+    "PATH...",
+    "every requirement of every circuit below PATH",
+    (
+        ("loopsim verify circuits", "a line for each requirement, worst first"),
+        ("loopsim verify circuits --junit report.xml", "and a report for a CI server"),
+    ),
+    (JSON, Option("--junit", "FILE", "write a JUnit report to FILE"), BOX, BUDGET),
+    "loopsim.cli.verify:run",
+)
+
+VERBS = {verb.name: verb for verb in (STATES, TRANSIENT, CYCLE, VERIFY, INSPECT, TIDY)}
 
 # Named in the design, not built yet: asked for, they get an answer that says so.
 PLANNED = {
