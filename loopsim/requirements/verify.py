@@ -9,14 +9,16 @@ from dataclasses import dataclass, field
 
 from loopsim.analyses.results import State, States
 from loopsim.analyses.states import states
+from loopsim.analyses.trace import trace
 from loopsim.circuit import Circuit, Relation, Requirement
 from loopsim.equations.assemble import parameter_values
 from loopsim.errors import AnalysisError
-from loopsim.expressions import evaluate
+from loopsim.expressions import NetRef, evaluate
 from loopsim.requirements.outcomes import RANK, RequirementOutcome
 
 Limits = tuple[tuple[float | None, float | None], ...]
 COUNTS = {"states": (True, False, None), "stable states": (True,), "unstable states": (False,)}
+JUMPS = {"rising threshold": "rising", "falling threshold": "falling", "hysteresis": "hysteresis"}
 SERVED = (*COUNTS, "values", "growth rate", "damping")
 
 
@@ -110,6 +112,8 @@ def within(value: float, limits: tuple[float | None, float | None], form: str) -
 def _at(runs: Runs, requirement: Requirement, settings: Mapping[str, float]) -> Judged:
     if requirement.over_tolerances:
         return Judged("undecided", note="over tolerances: not measured yet")
+    if requirement.measure in JUMPS:
+        return _jump(runs, requirement, settings)
     if requirement.measure not in SERVED:
         return Judged("undecided", note=f"{requirement.measure}: not measured yet")
     values = parameter_values(runs.circuit, settings)
@@ -121,6 +125,26 @@ def _at(runs: Runs, requirement: Requirement, settings: Mapping[str, float]) -> 
     if requirement.measure in COUNTS:
         return count(found, requirement, limits)
     return _each(found, requirement, limits, values)
+
+
+def _jump(runs: Runs, requirement: Requirement, settings: Mapping[str, float]) -> Judged:
+    """Where a net jumps; decided only where the trace is proved over its whole range."""
+    limits = limits_of(requirement.relation, parameter_values(runs.circuit, settings))
+    if requirement.along is None or not isinstance(requirement.target, NetRef):
+        return Judged("undecided", limits=limits, note=f"{requirement.measure}: only of a net along a let")
+    net, left = requirement.target_text, max(0.01, runs.deadline - time.monotonic())
+    try:
+        curve = trace(runs.circuit, requirement.along, watch=net, box=runs.box, budget=left, settings=settings)
+        value = getattr(curve.thresholds(net), JUMPS[requirement.measure])
+    except (AnalysisError, KeyError) as error:
+        return Judged("undecided", limits=limits, note=str(error))
+    measured = () if value is None else (value,)
+    if not curve.over_range:
+        return Judged("undecided", measured, limits, None, "the trace is not proved over its whole range")
+    if value is None:
+        return Judged("violated", measured, limits, None, f"{net} never jumps that way")
+    good = within(value, limits[0], requirement.relation.form)
+    return Judged("met" if good else "violated", measured, limits, room(value, limits[0]), "" if good else f"jumps at {value:.6g}")
 
 
 def count(found: States, requirement: Requirement, limits: Limits) -> Judged:
@@ -170,4 +194,4 @@ def _value(state: State, requirement: Requirement, values: Mapping[str, object])
     if requirement.measure == "damping":
         return state.damping
     assert requirement.target is not None
-    return float(evaluate(requirement.target, values, dict(state.nets)))  # type: ignore[arg-type]
+    return float(evaluate(requirement.target, values, dict(state.nets)))
