@@ -35,6 +35,8 @@ KEEP_ALL = 200  # unknowns up to which all are recorded, not only the watched ne
 SAME_STATE = 1e-3  # of the supplies: an end this close to a rest point is that rest point
 STATES_BUDGET = 20.0  # s for the list of states that the end is compared with
 TOLERANCE = 1e-5
+GROWTH_STEP = 0.5  # steps over the time constant of a growing motion that its growth is seen with
+WATCHED_STEPS = 100_000  # a run is repeated with such steps up to this many
 
 
 @dataclass(frozen=True, slots=True)
@@ -243,10 +245,19 @@ def transient(
         notes.append(note)
     plan = motion(system, x, duration, ramp_time)
     kept = [j for j, (kind, name) in enumerate(system.unknowns) if system.n <= KEEP_ALL or (kind == "net" and name in watched)]
-    path = plan.solve(
-        x, 0.0, duration, tolerance, kept=kept, max_step=min(max_step or np.inf, LONGEST_SHARE * duration),
-        progress=None if progress is None else lambda t: progress(t / duration),
-    )  # fmt: skip
+    longest = min(max_step or np.inf, LONGEST_SHARE * duration)
+    told = None if progress is None else lambda t: progress(t / duration)
+    path = plan.solve(x, 0.0, duration, tolerance, kept=kept, max_step=longest, progress=told)
+    left_alone = ramp_time == 0.0 and not nudge
+    growth = None if left_alone or path.outcome != 0 else _growth_at_rest(plan, path)
+    if growth is not None and duration * abs(growth) <= WATCHED_STEPS * GROWTH_STEP:
+        # long steps see what grows as dying away: look again with steps short enough for it
+        path = plan.solve(
+            x, 0.0, duration, tolerance, kept=kept, max_step=min(longest, GROWTH_STEP / abs(growth)), progress=told
+        )  # fmt: skip
+        growth = _growth_at_rest(plan, path) if path.outcome == 0 else None
+    if growth is not None:
+        notes.append(f"the end is unstable ({growth.real:.3g} /s): nothing disturbed the run there; start elsewhere or nudge it")
     columns = {system.unknowns[j]: i for i, j in enumerate(kept)}
     nets = tuple(name for kind, name in columns if kind == "net")
     completed = path.outcome == 0
@@ -367,6 +378,17 @@ def _end(
     if again is not None and not _driven(system, path.end):
         return f"oscillates with a period of {again:.6g} s", None, ""
     return "still moving", None, ""
+
+
+def _growth_at_rest(plan: Motion, path: Path) -> complex | None:
+    """The fastest growing eigenvalue [1/s] where the run came to rest, or None where it did not or nothing grows."""
+    system = plan.system
+    rest = newton(system, path.end_x, plan.source(path.end))
+    nets = np.array([kind == "net" for kind, _ in system.unknowns])
+    if rest is None or np.max(np.abs(rest - path.end_x)[nets], initial=0.0) > SAME_STATE * plan.volts:
+        return None
+    found = growing_direction(system, rest)
+    return None if found is None else found[0]
 
 
 def _kept_unknowns(system: System, path: Path) -> list[tuple[str, str]]:

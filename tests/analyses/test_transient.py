@@ -195,3 +195,19 @@ def test_a_result_prints_as_an_answer_and_as_data() -> None:
 def test_a_table_has_equal_steps() -> None:
     times, nets = charging().transient(1e-3).table(11)
     assert np.allclose(np.diff(times), 1e-4) and set(nets) == {"feed", "out"} and len(nets["out"]) == 11
+
+
+def test_a_run_does_not_rest_on_an_unstable_point_because_its_steps_are_long() -> None:
+    # in long steps the growth of a tuned circuit with a negative conductance would look like a decay
+    b = CircuitBuilder("beacon")
+    b.chain("gnd", "bias", "feed", device="voltage_source", voltage=0.21)
+    b.chain("feed", "r", "tap", device="resistor", resistance=10.0)
+    b.chain("tap", "l", "top", device="inductor", inductance=1e-6)
+    b.chain("top", "c", "gnd", device="capacitor", capacitance=1e-9)
+    curve = b.curve("falling", "polynomial", [45e-3, -305e-3, 540e-3])
+    b.chain("top", "d", "gnd", device="curve_conductance", curve=curve)
+    run = b.circuit().transient(0.5e-3)
+    assert run.end.startswith("oscillates")
+    # ten times as long it would be too many steps: then the run says what it did not see
+    longer = b.circuit().transient(50e-3)
+    assert longer.end.startswith("oscillates") or any("unstable" in note for note in longer.notes)
