@@ -14,7 +14,8 @@ sksundae = pytest.importorskip("sksundae")
 ROOT = Path(__file__).parents[2]
 FILES = sorted(path for path in (ROOT / "circuits").glob("*/*.loop") if path.parent.name != "parts")
 DURATION, RAMP = 20e-6, 10e-6
-SYMMETRIC = {"cistern_blinker", "tide_tone", "frost_alarm", "float_switch", "hive_flag", "hive_ring"}  # which side they fall to is rounding's choice
+# which side these fall to is rounding's choice
+SYMMETRIC = {"cistern_blinker", "tide_tone", "frost_alarm", "float_switch", "hive_flag", "hive_ring"}
 
 
 @pytest.mark.slow
