@@ -65,6 +65,15 @@ def test_transient_and_cycle_answer_by_their_schema(capsys: pytest.CaptureFixtur
     assert document["verdict"] == "no cycle"
 
 
+def test_trace_answers_by_its_schema(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    bench = tmp_path / "bench.csv"
+    bench.write_text("4.5, 0.02\n", encoding="utf-8")
+    words = ["trace", str(ROOT / "circuits/comparators/cistern_pump.loop"), "--along", "level", "--over", "4V..6V", "--stations", "1"]
+    document = answer([*words, "--overlay", str(bench)], capsys)
+    jsonschema.validate(document, schema("trace"), cls=jsonschema.Draft202012Validator)
+    assert len(document["folds"]) == 1 and document["overlay"]["points"] == 1
+
+
 def test_a_schema_refuses_what_it_should(capsys: pytest.CaptureFixture[str]) -> None:
     document = answer(["states", str(ROOT / "circuits/comparators/cistern_pump.loop")], capsys)
     found = schema("states")

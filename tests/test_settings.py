@@ -73,4 +73,4 @@ def test_what_cannot_be_is_said(name: str, text: str, said: str) -> None:
 
 def test_the_last_of_several_settings_of_one_let_counts() -> None:
     assert settings(CIRCUIT, [("level", "1 V"), ("level", "2 V")]) == {"level": 2.0}
-    assert let_value("2 V", CIRCUIT.parameters["level"]) == 2.0
+    assert let_value("2 V", CIRCUIT.parameters["level"], "--over ") == 2.0

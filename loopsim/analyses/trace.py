@@ -65,6 +65,8 @@ class Branch:
             "values": self.values.tolist(),
             "nets": {net: self.nets[net].tolist() for net in watch if net in self.nets},
             "stable": list(self.stable),
+            "arclength": self.lengths.tolist(),
+            "closed": self.closed,
         }
 
 
@@ -175,13 +177,40 @@ class Trace:
         """Where a net jumps; KeyError for a net the circuit has not."""
         return self.per_net[net]
 
+    def plot(self, path: str, nets: Sequence[str] = (), *, versus: str | None = None, overlay: Any = None) -> None:
+        """Draw the nets (the watched ones) over the let, or over the net `versus`, into a file; the suffix decides: svg, png, pdf.
+
+        overlay: measured points, as `loopsim.output.overlay.read_overlay` gives them. MissingExtra without matplotlib.
+        """
+        from loopsim.output.plots_trace import plot_trace
+
+        plot_trace(self, path, tuple(nets), versus, overlay)
+
+    def to_dataframe(self) -> Any:
+        """One row a point: branch, arclength, the let, stable, then every net [V]. Needs pandas."""
+        from loopsim.output.frames import trace_frame
+
+        return trace_frame(self)
+
     def __repr__(self) -> str:
         return f"Trace({self.circuit} along {self.along}: {len(self.branches)} branches, {len(self.folds)} folds)"
+
+    def __str__(self) -> str:
+        """The answer as `loopsim trace` prints it."""
+        from loopsim.output.trace_text import trace_text
+
+        return trace_text(self).rstrip("\n")
+
+    def _repr_html_(self) -> str:
+        from html import escape
+
+        return f"<pre>{escape(str(self))}</pre>"
 
     def to_dict(self) -> dict[str, Any]:
         """The JSON form, without the frame that every verb shares."""
         return {
             "along": self.along,
+            "unit": self.unit,
             "range": [self.low, self.high],
             "branches": [branch.to_dict(self.watch) for branch in self.branches],
             "folds": [found.to_dict() for found in self.folds],

@@ -34,6 +34,34 @@ STATES = Verb(
     "complete: proved that there are no others within the box. found: search only. undecided: places left over.",
 )
 
+TRACE = Verb(
+    "trace",
+    "FILE",
+    "the whole static characteristic through its folds, and where it jumps",
+    (
+        ("loopsim trace circuits/comparators/cistern_pump.loop --along level", "folds, thresholds, hysteresis"),
+        ("loopsim trace cistern_pump.loop --along level --over 3V..6V --watch out,plus", "part of the range, two nets"),
+        ("loopsim trace cistern_pump.loop --along level --plot curve.svg", "drawn: solid stable, dashed unstable"),
+        ("loopsim trace cistern_pump.loop --along level --overlay bench.csv", "how far measured points lie from it"),
+    ),
+    (
+        Option("--along", "LET", "the let that moves: a source, a value, a field, `ambient`"),
+        Option("--over", "LO..HI", "its range (the one the file gives with `in`)", values.span),
+        WATCH,
+        Option("--versus", "NET", "draw the watched nets over this net instead of over the let"),
+        Option("--overlay", "FILE", "measured points, let and net in two columns: draws them, tells the largest distance"),
+        Option("--stations", "N", "values between the ends at which every state is proved (9)", values.whole),
+        SET,
+        JSON,
+        CSV,
+        PLOT,
+        BOX,
+        BUDGET,
+    ),
+    "loopsim.cli.trace:run",
+    "complete over the range: proved for every value of the let. complete at N stations: proved there, found between them.",
+)
+
 START = Option("--start", "START", "off (supplies come up), the letter of a state, or net=volts,... (off)", values.start)
 NUDGE = Option("--nudge", "VOLTS", "leave the start along its fastest growth; the sign chooses the side", values.volts)
 TOLERANCE = Option("--tolerance", "SHARE", "wanted error over amplitude (1e-5, a cycle 1e-8)", values.share)
@@ -118,7 +146,7 @@ VERIFY = Verb(
     "loopsim.cli.verify:run",
 )
 
-VERBS = {verb.name: verb for verb in (STATES, TRANSIENT, CYCLE, VERIFY, INSPECT, TIDY)}
+VERBS = {verb.name: verb for verb in (STATES, TRACE, TRANSIENT, CYCLE, VERIFY, INSPECT, TIDY)}
 
 # Named in the design, not built yet: asked for, they get an answer that says so.
 PLANNED = {

@@ -64,27 +64,30 @@ def read_circuit(path: str) -> Circuit:
     return load(path)
 
 
-
-
 def settings(circuit: Circuit, pairs: Sequence[tuple[str, str]]) -> dict[str, float]:
     """The values of `--set` words [SI; degC for `ambient`]; CircuitError for an unknown let or a value that it cannot have."""
     found: dict[str, float] = {}
     for name, text in pairs:
         parameter = circuit.parameters.get(name)
         if parameter is None:
-            lets = [known for known in circuit.parameters if "." not in known]
-            hint = nearest(name, circuit.parameters) or f"its lets: {', '.join(lets)}"
-            raise CircuitError("unknown-let", f"{circuit.name} has no let `{name}`", hint=hint)
-        found[name] = let_value(text, parameter)
+            raise unknown_let(circuit, name)
+        found[name] = let_value(text, parameter, f"--set {name}=")
     return found
 
 
-def let_value(text: str, parameter: Parameter) -> float:
+def unknown_let(circuit: Circuit, name: str) -> CircuitError:
+    """The mistake of naming a let that the circuit has not, with the nearest one or all of them."""
+    lets = [known for known in circuit.parameters if "." not in known]
+    hint = nearest(name, circuit.parameters) or f"its lets: {', '.join(lets)}"
+    return CircuitError("unknown-let", f"{circuit.name} has no let `{name}`", hint=hint)
+
+
+def let_value(text: str, parameter: Parameter, option: str) -> float:
     """A value as the language reads it (4.5V, 4K7, 60degC) for a let [SI; degC for a temperature]; a bare number is in the
-    unit of the let."""
+    unit of the let. option: what stands before the text on the command line, for messages."""
     from loopsim.units import CODE_PATTERN, NUMBER, code, dimension_of, name_of, quantity
 
-    said = f"--set {parameter.name}={text}"
+    said = f"{option}{text}"
     body = text.strip().lstrip("+-").strip()
     sign = -1.0 if text.strip().startswith("-") else 1.0
     try:

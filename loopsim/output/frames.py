@@ -9,6 +9,7 @@ from loopsim.errors import LoopsimError
 
 if TYPE_CHECKING:
     from loopsim.analyses.results import States
+    from loopsim.analyses.trace import Trace
 
 
 def _pandas() -> Any:
@@ -31,3 +32,21 @@ def states_frame(points: States) -> Any:
         for state in points
     ]
     return _pandas().DataFrame(rows, index=[state.name for state in points])
+
+
+def trace_frame(curve: Trace) -> Any:
+    """One row a point of the curve: branch (from 1), arclength, the let, stable (True, False or None), then every net [V]."""
+    pandas = _pandas()
+    parts = [
+        pandas.DataFrame(
+            {
+                "branch": number,
+                "arclength": branch.lengths,
+                curve.along: branch.values,
+                "stable": pandas.array(branch.stable, dtype=object),
+                **branch.nets,
+            }
+        )
+        for number, branch in enumerate(curve.branches, 1)
+    ]
+    return pandas.concat(parts, ignore_index=True) if parts else pandas.DataFrame()

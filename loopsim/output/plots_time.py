@@ -1,29 +1,22 @@
-"""Pictures of what moves in time: one panel a net, one time axis for all, crossings and states marked.
-
-Colours are our own set, told apart by eyes of every kind and in grey: dark blue, ochre, green-blue, red-violet, grey.
-"""
+"""Pictures of what moves in time: one panel a net, one time axis for all, crossings and states marked."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from loopsim.errors import AnalysisError, MissingExtra
+from loopsim.errors import AnalysisError
 from loopsim.output.engineering import engineering
+from loopsim.output.pictures import COLOURS, PALE, axis_scale, new_figure, quiet, save
 
 if TYPE_CHECKING:
     from loopsim.analyses.cycle import Cycle
     from loopsim.analyses.transient import Transient
 
-COLOURS = ("#1b3a6b", "#b8860b", "#2a7f79", "#8e2f5c", "#5f6368")
-PALE = "#9aa0a6"
 PANELS = 8  # nets in one picture; more would be too low to read
-SUFFIXES = ("svg", "png", "pdf")
-SCALES = ((1.0, "s"), (1e-3, "ms"), (1e-6, "us"), (1e-9, "ns"), (1e-12, "ps"))
 
 
 def plot_transient(run: Transient, path: str, nets: Sequence[str] = (), levels: Sequence[tuple[str, float, str]] = ()) -> None:
@@ -48,7 +41,7 @@ def plot_transient(run: Transient, path: str, nets: Sequence[str] = (), levels: 
             panel.axvline(float(times[-1]) / scale, color=COLOURS[3], linewidth=1.0, linestyle=(0, (1, 2)))
     panels[-1].set_xlabel(f"time in {unit}")
     panels[-1].set_xlim(float(times[0]) / scale, (float(times[-1]) if not run.completed else run.duration) / scale)
-    _save(figure, path)
+    save(figure, path)
 
 
 def plot_cycle(found: Cycle, path: str, nets: Sequence[str] = ()) -> None:
@@ -68,7 +61,7 @@ def plot_cycle(found: Cycle, path: str, nets: Sequence[str] = ()) -> None:
         _label(panel, net, twice)
     panels[-1].set_xlabel(f"time in {unit}")
     panels[-1].set_xlim(0.0, 2.0 * found.period / scale)
-    _save(figure, path)
+    save(figure, path)
 
 
 def _refined(times: NDArray[np.float64], parts: int = 6) -> NDArray[np.float64]:
@@ -85,27 +78,16 @@ def _chosen(wanted: Sequence[str], known: Sequence[str]) -> list[str]:
 
 
 def _time_scale(longest: float) -> tuple[float, str]:
-    for scale, unit in SCALES:
-        if longest >= 0.9 * scale:
-            return scale, unit
-    return SCALES[-1]
+    return axis_scale(min(longest, 999.0), "s")  # thousands of seconds are still seconds
 
 
 def _panels(count: int, title: str) -> tuple[Any, list[Any]]:
-    """A figure with `count` panels over one time axis. Nothing global is touched: no pyplot, no style file."""
-    try:
-        from matplotlib.backends.backend_agg import FigureCanvasAgg
-        from matplotlib.figure import Figure
-    except ImportError:
-        raise MissingExtra("plot", "a plot") from None
-    figure = Figure(figsize=(8.0, 1.2 + 1.5 * max(count, 1)), layout="constrained")
-    FigureCanvasAgg(figure)
+    """A figure with `count` panels over one time axis."""
+    figure = new_figure(8.0, 1.2 + 1.5 * max(count, 1))
     panels = list(figure.subplots(count, 1, sharex=True, squeeze=False)[:, 0])
     panels[0].set_title(title, loc="left", fontsize=10)
     for panel in panels:
-        panel.spines[["top", "right"]].set_visible(False)
-        panel.grid(visible=True, color="#e6e8ea", linewidth=0.6)
-        panel.tick_params(labelsize=8)
+        quiet(panel)
     return figure, panels
 
 
@@ -116,12 +98,3 @@ def _label(panel: Any, net: str, values: NDArray[np.float64]) -> None:
     panel.set_ylim(low - room, high + room)
     panel.set_ylabel(f"{net}\nin V", fontsize=9)
     panel.ticklabel_format(axis="y", useOffset=False)
-
-
-def _save(figure: Any, path: str) -> None:
-    suffix = Path(path).suffix.lower().removeprefix(".")
-    if suffix not in SUFFIXES:
-        raise AnalysisError("plot-suffix", f"no picture is written to {path}", hint=f"use one of {', '.join('.' + s for s in SUFFIXES)}")
-    # the date would make equal pictures differ
-    metadata = {"svg": {"Date": None}, "pdf": {"CreationDate": None}}.get(suffix, {})
-    figure.savefig(path, format=suffix, dpi=150, metadata=metadata)
