@@ -24,7 +24,10 @@ DIFFERENCE = 6e-6  # of the range: cube root of the unit roundoff, where a centr
 
 @dataclass(eq=False)
 class Family:
-    """circuit and settings with `let` free in [low, high] [its SI unit]. Serves as the `CurveEquations` of numerics.curve."""
+    """circuit and settings with `let` free in [low, high] [its SI unit]. Serves as the `CurveEquations` of numerics.curve.
+
+    affine: the let moves sources alone, s = base_sources + (level - low) rise, (n,) each; rise is 0 for any other let.
+    """
 
     circuit: Circuit
     settings: Mapping[str, Any]
@@ -32,15 +35,19 @@ class Family:
     low: float
     high: float
     affine: bool = field(init=False)
+    base_sources: Array = field(init=False)
+    rise: Array = field(init=False)
 
     def __post_init__(self) -> None:
         self.affine = is_affine(self.circuit, self.let)
         self._kept: dict[float, System] = {}
         first = self._assembled(self.low)
+        self._base = first
+        self.base_sources = first.s
+        self.rise = np.zeros_like(first.s)
         if self.affine:
             second = self._assembled(self.high)
-            self._base = first
-            self._rise = (second.s - first.s) / (self.high - self.low)
+            self.rise = (second.s - first.s) / (self.high - self.low)
             self._supply_rise = (second.supply - first.supply) / (self.high - self.low)
 
     def _assembled(self, level: float) -> System:
@@ -54,7 +61,7 @@ class Family:
                 shift = level - self.low
                 kept = replace(
                     self._base,
-                    s=self._base.s + shift * self._rise,
+                    s=self._base.s + shift * self.rise,
                     supply=self._base.supply + shift * self._supply_rise,
                 )
             else:
@@ -67,7 +74,7 @@ class Family:
     def residual(self, x: Array, level: float) -> Array:
         """F: (n,)."""
         if self.affine:
-            return self._base.residual(x, self._base.s + (level - self.low) * self._rise)
+            return self._base.residual(x, self._base.s + (level - self.low) * self.rise)
         return self.system(level).residual(x)
 
     def jacobian(self, x: Array, level: float) -> Array:
@@ -77,7 +84,7 @@ class Family:
     def slope(self, x: Array, level: float) -> Array:
         """dF/dlet: (n,)."""
         if self.affine:
-            return -self._rise
+            return -self.rise
         h = DIFFERENCE * (self.high - self.low)
         return (self._assembled(level + h).residual(x) - self._assembled(level - h).residual(x)) / (2.0 * h)
 
@@ -93,11 +100,3 @@ class Family:
         return (self._assembled(level + h).jacobian(x) @ v - self._assembled(level - h).jacobian(x) @ v) / (
             2.0 * h
         )
-
-    def source_interval(self, low: float, high: float) -> tuple[System, Array]:
-        """The system in the middle of [low, high] and the half width of s over it, for an affine let: (System, (n,))."""
-        middle = 0.5 * (low + high)
-        half = max(high - middle, middle - low) * (1.0 + 1e-12)
-        return self.system(middle), np.abs(self._rise) * half * (1.0 + 1e-12) + np.abs(
-            self._base.s
-        ) * 1e-15 * (self._rise != 0.0)

@@ -11,6 +11,7 @@ matrix over the box (A. Neumaier, Interval Methods for Systems of Equations, 199
 from __future__ import annotations
 
 import time
+from copy import copy
 from dataclasses import dataclass, field
 from functools import cached_property
 from itertools import pairwise
@@ -136,6 +137,13 @@ class Problem:
             centre = middle(low, high)
             found += [centre, np.where(low == high, 0.0, radius(low, high, centre))]
         return tuple(found)  # type: ignore[return-value]
+
+    def with_sources(self, s: Array, s_rad: Array) -> Problem:
+        """The same equations with centre and radius of s given box by box, (b, n) each, for `relax`, `newton_points` and `certify`; what
+        was worked out for the equations is shared. `hull` and `nodal` go on using s_low and s_high, which have to hold every box's s."""
+        other = copy(self)
+        other.__dict__["centres"] = (*self.centres[:4], s, s_rad)
+        return other
 
     @cached_property
     def magnitudes(self) -> tuple[Array, Array, Array, Array]:
@@ -589,10 +597,11 @@ def slices(low: Array, high: Array, pieces: int) -> Array:
 @dataclass(frozen=True, eq=False)
 class Relaxed:
     """What a linear relaxation leaves behind for the choice of a split. impact: (b, m) share of the widths that each row's chord error
-    makes."""
+    makes; inverse: (b, n, n) of the matrix of chords, approximate."""
 
     boxes: Boxes
     impact: Array
+    inverse: Array
 
 
 def invert(matrices: Array) -> Array:
@@ -710,7 +719,7 @@ def relax(problem: Problem, boxes: Boxes) -> Relaxed:
     high[:, at.w] = np.where(proved, np.minimum(w_high, up(wm + dw + w_rad)), w_high)
     width = np.maximum(w_high - w_low, TINY)
     impact = np.max(np.abs(w_through) / width[:, :, None], axis=1) * inner_rad
-    return Relaxed(Boxes(low, high), np.nan_to_num(impact, nan=0.0, posinf=HUGE))
+    return Relaxed(Boxes(low, high), np.nan_to_num(impact, nan=0.0, posinf=HUGE), inverse)
 
 
 def injective(problem: Problem, boxes: Boxes) -> NDArray[np.bool_]:
@@ -939,11 +948,11 @@ def search(
             if time.monotonic() > deadline or state.boxes > max_boxes or len(state.clusters) > MAX_CLUSTERS:
                 ended = True
                 break
-            batch = _take(queue)
+            batch = take(queue)
             queue.extend(_round(state, batch, deadline))
-    left = [_ends(problem, part) for part in queue] if ended else []
-    x, spread, doubtful = _distinct(problem, state.points)
-    clusters = [_ends(problem, part) for part in state.clusters] + doubtful
+    left = [ends(problem, part) for part in queue] if ended else []
+    x, spread, doubtful = distinct(problem, state.points)
+    clusters = [ends(problem, part) for part in state.clusters] + doubtful
     n = problem.n
     return Found(
         x,
@@ -955,7 +964,7 @@ def search(
     )
 
 
-def _damped_points(problem: Problem, start: Array) -> Array:
+def damped_points(problem: Problem, start: Array) -> Array:
     """Damped Newton from each start, for boxes proved one to one on which plain Newton did not settle. (b, n), NaN-free."""
     c, _, d, _, s, _ = problem.centres
     has_product = len(problem.product) > 0
@@ -978,7 +987,7 @@ def _damped_points(problem: Problem, start: Array) -> Array:
     return newton(residual, jacobian, start).x
 
 
-def _take(queue: list[Boxes]) -> Boxes:
+def take(queue: list[Boxes]) -> Boxes:
     """Up to BATCH boxes from the end of the queue."""
     taken: list[Boxes] = []
     count = 0
@@ -993,7 +1002,7 @@ def _take(queue: list[Boxes]) -> Boxes:
     return stack(taken)
 
 
-def _ends(problem: Problem, boxes: Boxes) -> Array:
+def ends(problem: Problem, boxes: Boxes) -> Array:
     """(b, 2, n) the x part of boxes."""
     return np.stack([boxes.low[:, problem.layout.x], boxes.high[:, problem.layout.x]], axis=1)
 
@@ -1032,7 +1041,7 @@ def _round(state: _Search, boxes: Boxes, deadline: float) -> list[Boxes]:
     boxes, impact = stack(settled), np.concatenate(impacts)
     rest = _settle(state, boxes)
     boxes, impact = boxes.pick(rest), impact[rest]
-    return [_split(problem, boxes, impact)] if len(boxes) else []
+    return [split(problem, boxes, impact)] if len(boxes) else []
 
 
 def narrow(problem: Problem, boxes: Boxes) -> tuple[Boxes, Array, Index]:
@@ -1068,10 +1077,10 @@ def _settle(state: _Search, boxes: Boxes) -> NDArray[np.bool_]:
             points = np.where(
                 certified.good[:, None],
                 points,
-                _damped_points(problem, middle(part.low[:, at.x], part.high[:, at.x])),
+                damped_points(problem, middle(part.low[:, at.x], part.high[:, at.x])),
             )
             certified = certify(problem, points)
-        joined = _join(part, start_points(problem, certified.x, certified.spread))
+        joined = join(part, start_points(problem, certified.x, certified.spread))
         # one to one over the hull of the box and the point: the point is the only solution either holds
         closed = certified.good & injective(problem, joined)
         for i in np.flatnonzero(closed):
@@ -1097,12 +1106,12 @@ def _outside(boxes: Boxes, region: Boxes, n: int) -> NDArray[np.bool_]:
     )
 
 
-def _join(a: Boxes, b: Boxes) -> Boxes:
+def join(a: Boxes, b: Boxes) -> Boxes:
     """Hull of two batches, box by box."""
     return Boxes(np.minimum(a.low, b.low), np.maximum(a.high, b.high))
 
 
-def _split(problem: Problem, boxes: Boxes, impact: Array) -> Boxes:
+def split(problem: Problem, boxes: Boxes, impact: Array) -> Boxes:
     """Each box in two across the unknown that carries the most chord error: the sum over its rows of their impact times its share of
     their width. Where the leading row moves with that unknown alone, the cut is where its chord error is largest, else the middle.
 
@@ -1142,7 +1151,7 @@ def _split(problem: Problem, boxes: Boxes, impact: Array) -> Boxes:
     return stack([one, two])
 
 
-def _distinct(problem: Problem, points: list[tuple[Array, Array]]) -> tuple[Array, Array, list[Array]]:
+def distinct(problem: Problem, points: list[tuple[Array, Array]]) -> tuple[Array, Array, list[Array]]:
     """The different solutions among certified points; pairs that overlap without a proof of being one are returned as doubtful boxes."""
     n = problem.n
     if not points:
@@ -1163,12 +1172,12 @@ def _distinct(problem: Problem, points: list[tuple[Array, Array]]) -> tuple[Arra
             if np.all(np.abs(x[i] - x[k]) <= (spread[i] + spread[k]) * (1.0 + 1e-12)):
                 near.append(k)
         for k in near:
-            pair = _join(
+            pair = join(
                 start_points(problem, x[i][None], spread[i][None]),
                 start_points(problem, x[k][None], spread[k][None]),
             )
             if not injective(problem, pair)[0]:
-                doubtful.append(_ends(problem, pair))
+                doubtful.append(ends(problem, pair))
         if not near:
             kept.append(int(i))
     return x[kept], spread[kept], doubtful
