@@ -194,11 +194,13 @@ class Circuit:
 
         return states(self, settings=lets, box=box, budget=budget)
 
-    def verify(self, *, box: float = 1e3, budget: float = 60.0, **lets: Any) -> tuple[RequirementOutcome, ...]:
+    def verify(
+        self, *, box: float = 1e3, budget: float = 60.0, require_proof: bool = False, **lets: Any
+    ) -> tuple[RequirementOutcome, ...]:
         """What became of every requirement, in order; see `loopsim.requirements.verify.verify`."""
         from loopsim.requirements.verify import verify
 
-        return verify(self, lets, box=box, budget=budget)
+        return verify(self, lets, box=box, budget=budget, require_proof=require_proof)
 
     def transient(
         self,

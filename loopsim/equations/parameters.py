@@ -132,7 +132,7 @@ def number(
         return values[tree.name]
     try:
         with np.errstate(all="ignore"):
-            value = evaluate(tree, values, operations=_operations(values, curves))
+            value = evaluate(tree, values, operations=formula_operations(values, curves))
     except (ZeroDivisionError, OverflowError, ValueError):
         value = math.nan
     except KeyError as missing:
@@ -154,7 +154,8 @@ def is_finite(value: Any) -> bool:
     return not isinstance(value, np.ndarray | np.generic) or bool(np.all(np.isfinite(value)))
 
 
-def _operations(values: Mapping[str, Scalar], curves: Mapping[str, Curve]) -> Mapping[str, Any]:
+def formula_operations(values: Mapping[str, Scalar], curves: Mapping[str, Curve]) -> Mapping[str, Any]:
+    """What `evaluate` needs beside the values: `limit`, and every curve with its numbers put in."""
     def apply_curve(name: str, x: Scalar) -> Scalar:
         found = curve_values(curves[name], values, curves)
         return VALUE[found.kind](x, found.parameters)

@@ -14,7 +14,7 @@ class RequirementOutcome:
 
     measured: values [SI], sorted; limits: (low, high) of each target [SI], None where open; margin: distance to the nearest limit [SI],
     negative where violated, None where it has none; seconds: wall time; note: where it went wrong or why it is undecided;
-    file, line: of its `expect`.
+    file, line: of its `expect`; proof: what a met or violated one rests on (`loopsim.requirements.proof`), empty where undecided.
     """
 
     circuit: str
@@ -28,6 +28,7 @@ class RequirementOutcome:
     note: str = ""
     file: str | None = None
     line: int | None = None
+    proof: str = ""
 
     def to_dict(self) -> dict[str, Any]:
         """The JSON form."""
@@ -41,4 +42,5 @@ class RequirementOutcome:
             "margin": self.margin,
             "seconds": self.seconds,
             "note": self.note,
+            "proof": self.proof,
         }

@@ -6,7 +6,9 @@ from dataclasses import replace
 import loopsim
 from loopsim.analyses.states import states
 from loopsim.output.junit import junit_text
-from loopsim.requirements.verify import count, limits_of, verify
+from loopsim.requirements.counts import count
+from loopsim.requirements.limits import limits_of
+from loopsim.requirements.verify import verify
 
 FILE = "circuits/comparators/cistern_pump.loop"
 
