@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from loopsim.analyses.cycle import Cycle
     from loopsim.analyses.results import States
     from loopsim.analyses.trace import Trace
+    from loopsim.analyses.trip_points import TripPoints
     from loopsim.analyses.transient import Transient
     from loopsim.requirements.outcomes import RequirementOutcome
 
@@ -187,6 +188,13 @@ class Circuit:
             range_budget=range_budget,
             settings=lets,
         )
+
+    def trip_points(self, along: str, *, samples: Any = 1000, seed: int = 0, over: tuple[float, float] | None = None, watch: Any = None,
+                    nominal: Trace | None = None, **lets: Any) -> TripPoints:  # fmt: skip
+        """Where the folds along a let lie for many samples of the parts; see `loopsim.analyses.trip_points.trip_points`."""
+        from loopsim.analyses.trip_points import trip_points
+
+        return trip_points(self, along, samples=samples, seed=seed, over=over, watch=watch, nominal=nominal, settings=lets)
 
     def states(self, *, box: float = 1e3, budget: float = 60.0, **lets: Any) -> States:
         """Every DC operating point with the named lets set [SI]; see `loopsim.analyses.states.states`."""

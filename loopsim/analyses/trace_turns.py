@@ -21,6 +21,7 @@ Array: TypeAlias = NDArray[np.float64]
 
 PAST = 1e-7  # of the range: how far past a fold the landing is looked for
 MEETING = 0.02  # of the picture: half a step of the curve, within which a turn and a branch point are one
+SAME_PLACE = 1e-5  # of the range: a fold this near to a branch point is that point
 SETTLE_STEPS = 400
 FIRST_STEP = 1e-12  # [s] below the fastest time of any shipped circuit
 ARRIVED = 1e-4  # of a net's travel: so near to a stable state, and nearing it, the rest of the way is known
@@ -40,8 +41,11 @@ def folds(
             before, after = (i - 1, i + 1) if i else (len(branch.values) - 2, 1)
             here, level = branch.x[i], float(branch.values[i])
             point = fold(family, family.bend, family.slope_along, here, level, branch.x[after] - branch.x[before], scale)
+            meeting = [other for other in branch_points if _meets(branch, i, other, index, scale)]
+            if point is not None and any(abs(point.level - other.at) < SAME_PLACE * scale[-1] for other in meeting):
+                continue
             if point is None or abs(point.level - level) > 0.1 * scale[-1]:
-                if any(_meets(branch, i, other, index, scale) for other in branch_points):
+                if meeting:
                     continue
                 lost.append(f"the turn of branch {number + 1} near {level:.6g} could not be located")
                 continue
@@ -165,8 +169,14 @@ def _locate(
     for _ in range(80):
         # false position, kept inside by bisection (Illinois rule)
         middle = 0.5 * (lo + hi) if _ % 3 == 2 else lo + (hi - lo) * growth_lo / (growth_lo - growth_hi)
-        x = at(family, x_lo + (x_hi - x_lo) * (middle - lo) / (hi - lo), middle)
+        between = x_lo + (x_hi - x_lo) * (middle - lo) / (hi - lo)
+        x = at(family, between, middle)
         if x is None:
+            # where branches cross Newton has nothing to hold on to: the straight line between the neighbours is taken, and its growth
+            # says how near that is
+            growth = judge(family.system(middle), between[None])[0].growth_rate or 0.0
+            doubt = abs(growth) / (abs(growth_lo) + abs(growth_hi)) * abs(hi - lo)
+            lo, hi, x_lo = middle - 0.5 * doubt, middle + 0.5 * doubt, between
             break
         verdict = judge(family.system(middle), x[None])[0]
         growth = verdict.growth_rate or 0.0
