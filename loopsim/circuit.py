@@ -16,8 +16,8 @@ if TYPE_CHECKING:
     from loopsim.analyses.cycle import Cycle
     from loopsim.analyses.results import States
     from loopsim.analyses.trace import Trace
-    from loopsim.analyses.trip_points import TripPoints
     from loopsim.analyses.transient import Transient
+    from loopsim.analyses.trip_points import TripPoints
     from loopsim.requirements.outcomes import RequirementOutcome
 
 

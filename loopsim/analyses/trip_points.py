@@ -1,4 +1,4 @@
-"""Trip points over tolerances: where the folds of a characteristic lie for many samples of the parts at once, and how each value moves them.
+"""Trip points over tolerances: where the folds of a characteristic lie for many samples of the parts, and how each value moves them.
 
 The folds are found once, at the nominal values; then every sample's folds are solved together by Newton from there. A fold that only some
 samples have, or a new one, is not looked for: this moves known trip points, it does not prove that there are no others.
@@ -99,7 +99,8 @@ def trip_points(
     """
     fixed = {k: v for k, v in (settings or {}).items() if k != along}
     if not is_affine(circuit, along):
-        raise AnalysisError("not-a-source", f"`{along}` moves more than sources", hint="trip points are solved along a source; use trace for it")
+        hint = "trip points are solved along a source; use trace for it"
+        raise AnalysisError("not-a-source", f"`{along}` moves more than sources", hint=hint)
     curve = nominal or trace(circuit, along, over=over, watch=watch, range_budget=0.0, settings=fixed)
     if not curve.folds:
         raise AnalysisError("no-fold", f"{circuit.name} has no fold along `{along}`", hint="there is no trip point to move")
@@ -107,9 +108,8 @@ def trip_points(
     names = tuple(values)
     table = np.column_stack([values[name] for name in names]) if names else np.zeros((1, 0))
     rows = [_solved(circuit, curve, {**fixed, **dict(zip(names, part.T, strict=True))}, len(part)) for part in _parts(table)]
-    return TripPoints(
-        circuit.name, along, curve.unit, names, curve.folds, table, np.concatenate(rows), _sensitivities(circuit, curve, names, fixed), curve
-    )
+    slopes = _sensitivities(circuit, curve, names, fixed)
+    return TripPoints(circuit.name, along, curve.unit, names, curve.folds, table, np.concatenate(rows), slopes, curve)
 
 
 def _drawn(circuit: Circuit, count: int, seed: int, fixed: Mapping[str, Any]) -> dict[str, Array]:

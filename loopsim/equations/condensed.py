@@ -1,7 +1,7 @@
 """A system written in the arguments of its nonlinear rows alone: as many unknowns as rows, however many nets.
 
-With psi_k = phi_k(w_k) u_k - a_k w_k for a fixed a, the linear rest is solved once: x = Z (s - B (a c)) - Z B psi, Z = (G + B diag(a) W)^-1,
-and y = (w, u of the product rows) obeys y = p + l q - K psi(y).
+With psi_k = phi_k(w_k) u_k - a_k w_k for a fixed a, the linear rest is solved once: x = Z (s - B (a c)) - Z B psi,
+Z = (G + B diag(a) W)^-1, and y = (w, u of the product rows) obeys y = p + l q - K psi(y).
 """
 
 from __future__ import annotations
