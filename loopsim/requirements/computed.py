@@ -65,17 +65,28 @@ class Computed:
         )
 
     def trace(self, along: str, settings: Settings) -> Trace:
-        """The characteristic along a let over its own range, every net of it."""
+        """The characteristic along a let over its own range, every net of it; not proved between its stations."""
+        chosen = self._along(along, settings)
+        proved = self._known.get(("proved trace", along, _key(chosen)))
+        if proved is not None and not isinstance(proved, AnalysisError):
+            return proved  # type: ignore[no-any-return]
+        return self._once(("trace", along, _key(chosen)), lambda: self._traced(along, chosen, 0.0))
+
+    def proved_trace(self, along: str, settings: Settings) -> Trace:
+        """The same with the proof over its whole range tried."""
+        chosen = self._along(along, settings)
+        return self._once(
+            ("proved trace", along, _key(chosen)), lambda: self._traced(along, chosen, RANGE_SHARE * self.left())
+        )
+
+    def _along(self, along: str, settings: Settings) -> dict[str, float]:
+        return self._plain({name: value for name, value in settings.items() if name != along})
+
+    def _traced(self, along: str, chosen: Settings, range_budget: float) -> Trace:
         from loopsim.analyses.trace import trace
 
-        chosen = self._plain({name: value for name, value in settings.items() if name != along})
-
-        def run() -> Trace:
-            left = self.left()
-            share = RANGE_SHARE * left if self.require_proof else 0.0
-            return trace(self.circuit, along, box=self.box, budget=left, range_budget=share, settings=chosen)
-
-        return self._once(("trace", along, _key(chosen)), run)
+        left = self.left()
+        return trace(self.circuit, along, box=self.box, budget=left, range_budget=range_budget, settings=chosen)
 
     def cycle(self, start: str, settings: Settings) -> Cycle:
         """The oscillation that a start leads to."""

@@ -26,7 +26,10 @@ def jumps(computed: Computed, requirement: Requirement, settings: Settings) -> J
     limits = limits_of(requirement.relation, computed.values(settings))
     if requirement.along is None or not isinstance(requirement.target, NetRef):
         return open_question(f"{requirement.measure}: only of a net along a let", limits)
-    return judge_trace(computed.trace(requirement.along, settings), requirement, limits)
+    # corners are no proof anyway
+    proving = computed.require_proof and not requirement.over_tolerances
+    curve = (computed.proved_trace if proving else computed.trace)(requirement.along, settings)
+    return judge_trace(curve, requirement, limits)
 
 
 def judge_trace(curve: Trace, requirement: Requirement, limits: Limits) -> Judged:
@@ -35,7 +38,7 @@ def judge_trace(curve: Trace, requirement: Requirement, limits: Limits) -> Judge
     known = curve.thresholds(net)
     value: float | None = getattr(known, JUMPS[requirement.measure])
     measured = () if value is None else (value,)
-    if not curve.complete:
+    if not curve.complete or curve.notes:
         why = curve.notes[0] if curve.notes else f"complete at {len(curve.complete_at)} of {len(curve.stations)} stations"
         return open_question(f"the trace is not complete: {why}", limits, measured)
     proof = PROVED if curve.over_range else STATIONS.format(len(curve.stations))
@@ -78,7 +81,7 @@ def _where(curve: Trace, requirement: Requirement, value: float) -> str:
     if requirement.measure == "hysteresis":
         return f"{net} jumps at {requirement.along} = {known.rising:.6g} and back at {known.falling:.6g}"
     direction = JUMPS[requirement.measure]
-    fold = _fold_at(curve, value, direction)
+    fold = fold_at(curve, value, direction)
     moved = ""
     if fold is not None and fold.lands is not None:
         moved = f" from {fold.nets[net]:.4g} to {fold.lands[net]:.4g} V"
@@ -87,7 +90,7 @@ def _where(curve: Trace, requirement: Requirement, value: float) -> str:
     return f"{net} jumps{moved} at {requirement.along} = {value:.6g}{more}"
 
 
-def _fold_at(curve: Trace, value: float, direction: str) -> Fold | None:
+def fold_at(curve: Trace, value: float, direction: str) -> Fold | None:
     """The fold whose place is the threshold."""
     near = [fold for fold in curve.folds if fold.direction == direction and fold.at == value]
     return near[0] if near else None

@@ -6,8 +6,10 @@ from collections.abc import Callable, Mapping
 
 from loopsim.circuit import Requirement
 from loopsim.requirements.computed import Computed, Settings
+from loopsim.requirements.corners import over_tolerances
 from loopsim.requirements.counts import COUNTS, counts
-from loopsim.requirements.judged import Judged
+from loopsim.requirements.judged import Judged, open_question
+from loopsim.requirements.jump_corners import jumps_over_tolerances
 from loopsim.requirements.jumps import JUMPS, jumps
 from loopsim.requirements.slopes import slope
 from loopsim.requirements.values import damping, growth_rate, values
@@ -22,3 +24,15 @@ SERVERS: Mapping[str, Server] = {
     "damping": damping,
     "slope": slope,
 }
+
+
+def measure(computed: Computed, requirement: Requirement, settings: Settings) -> Judged:
+    """One requirement at one choice of its lets; AnalysisError where its analysis does not come to an end."""
+    server = SERVERS.get(requirement.measure)
+    if server is None:
+        return open_question(f"{requirement.measure}: not measured yet")
+    if not requirement.over_tolerances:
+        return server(computed, requirement, settings)
+    if requirement.measure in JUMPS:
+        return jumps_over_tolerances(computed, requirement, settings)
+    return over_tolerances(computed, requirement, settings, lambda corner: server(computed, requirement, {**settings, **corner}))

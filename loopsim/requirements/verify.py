@@ -14,7 +14,7 @@ from loopsim.errors import AnalysisError, CircuitError, MissingExtra
 from loopsim.expressions import evaluate
 from loopsim.requirements.computed import Computed
 from loopsim.requirements.judged import Judged, open_question
-from loopsim.requirements.measures import SERVERS
+from loopsim.requirements.measures import measure
 from loopsim.requirements.outcomes import RequirementOutcome
 from loopsim.requirements.proof import ENOUGH, weakest
 
@@ -87,13 +87,8 @@ def _bindings(circuit: Circuit, requirement: Requirement, settings: Mapping[str,
 
 def _at(computed: Computed, requirement: Requirement, settings: Mapping[str, float]) -> Judged:
     """One requirement at one choice of its lets, with what an analysis could not do as the reason for a doubt."""
-    server = SERVERS.get(requirement.measure)
-    if server is None:
-        return open_question(f"{requirement.measure}: not measured yet")
-    if requirement.over_tolerances:
-        return open_question("over tolerances: not measured yet")
     try:
-        return server(computed, requirement, settings)
+        return measure(computed, requirement, settings)
     except (AnalysisError, CircuitError) as error:
         return open_question(f"{error.code}: {error.message}")
     except MissingExtra as error:
