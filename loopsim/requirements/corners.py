@@ -48,7 +48,8 @@ def over_tolerances(computed: Computed, requirement: Requirement, settings: Sett
     tried: list[tuple[Corner, Judged]] = [({}, nominal)]
     try:
         plan = every_corner(limits) if len(limits) <= _most(requirement) else _chosen(limits, tried, at_corner)
-        tried += [(corner, _judged(at_corner, corner)) for corner in plan.corners]
+        for corner in plan.corners:
+            tried.append((corner, _judged(at_corner, corner)))  # one by one: what a spent budget cuts off must keep the rest
     except AnalysisError as error:
         return _cut_short(computed.circuit, tried, error)
     return _worst(computed.circuit, tried, plan.words)
@@ -78,9 +79,9 @@ def _chosen(
     nominal = tried[0][1]
     alone: dict[str, tuple[Judged, Judged]] = {}
     for name, pair in limits.items():
-        ends = tuple((({name: value}), _judged(at_corner, {name: value})) for value in pair)
-        tried += ends
-        alone[name] = (ends[0][1], ends[1][1])
+        for value in pair:
+            tried.append(({name: value}, _judged(at_corner, {name: value})))
+        alone[name] = (tried[-2][1], tried[-1][1])
     corners: list[Corner] = []
     for i in range(max(1, len(nominal.measured))):
         ways = {name: _way(low, high, i) for name, (low, high) in alone.items()}

@@ -1,13 +1,13 @@
 """Requirements over tolerances, by corners: met only with that label, violated with the corner that does it."""
 
 import pytest
+from asking import DIVIDER, PUMP, one
 
 import loopsim
 from loopsim.errors import AnalysisError
 from loopsim.requirements.computed import Computed
 from loopsim.requirements.corners import over_tolerances
 from loopsim.requirements.judged import Judged
-from tests.requirements.asking import DIVIDER, PUMP, one
 
 RISING = "expect rising threshold of out along level"
 
