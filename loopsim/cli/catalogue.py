@@ -140,10 +140,31 @@ VERIFY = Verb(
     "every requirement of every circuit below PATH",
     (
         ("loopsim verify circuits", "a line for each requirement, worst first"),
-        ("loopsim verify circuits --junit report.xml", "and a report for a CI server"),
+        ("loopsim verify circuits --select start_high", "only the requirements of that name"),
+        ("loopsim verify circuits --junit report.xml --annotations", "for a CI server"),
+        ("loopsim verify circuits --baseline accepted.json", "and what moved since the baseline"),
     ),
-    (JSON, Option("--junit", "FILE", "write a JUnit report to FILE"), BOX, BUDGET),
+    (
+        Option("--list", "", "name the requirements, judge none"),
+        Option("--select", "PATTERN", "only these: a label, a circuit or circuit::label, with * and ?; repeatable", repeatable=True),
+        Option("--require-proof", "", "met only by what is proved; the rest is undecided"),
+        BOX,
+        Option("--budget", "SECONDS", "wall time for each circuit (60 s)", values.positive_seconds),
+        Option("--jobs", "N", "worker processes (one a core)", values.count),
+        Option("--cluster", "ADDRESS", "work on a dask.distributed scheduler, as tcp://host:8786 (extra `cluster`)"),
+        Option("--journal", "FILE", "finished circuits, so that a killed run goes on (.loopsim-journal)"),
+        Option("--fresh", "", "forget the journal, judge everything anew"),
+        JSON,
+        CSV,
+        Option("--junit", "FILE", "write a JUnit report to FILE"),
+        Option("--summary", "FILE", "write a page in Markdown to FILE, for the summary of a CI job"),
+        Option("--annotations", "", "error lines that a CI server shows beside the source"),
+        Option("--timings", "", "with wall times in --json and --junit; without, equal runs write equal files"),
+        Option("--baseline", "FILE", "compare with a stored run: what moved, appeared or vanished"),
+        Option("--accept", "", "store this run as the baseline"),
+    ),
     "loopsim.cli.verify:run",
+    "undecided is never a pass. A requirement that the baseline holds and the run does not is reported as violated until accepted.",
 )
 
 VERBS = {verb.name: verb for verb in (STATES, TRACE, TRANSIENT, CYCLE, VERIFY, INSPECT, TIDY)}

@@ -58,15 +58,18 @@ def explain(error: BaseException, words: Sequence[str]) -> tuple[str, Exit]:
 
 
 def _report(error: BaseException, words: Sequence[str]) -> str:
-    """What to put into a bug report; the traceback goes to a file of its own."""
+    return bug_report(f"{type(error).__name__}: {error}", "".join(traceback.format_exception(error)), words)
+
+
+def bug_report(what: str, detail: str, words: Sequence[str]) -> str:
+    """What to put into a bug report; the detail, a traceback, goes to a file of its own."""
     command = " ".join(["loopsim", *words])
     facts = [
         f"command: {command}",
         "versions: " + ", ".join(f"{name} {version}" for name, version in versions()),
         f"system: {platform.platform()}",
     ]
-    detail = "".join(traceback.format_exception(error))
-    lines = [f"loopsim: internal error: {type(error).__name__}: {error}", *(f"    {fact}" for fact in facts)]
+    lines = [f"loopsim: internal error: {what}", *(f"    {fact}" for fact in facts)]
     place = _kept("\n".join([*facts, "", detail]))
     if place:
         lines.append(f"    details: {place}")
