@@ -180,22 +180,37 @@ def _judged(
     if not numbers:
         return
     own = None if executor else WorkerPool(min(jobs, len(numbers)))
-    pool = executor or own
-    assert pool is not None
-    function = judge if executor else judge_in_worker
     lost: list[int] = []
     try:
-        for number, answer in _finished(pool, function, tasks, numbers, WINDOW * jobs, 1):
-            if isinstance(answer, Record):
-                yield number, answer
-            else:
-                lost.append(number)
+        refused = yield from _first_attempts(executor or own, tasks, numbers, jobs, lost)
+        if refused:  # the executor broke for good: what it never took, and what it lost, our own workers do
+            own = own or WorkerPool(min(jobs, len(refused)))
+            executor = None
+            yield from _first_attempts(own, tasks, refused, jobs, lost)
         for number in sorted(lost):
-            for _, answer in _finished(pool, function, tasks, [number], 1, 2):
-                yield number, answer if isinstance(answer, Record) else _blamed(answer)
+            ((_, answer),) = _finished(executor or own, tasks, [number], 1, 2)
+            if isinstance(answer, Refused):
+                own, executor = own or WorkerPool(1), None
+                ((_, answer),) = _finished(own, tasks, [number], 1, 2)
+            yield number, answer if isinstance(answer, Record) else _blamed(answer)
     finally:
         if own:
             own.stop()
+
+
+def _first_attempts(
+    pool: Executor | None, tasks: Sequence[str], numbers: Sequence[int], jobs: int, lost: list[int]
+) -> Generator[tuple[int, Record], None, list[int]]:
+    """(number, record) of what is answered. Appends to `lost` what the executor took and did not answer; returns what it refused."""
+    refused: list[int] = []
+    for number, answer in _finished(pool, tasks, numbers, WINDOW * jobs, 1):
+        if isinstance(answer, Record):
+            yield number, answer
+        elif isinstance(answer, Refused):
+            refused.append(number)
+        else:
+            lost.append(number)
+    return refused
 
 
 def _blamed(error: BaseException) -> Record:
@@ -203,10 +218,16 @@ def _blamed(error: BaseException) -> Record:
     return Record(trouble=Trouble("died", f"no answer, tried twice, the second time alone: {words}"))
 
 
+class Refused(Exception):
+    """An executor that took no task: it is broken, or was shut down."""
+
+
 def _finished(
-    pool: Executor, function: Callable[[str, int], str], tasks: Sequence[str], numbers: Sequence[int], window: int, attempt: int
+    pool: Executor | None, tasks: Sequence[str], numbers: Sequence[int], window: int, attempt: int
 ) -> Iterator[tuple[int, Record | Exception]]:
     """(number, record or what came instead) in the order of completion, with at most `window` tasks handed out."""
+    assert pool is not None
+    function = judge_in_worker if isinstance(pool, WorkerPool) else judge
     waiting = deque(numbers)
     running: dict[Future[str], int] = {}
     try:
@@ -215,17 +236,18 @@ def _finished(
                 number = waiting.popleft()
                 try:
                     running[pool.submit(function, tasks[number], attempt)] = number
-                except Exception as error:  # a broken pool refuses
-                    yield number, error
+                except Exception as error:
+                    yield number, Refused(str(error))
             if not running:
                 continue
             done, _ = wait(running, return_when=FIRST_COMPLETED)
             for future in done:
                 number = running.pop(future)
                 try:
-                    yield number, read_record(future.result())
+                    answer: Record | Exception = read_record(future.result())
                 except Exception as error:  # the worker died, or the executor lost the task
-                    yield number, error
+                    answer = error
+                yield number, answer
     finally:
         for future in running:
             future.cancel()
