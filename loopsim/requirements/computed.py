@@ -16,10 +16,12 @@ from loopsim.circuit import Circuit
 from loopsim.equations.assemble import parameter_values
 from loopsim.equations.plan import plan
 from loopsim.errors import AnalysisError
+from loopsim.requirements.at_rest import run_to_rest
 
 if TYPE_CHECKING:
     from loopsim.analyses.cycle import Cycle
     from loopsim.analyses.trace import Trace
+    from loopsim.analyses.transient import Transient
 
 Settings = Mapping[str, float]
 Found = TypeVar("Found")
@@ -95,8 +97,21 @@ class Computed:
         chosen = self._plain(settings)
         return self._once(
             ("cycle", start, _key(chosen)),
-            lambda: cycle(self.circuit, start=start, settings=chosen, budget=self.left()),
+            lambda: cycle(self.circuit, start=start, settings=chosen, budget=self.left(), progress=self._tick),
         )
+
+    def run(self, start: str, settings: Settings, pace: float) -> Transient:
+        """A run in time from a start until the circuit is at rest or repeats itself, or is still moving after a long time; pace: of
+        supplies that come up, as for `run_to_rest`."""
+        chosen = self._plain(settings)
+        return self._once(
+            ("run", start, pace, _key(chosen)),
+            lambda: run_to_rest(self.circuit, self.states(chosen), start, chosen, pace, self._tick),
+        )
+
+    def _tick(self, share: float) -> None:
+        """Called during a run: ends it when the time is up."""
+        self.left()
 
     def _plain(self, settings: Settings) -> dict[str, float]:
         """Settings without those that set a let to what it is anyway: equal questions are then asked once."""

@@ -16,14 +16,16 @@ from loopsim.equations.assemble import dependence, tolerance_limits
 from loopsim.errors import AnalysisError, CircuitError
 from loopsim.requirements.computed import Computed, Settings
 from loopsim.requirements.judged import Judged, open_question
+from loopsim.requirements.oscillation import OSCILLATION
 from loopsim.requirements.proof import CORNERS
+from loopsim.requirements.settling import SETTLING
 
 Corner = Mapping[str, float]
 AtCorner = Callable[[Corner], Judged]
 
 ALL_CORNERS = 7  # quantities: 128 combinations; a list of states takes about 10 ms
 ALL_CORNERS_IN_TIME = 4  # where each corner is a run in time
-IN_TIME = ("start state", "period", "frequency", "duty", "swing", "settling time", "final value")
+IN_TIME = (*OSCILLATION, *SETTLING)
 AT_REST = ("states", "values", "slope")  # what no capacitance and no inductance moves
 STORED = {"C"}  # the array that holds them
 

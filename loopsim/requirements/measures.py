@@ -11,6 +11,8 @@ from loopsim.requirements.counts import COUNTS, counts
 from loopsim.requirements.judged import Judged, open_question
 from loopsim.requirements.jump_corners import jumps_over_tolerances
 from loopsim.requirements.jumps import JUMPS, jumps
+from loopsim.requirements.oscillation import OSCILLATION, oscillation
+from loopsim.requirements.settling import SETTLING, settling
 from loopsim.requirements.slopes import slope
 from loopsim.requirements.values import damping, growth_rate, values
 
@@ -19,6 +21,8 @@ Server = Callable[[Computed, Requirement, Settings], Judged]
 SERVERS: Mapping[str, Server] = {
     **dict.fromkeys(COUNTS, counts),
     **dict.fromkeys(JUMPS, jumps),
+    **dict.fromkeys(OSCILLATION, oscillation),
+    **dict.fromkeys(SETTLING, settling),
     "values": values,
     "growth rate": growth_rate,
     "damping": damping,
