@@ -111,3 +111,9 @@ def test_the_walk_sees_imports_at_both_levels_and_skips_type_only_ones() -> None
         ("loopsim.errors", True),
         ("loopsim.analyses.states", False),
     ]
+
+
+def test_no_two_files_of_tests_share_a_name() -> None:
+    """The folders of tests are no packages: pytest takes a second module of the same name for the first, and stops."""
+    names = [path.name for path in (ROOT / "tests").rglob("*.py")]
+    assert sorted(names) == sorted(set(names))
