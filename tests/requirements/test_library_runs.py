@@ -9,6 +9,7 @@ from multiprocessing import get_context
 from pathlib import Path
 
 import pytest
+from dividers import circuit_text, write_library
 from dying import Deadly
 
 from loopsim.requirements.judging import Options, judge, read_record, task_text
@@ -20,21 +21,8 @@ from loopsim.requirements.outcomes import RANK
 def library(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     """Six dividers, of which the third is off by a volt."""
     monkeypatch.chdir(tmp_path)
-    (tmp_path / "lib" / "b").mkdir(parents=True)
-    for number in range(6):
-        folder = tmp_path / "lib" / ("b" if number % 2 else ".")
-        text = circuit_text(f"d{number}", 7 if number == 2 else 5)
-        (folder / f"d{number}.loop").write_text(text, encoding="utf-8")
+    write_library(tmp_path / "lib", 6)
     return tmp_path / "lib"
-
-
-# cheap to judge: what is around the analyses is tested
-def circuit_text(name: str, supply: float = 5.0) -> str:
-    return (
-        f'circuit {name} "divider"\nlet supply = {supply} V\ngnd -> battery: supply -> top\n'
-        "top -- upper: 1 kohm -- middle -- lower: 1 kohm -- gnd\n"
-        "expect states = 1\nexpect half: values of middle = 2.5 V +/- 10 mV\n"
-    )
 
 
 class Shuffled(Executor):
