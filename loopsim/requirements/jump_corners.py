@@ -1,92 +1,97 @@
-"""Thresholds at corners: the nominal fold followed to each corner by Newton; the outermost corners are traced in full to confirm it."""
+"""Thresholds at corners: the nominal folds are moved to all corners together by Newton; the outermost corners are traced in full."""
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
-from loopsim.analyses.family import Family
+from loopsim.analyses.trip_points import trip_points
 from loopsim.circuit import Requirement
-from loopsim.equations.assemble import let_range
-from loopsim.numerics.curve import fold
+from loopsim.equations.assemble import is_affine
+from loopsim.errors import AnalysisError
 from loopsim.requirements.computed import Computed, Settings
-from loopsim.requirements.corners import Corner, over_tolerances
+from loopsim.requirements.corners import ALL_CORNERS_OF_FOLDS, Corner, over_tolerances
 from loopsim.requirements.judged import Judged, number
-from loopsim.requirements.jumps import JUMPS, fold_at, jumps
+from loopsim.requirements.jumps import JUMPS, jumps
 from loopsim.requirements.limits import limits_of
 from loopsim.requirements.proof import CORNERS
 
 if TYPE_CHECKING:
-    from loopsim.analyses.trace import Fold, Trace
+    from loopsim.analyses.trace import Trace
 
 AGREE = 1e-6  # of the range: how near the followed and the traced threshold must be
-FARTHEST = 0.25  # of the range: a fold that moved by more than this is not trusted to be the same; the corner is traced
+FARTHEST = 0.25  # of the range: a fold that moved by more than this is not trusted to be the same one: the corner is traced
 
 
 @dataclass
 class Followed:
-    """Judges a threshold requirement at a corner by the folds of the nominal trace, moved there. seen: what was found where."""
+    """Judges a threshold requirement at a corner by the folds of the nominal trace, moved there. moved: what `prepare` found; seen: what
+    was judged by it."""
 
     computed: Computed
     requirement: Requirement
     settings: Settings
+    moved: dict[tuple[tuple[str, float], ...], float] = field(default_factory=dict)
     seen: list[tuple[Corner, float]] = field(default_factory=list)
 
+    @property
+    def nominal(self) -> Trace:
+        """The trace with nothing moved."""
+        assert self.requirement.along is not None
+        return self.computed.trace(self.requirement.along, self.settings)
+
+    def prepare(self, corners: Sequence[Corner]) -> None:
+        """Solve the folds of many corners together; those that Newton loses, or finds far away, are left to full traces."""
+        assert self.requirement.along is not None
+        curve, net, along = self.nominal, self.requirement.target_text, self.requirement.along
+        if not corners or not is_affine(self.computed.circuit, along):
+            return
+        names = list(dict.fromkeys(name for corner in corners for name in corner))
+        plain = self.computed.values(self.settings)
+        samples = {name: [corner.get(name, float(plain[name])) for corner in corners] for name in names}
+        try:
+            points = trip_points(self.computed.circuit, along, samples=samples, nominal=curve, settings=self.settings)
+        except AnalysisError:
+            return
+        first, *more = (points.threshold(net, way) for way in ways_of(self.requirement))
+        values = first - more[0] if more else first
+        reach = FARTHEST * (curve.high - curve.low)
+        wanted = getattr(curve.thresholds(net), JUMPS[self.requirement.measure])
+        for corner, value in zip(corners, values, strict=True):
+            if abs(value - wanted) < reach:
+                self.moved[_key(corner)] = float(value)
+
     def __call__(self, corner: Corner) -> Judged:
-        """A full trace at the nominal corner and wherever a fold cannot be followed."""
+        """A full trace at the nominal corner and wherever the folds could not be moved."""
         here = {**self.settings, **corner}
-        value = self._value(here) if corner else None
+        value = self.moved.get(_key(corner)) if corner else None
         if value is None:
             return jumps(self.computed, self.requirement, here)
         self.computed.left()
         self.seen.append((corner, value))
         limits = limits_of(self.requirement.relation, self.computed.values(here))
-        error = AGREE * (self._nominal.high - self._nominal.low)
+        error = AGREE * (self.nominal.high - self.nominal.low)
         net, along = self.requirement.target_text, self.requirement.along
         where = f"hysteresis {value:.6g}" if self.requirement.measure == "hysteresis" else f"{net} jumps at {along} = {value:.6g}"
         return number(value, error, limits, self.requirement.relation.form, CORNERS, where)
 
-    @property
-    def _nominal(self) -> Trace:
-        assert self.requirement.along is not None
-        return self.computed.trace(self.requirement.along, self.settings)
 
-    def _value(self, here: Settings) -> float | None:
-        """The threshold at other settings, None where a fold does not follow or leaves the range there."""
-        curve, along = self._nominal, self.requirement.along
-        assert along is not None
-        ends = let_range(self.computed.circuit, along, here)
-        known = curve.thresholds(self.requirement.target_text)
-        ways = ("rising", "falling") if self.requirement.measure == "hysteresis" else (JUMPS[self.requirement.measure],)
-        if ends is None:
-            return None
-        family = Family(self.computed.circuit, {k: v for k, v in here.items() if k != along}, along, *ends)
-        found = []
-        for way in ways:
-            at = getattr(known, way)
-            turn = None if at is None else fold_at(curve, at, way)
-            moved = None if turn is None else _moved(family, turn, curve)
-            if moved is None:
-                return None
-            found.append(moved)
-        return found[0] - found[1] if len(found) == 2 else found[0]
+def ways_of(requirement: Requirement) -> tuple[str, ...]:
+    """The thresholds that a measure is made of."""
+    return ("rising", "falling") if requirement.measure == "hysteresis" else (JUMPS[requirement.measure],)
 
 
-def _moved(family: Family, turn: Fold, curve: Trace) -> float | None:
-    """Where a fold of the nominal trace is in another family."""
-    if not len(turn.direction_of_curve):
-        return None
-    point = fold(family, family.bend, family.slope_along, turn.x, turn.at, turn.direction_of_curve, curve.scale)
-    if point is None or not family.low < point.level < family.high:
-        return None
-    return None if abs(point.level - turn.at) > FARTHEST * (curve.high - curve.low) else point.level
+def _key(corner: Corner) -> tuple[tuple[str, float], ...]:
+    return tuple(sorted(corner.items()))
 
 
 def jumps_over_tolerances(computed: Computed, requirement: Requirement, settings: Settings) -> Judged:
     """Over tolerances, for the measures of `jumps`: the corners with the smallest and the largest value are traced, and where a trace
     tells otherwise all corners are."""
     followed = Followed(computed, requirement, settings)
-    found = over_tolerances(computed, requirement, settings, followed)
+    most = ALL_CORNERS_OF_FOLDS if is_affine(computed.circuit, requirement.along or "") else None
+    found = over_tolerances(computed, requirement, settings, followed, most=most, prepare=followed.prepare)
     if all(_confirmed(computed, requirement, {**settings, **corner}, value) for corner, value in _outermost(followed.seen)):
         return found
     return over_tolerances(computed, requirement, settings, lambda corner: jumps(computed, requirement, {**settings, **corner}))

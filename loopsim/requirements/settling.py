@@ -26,6 +26,7 @@ if TYPE_CHECKING:
 SETTLING = ("start state", "final value", "settling time")
 BAND = 0.01  # of the net's whole excursion: inside it, the net has settled
 TIMING = 1e-3  # of a settling time: how far it may be off
+SAME = 1e-4  # of their size: runs that end this close end alike
 DOUBT = 10.0  # times the tolerance of the run: how far a voltage it ends with may be off, of the net's excursion
 
 
@@ -39,7 +40,9 @@ def settling(computed: Computed, requirement: Requirement, settings: Settings) -
     paces = RAMPS if start == "off" and not moving and requirement.measure != "settling time" else RAMPS[:1]
     tried = [judge_run(computed.run(start, settings, pace), requirement, limits) for pace in paces]
     worst = min(tried, key=lambda judged: judged.badness)
-    return replace(worst, measured=tuple(sorted({value for judged in tried for value in judged.measured})))
+    numbers = sorted(value for judged in tried for value in judged.measured)
+    same = not numbers or numbers[-1] - numbers[0] <= SAME * max(abs(numbers[-1]), abs(numbers[0]))
+    return worst if same else replace(worst, measured=(numbers[0], numbers[-1]))
 
 
 def _own_start(computed: Computed, requirement: Requirement, settings: Settings) -> str:

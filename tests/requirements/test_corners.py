@@ -1,13 +1,15 @@
 """Requirements over tolerances, by corners: met only with that label, violated with the corner that does it."""
 
 import pytest
-from asking import DIVIDER, PUMP, one
+from asking import DIVIDER, PUMP, library, one
 
 import loopsim
 from loopsim.errors import AnalysisError
 from loopsim.requirements.computed import Computed
-from loopsim.requirements.corners import over_tolerances
+from loopsim.requirements.corners import every_corner, loose, over_tolerances
 from loopsim.requirements.judged import Judged
+from loopsim.requirements.jump_corners import Followed
+from loopsim.requirements.jumps import jumps
 
 RISING = "expect rising threshold of out along level"
 
@@ -78,6 +80,20 @@ def test_a_trip_point_outside_at_one_corner_is_violated_there():
     outcome = one(PUMP, f"{RISING} < 5.55 V over tolerances")
     assert outcome.outcome == "violated"
     assert outcome.note.startswith("at supply = 9.09 V, r_top.resistance = 21780 ohm, r_bottom.resistance = 22220 ohm: out jumps at")
+
+
+@pytest.mark.slow
+def test_folds_moved_together_are_where_a_full_trace_of_each_corner_finds_them():
+    circuit = library("cistern_pump")
+    for requirement in (r for r in circuit.requirements if r.over_tolerances):
+        followed = Followed(Computed(circuit, 1e3, 600.0), requirement, {})
+        corners = every_corner(loose(circuit, requirement, {})).corners
+        followed.prepare(corners)
+        assert len(followed.moved) == len(corners) == 32
+        for corner in corners:
+            (moved,) = followed(corner).measured
+            (traced,) = jumps(followed.computed, requirement, corner).measured
+            assert moved == pytest.approx(traced, abs=1e-9 * 9.0)
 
 
 def test_counts_at_corners():
