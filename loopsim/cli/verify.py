@@ -16,7 +16,7 @@ from loopsim.cli.options import Request, UsageError, nearest
 from loopsim.cli.progress import progress
 from loopsim.cli.reading import read_circuit, write_file
 from loopsim.errors import CircuitError, LoopsimError
-from loopsim.output.annotations import annotation_lines
+from loopsim.output.annotations import annotation_lines, no_order
 from loopsim.output.document import document, document_text
 from loopsim.output.junit import junit_text
 from loopsim.output.verify_text import (
@@ -52,6 +52,8 @@ DEFAULTS = Options()
 
 def run(request: Request, around: Surroundings) -> Answer:
     """Every requirement of every circuit below the paths, worst first."""
+    if request.has("json") and request.has("annotations"):
+        raise UsageError("--json and --annotations both want standard output", "take one of them, or --junit FILE", "verify")
     stored = _stored_baseline(request)
     circuits, mistakes = read_library(request.paths, read_circuit)
     select = request.get("select", ())
@@ -74,7 +76,11 @@ def run(request: Request, around: Surroundings) -> Answer:
     for written, code in _files(request, stored, found, mistakes, units):
         remarks.append(written)
         codes.append(code)
-    return Answer(_text(request, around, found, mistakes, changes, units, remarks), highest_ranked(codes), tuple(remarks))
+    return _answer(_text(request, around, found, mistakes, changes, units), codes, remarks)
+
+
+def _answer(text: str, codes: Sequence[int], remarks: Sequence[str]) -> Answer:
+    return Answer(text, highest_ranked(codes), tuple(no_order(remark) for remark in remarks))
 
 
 def _verified(
@@ -149,12 +155,8 @@ def _text(
     mistakes: Sequence[CircuitError],
     changes: Sequence[Moved],
     units: Units,
-    remarks: list[str],
 ) -> str:
-    lines = annotation_lines(found.outcomes, mistakes) if request.has("annotations") else ""
     if request.has("json"):
-        if lines:
-            remarks.append(lines.rstrip("\n"))
         body = {
             "requirements": [_entry(outcome, request.has("timings")) for outcome in found.outcomes],
             "summary": found.summary,
@@ -164,6 +166,7 @@ def _text(
         }
         return _document(request, body)
     text = verify_text(found.outcomes, units, around.answers)
+    lines = annotation_lines(found.outcomes, mistakes) if request.has("annotations") else ""
     if request.has("baseline"):
         text += baseline_section(changes, request.get("baseline"))
     return text + lines
@@ -249,15 +252,15 @@ def _listing(
 ) -> Answer:
     """The requirements by name, nothing judged."""
     rows = [(c.file or "", r.span.line if r.span else None, c.name, r.label, r.text) for c in selected for r in c.requirements]
-    code = highest_ranked([Exit.MISTAKE] * bool(mistakes) + [Exit.NOTHING] * (not rows))
+    codes = [Exit.MISTAKE] * bool(mistakes) + [Exit.NOTHING] * (not rows)
     remarks = [str(mistake) for mistake in mistakes]
     if not rows:
         remarks.append(_why_nothing(request, circuits))
     if request.has("json"):
         names = ("file", "line", "circuit", "label", "text")
         body = {"listed": [dict(zip(names, row, strict=True)) for row in rows], "mistakes": _mistake_entries(mistakes)}
-        return Answer(_document(request, body), code, tuple(remarks))
-    return Answer(listing_text(rows), code, tuple(remarks))
+        return _answer(_document(request, body), codes, remarks)
+    return _answer(listing_text(rows), codes, remarks)
 
 
 def _nothing(request: Request, circuits: Sequence[Circuit], mistakes: Sequence[CircuitError]) -> Answer:
@@ -268,8 +271,7 @@ def _nothing(request: Request, circuits: Sequence[Circuit], mistakes: Sequence[C
     for written, code in _files(request, None, found, mistakes, {}):
         remarks.append(written)
         codes.append(code)
-    text = _text(request, Surroundings(), found, mistakes, (), {}, remarks)
-    return Answer(text, highest_ranked(codes), tuple(remarks))
+    return _answer(_text(request, Surroundings(), found, mistakes, (), {}), codes, remarks)
 
 
 def _why_nothing(request: Request, circuits: Sequence[Circuit]) -> str:

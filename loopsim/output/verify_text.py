@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 
+from loopsim.output.annotations import no_order
 from loopsim.output.csv import csv_text
 from loopsim.output.engineering import engineering
 from loopsim.output.terminal import PLAIN, Palette
@@ -125,7 +126,8 @@ def listing_text(rows: Sequence[tuple[str, int | None, str, str, str]]) -> str:
         for file, line, circuit, label, text in rows
     ]
     circuits = len({(file, circuit) for file, _, circuit, _, _ in rows})
-    return "\n".join([*table([head, *body]), "", f"{counted(len(rows), 'requirement')} of {counted(circuits, 'circuit')}", ""])
+    lines = map(no_order, table([head, *body]))
+    return "\n".join([*lines, "", f"{counted(len(rows), 'requirement')} of {counted(circuits, 'circuit')}", ""])
 
 
 def baseline_section(changes: Sequence[Moved], baseline: str) -> str:
