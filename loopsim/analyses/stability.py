@@ -131,7 +131,8 @@ def _stray_nets(system: System) -> NDArray[np.int64]:
     declared = np.any(system.C != 0.0, axis=0)
     held = set()
     for unknowns, rows in groups(system, pattern(system)):
-        if len(unknowns) == 1 and rows[0] != unknowns[0]:
+        # a law of voltages holds it; where the balance of another net does, the two only want strays to show how they move
+        if len(unknowns) == 1 and system.row_units and system.row_units[rows[0]] == "V":
             held.add(int(unknowns[0]))
     for j, (kind, _) in enumerate(system.unknowns):
         balance = not system.row_units or system.row_units[j] == "A"
