@@ -22,7 +22,7 @@ from loopsim.analyses.trace_curves import branch, curves, matching
 from loopsim.analyses.trace_levels import levels_of, prove_range, states_at
 from loopsim.analyses.trace_results import Branch, Crossing, Fold, Thresholds, Trace
 from loopsim.analyses.trace_ride import thresholds, travel_of
-from loopsim.analyses.trace_turns import crossings, folds, settle
+from loopsim.analyses.trace_turns import crossings, folds
 from loopsim.circuit import Circuit
 from loopsim.equations.assemble import let_range, parameter_values
 from loopsim.equations.structure import check
@@ -119,4 +119,4 @@ def _scale(family: Family, proved: Sequence[Points], width: float) -> Array:
     return np.append(np.maximum(size, floor), width)
 
 
-__all__ = ["STATIONS", "Branch", "Crossing", "Fold", "Thresholds", "Trace", "settle", "trace"]
+__all__ = ["STATIONS", "Branch", "Crossing", "Fold", "Thresholds", "Trace", "trace"]

@@ -2,19 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
 
 from loopsim.analyses.family import Family
-from loopsim.analyses.stability import STRAY, judge
+from loopsim.analyses.settling import settle_all
+from loopsim.analyses.stability import judge
 from loopsim.analyses.trace_curves import at, stable_crossings
 from loopsim.analyses.trace_results import Branch, Crossing, Fold
-from loopsim.equations.system import System
 from loopsim.numerics.curve import fold
-from loopsim.numerics.newton import newton
 from loopsim.numerics.spectrum import determinant_signs
 
 Array: TypeAlias = NDArray[np.float64]
@@ -22,9 +22,6 @@ Array: TypeAlias = NDArray[np.float64]
 PAST = 1e-7  # of the range: how far past a fold the landing is looked for
 MEETING = 0.02  # of the picture: half a step of the curve, within which a turn and a branch point are one
 SAME_PLACE = 1e-5  # of the range: a fold this near to a branch point is that point
-SETTLE_STEPS = 400
-FIRST_STEP = 1e-12  # [s] below the fastest time of any shipped circuit
-ARRIVED = 1e-4  # of a net's travel: so near to a stable state, and nearing it, the rest of the way is known
 
 
 def folds(
@@ -51,14 +48,17 @@ def folds(
                 continue
             rising = bool(branch.values[before] < level) or bool(level > branch.values[after])
             stable_side = True in (branch.stable[before], branch.stable[after])
-            landing = _landing(family, branches, point.x, point.level, rising, scale) if stable_side else None
             found.append(
                 Fold(
-                    point.level, _volts(index, point.x), "rising" if rising else "falling", point.precision, stable_side,
-                    None if landing is None else _volts(index, landing), point.x, landing, number, point.v,
+                    point.level, _volts(index, point.x), "rising" if rising else "falling", point.precision, stable_side, None, point.x,
+                    None, number, point.v,
                 )
             )  # fmt: skip
-    return tuple(sorted(found, key=lambda f: (f.at, f.branch))), tuple(lost)
+    landings = _landings(family, branches, found, scale)
+    landed = [
+        replace(f, landing=x, lands=None if x is None else _volts(index, x)) for f, x in zip(found, landings, strict=True)
+    ]
+    return tuple(sorted(landed, key=lambda f: (f.at, f.branch))), tuple(lost)
 
 
 def _meets(branch: Branch, i: int, other: Crossing, index: Mapping[str, int], scale: Array) -> bool:
@@ -80,54 +80,32 @@ def _volts(index: Mapping[str, int], x: Array) -> dict[str, float]:
     return {net: float(x[j]) for net, j in index.items()}
 
 
-def _landing(family: Family, branches: Sequence[Branch], x: Array, level: float, rising: bool, scale: Array) -> Array | None:
-    """Where the circuit comes to rest just past a fold; None beyond the range, or where it does not come to rest."""
-    past = level + (1.0 if rising else -1.0) * PAST * (family.high - family.low)
-    if not family.low <= past <= family.high:
-        return None
-    rests = [y for branch in branches for y, stable in stable_crossings(family, branch, past) if stable]
-    return settle(family.system(past), x, np.array(rests).reshape(-1, len(x)), scale[:-1])
+def _landings(family: Family, branches: Sequence[Branch], found: Sequence[Fold], scale: Array) -> list[Array | None]:
+    """Where the circuit comes to rest just past each fold; None beyond the range, or where it does not come to rest."""
+    way = (1.0 if f.direction == "rising" else -1.0 for f in found)
+    past = [f.at + sign * PAST * (family.high - family.low) for f, sign in zip(found, way, strict=True)]
+    jumps = [i for i, f in enumerate(found) if f.from_stable and family.low <= past[i] <= family.high]
+    if not jumps:
+        return [None] * len(found)
+    rests = [_stable_at(family, branches, past[i]) for i in jumps]
+    starts = np.stack([found[i].x for i in jumps])
+    landed: list[Array | None]
+    if family.affine:
+        sources = np.stack([family.system(past[i]).s for i in jumps])
+        landed = settle_all(family.system(family.low), sources, starts, rests, scale[:-1])
+    else:
+        landed = []
+        for i, known, start in zip(jumps, rests, starts, strict=True):
+            system = family.system(past[i])
+            landed += settle_all(system, system.s[None], start[None], [known], scale[:-1])
+    places = dict(zip(jumps, landed, strict=True))
+    return [places.get(i) for i in range(len(found))]
 
 
-def settle(system: System, x: Array, rests: Array | None = None, size: Array | None = None) -> Array | None:
-    """Where the circuit comes to rest from x with its own dynamics (and a stray on each net that has none); None when it does not.
-
-    Implicit Euler with growing steps: it damps what the circuit damps, and the steps end as Newton's on the equilibrium. rests: (k, n)
-    known stable states: one that is drawn in to ARRIVED of `size` (n,) ends the run.
-    """
-    dynamics = system.C.copy()
-    for j, (kind, _) in enumerate(system.unknowns):
-        bare = kind != "current" and not np.any(system.C[:, j] != 0.0)
-        if bare and (not system.row_units or system.row_units[j] == "A"):
-            dynamics[j, j] += STRAY
-    h, y = FIRST_STEP, x
-    away = np.inf
-    for _ in range(SETTLE_STEPS):
-        root = newton(*_implicit(system, dynamics / h, y), y[None], max_steps=12)
-        if not root.converged[0]:
-            h *= 0.25
-            if h < 1e-20:
-                return None
-            continue
-        moved = float(np.max(np.abs(root.x[0] - y) / (1.0 + np.abs(y))))
-        y = root.x[0]
-        if rests is not None and size is not None and len(rests):
-            distances = np.max(np.abs(rests - y) / size, axis=1)
-            nearest = int(np.argmin(distances))
-            if distances[nearest] < ARRIVED and distances[nearest] < away:
-                return np.asarray(rests[nearest])
-            away = distances[nearest]
-        # growth near the fold is slow and must be let develop: the step grows only while the state moves little per step
-        h *= 8.0 if moved < 1e-3 else 3.0 if moved < 0.05 else 1.0 if moved < 0.3 else 0.5
-        if h > 1e6 and moved < 1e-9:
-            final = newton(system.residual, system.jacobian, y[None], max_steps=20)
-            return final.x[0] if final.converged[0] else None
-    return None
-
-
-def _implicit(system: System, mass: Array, y: Array) -> tuple[Callable[[Array], Array], Callable[[Array], Array]]:
-    """Residual and Jacobian of one step of implicit Euler from y."""
-    return lambda z: system.residual(z) + (z - y) @ mass.T, lambda z: system.jacobian(z) + mass
+def _stable_at(family: Family, branches: Sequence[Branch], level: float) -> Array:
+    """(k, n) the stable states that the branches pass at a value of the let."""
+    found = [x for branch in branches for x, stable in stable_crossings(family, branch, level) if stable]
+    return np.array(found)
 
 
 def crossings(

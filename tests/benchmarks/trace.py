@@ -1,0 +1,136 @@
+"""How long a traced characteristic and its trip points take. Prints a table of one run.
+
+    OMP_NUM_THREADS=1 python tests/benchmarks/trace.py [--quick]
+
+Times are processor time of this process on one thread, the median of a few repeats; compare the rows of one run, not runs. The peer for trip
+points is `scipy.optimize.fsolve` in a loop over samples, given the same fold equations (F = 0, J v = 0, l . v = 1) in as few unknowns.
+"""
+
+from __future__ import annotations
+
+import argparse
+import statistics
+import sys
+import time
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from scipy.optimize import fsolve
+
+ROOT = Path(__file__).parents[2]
+sys.path[:0] = [str(ROOT)]
+
+import loopsim  # noqa: E402
+from loopsim.analyses.family import Family  # noqa: E402
+from loopsim.analyses.points import all_points  # noqa: E402
+from loopsim.analyses.trace import _scale  # noqa: E402
+from loopsim.analyses.trace_curves import curves  # noqa: E402
+from loopsim.analyses.trip_points import _line  # noqa: E402
+from loopsim.equations.assemble import let_range  # noqa: E402
+from loopsim.equations.condensed import arguments, condense  # noqa: E402
+from loopsim.numerics.fold_batch import null_vectors  # noqa: E402
+
+CIRCUITS = (
+    ("comparators/cistern_pump.loop", "level"),
+    ("comparators/ferry_lamp_dusk.loop", "glow"),
+    ("curves/curve_pair.loop", "supply"),
+    ("comparators/tide_gauge_gates.loop", "tide"),
+)
+
+
+def timed(work: Callable[[], object], repeats: int) -> float:
+    """Median processor time [s] after one call that warms up."""
+    work()
+    found = []
+    for _ in range(repeats):
+        began = time.process_time()
+        work()
+        found.append(time.process_time() - began)
+    return statistics.median(found)
+
+
+def traces(repeats: int) -> None:
+    print("| circuit | folds | points | 11 stations, ms | and over the range, ms | covered | us a point | one dense solve, us |")
+    print("| --- | --- | --- | --- | --- | --- | --- | --- |")
+    for file, along in CIRCUITS:
+        circuit = loopsim.load(str(ROOT / "circuits" / file))
+        stations = timed(lambda c=circuit, a=along: c.trace(a, range_budget=0.0), repeats)
+        whole = timed(lambda c=circuit, a=along: c.trace(a), repeats)
+        curve = circuit.trace(along)
+        points = sum(len(branch.values) for branch in curve.branches)
+        n = curve.branches[0].x.shape[1]
+        follow = timed(lambda c=circuit, a=along: _followed(c, a), repeats) / points
+        matrix, right = np.random.default_rng(0).standard_normal((n, n)) + n * np.eye(n), np.ones(n)
+        solve = timed(lambda m=matrix, r=right: [np.linalg.solve(m, r) for _ in range(1000)], repeats) / 1000
+        covered = "all" if curve.over_range and not curve.gaps else f"but {len(curve.gaps)} gaps" if curve.over_range else "no"
+        print(
+            f"| {Path(file).stem} along {along} | {len(curve.folds)} | {points} | {1e3 * stations:.0f} | {1e3 * whole:.0f} | {covered} |"
+            f" {1e6 * follow:.0f} | {1e6 * solve:.0f} |"
+        )
+
+
+def _followed(circuit: loopsim.Circuit, along: str) -> None:
+    """Only the following of the curves: no verdicts, no folds."""
+    if circuit.name not in KNOWN:
+        low, high = let_range(circuit, along) or (0.0, 1.0)
+        family = Family(circuit, {}, along, low, high)
+        values = np.linspace(low, high, 11)
+        proved = [all_points(family.system(float(value)), 1e3) for value in values]
+        KNOWN[circuit.name] = (family, values, proved, _scale(family, proved, high - low))
+    curves(*KNOWN[circuit.name], np.inf)
+
+
+KNOWN: dict[str, tuple[Any, ...]] = {}
+
+
+def trips(repeats: int, samples: int, peer: int) -> None:
+    print(f"\n| circuit | trip points | {samples:,} samples, ms | us a trip point | SciPy loop, us a trip point | times |")
+    print("| --- | --- | --- | --- | --- | --- |")
+    for file, along in CIRCUITS[:2]:
+        circuit = loopsim.load(str(ROOT / "circuits" / file))
+        nominal = circuit.trace(along, range_budget=0.0)
+        ours = timed(lambda c=circuit, a=along, n=nominal: c.trip_points(a, samples=samples, nominal=n), repeats)
+        spread = circuit.trip_points(along, samples=peer, nominal=nominal)
+        began = time.process_time()
+        found = scipy_loop(circuit, spread)
+        each = (time.process_time() - began) / found.size
+        assert np.allclose(found, spread.at, rtol=1e-6), "the peer found other trip points"
+        mine = ours / (samples * len(nominal.folds))
+        print(
+            f"| {Path(file).stem} along {along} | {len(nominal.folds)} | {1e3 * ours:.0f} | {1e6 * mine:.1f} | {1e6 * each:.0f} |"
+            f" {each / mine:.0f} |"
+        )
+
+
+def scipy_loop(circuit: loopsim.Circuit, spread: loopsim.analyses.trip_points.TripPoints) -> np.ndarray:
+    """The same folds one by one: fsolve on (F, J v, l . v - 1), in the arguments of the nonlinear rows."""
+    curve = spread.nominal
+    table = dict(zip(spread.parameters, spread.samples.T, strict=True))
+    system, rise = _line(circuit, curve.along, curve.low, curve.high, table)
+    found = np.empty_like(spread.at)
+    for f, fold in enumerate(curve.folds):
+        whole = condense(system, rise, fold.x, len(spread.samples))
+        K, p, q = whole.K, whole.p, whole.q
+        start = np.array(np.broadcast_to(arguments(system, np.broadcast_to(fold.x, (len(K), system.n))), p.shape))
+        _, v = null_vectors(whole.jacobian(start, np.full(len(K), fold.at)).mean(axis=0))
+        k = p.shape[1]
+        for i in range(len(K)):
+            one = type(whole)(system, whole.shift, whole.products, K[i : i + 1], p[i : i + 1], q[i : i + 1], whole.x0, whole.x1, whole.X)
+
+            def equations(z: np.ndarray, one: object = one, k: int = k, v: np.ndarray = v) -> np.ndarray:
+                y, w, level = z[None, :k], z[k : 2 * k], z[2 * k :]
+                J = one.jacobian(y, level)[0]  # type: ignore[attr-defined]
+                return np.concatenate([one.residual(y, level)[0], J @ w, [v @ w - 1.0]])  # type: ignore[attr-defined]
+
+            found[i, f] = fsolve(equations, np.concatenate([start[i], v, [fold.at]]), xtol=1e-11)[-1]
+    return found
+
+
+if __name__ == "__main__":
+    parser = argparse.ArgumentParser()
+    parser.add_argument("--quick", action="store_true", help="one repeat, fewer samples")
+    quick = parser.parse_args().quick
+    traces(1 if quick else 5)
+    trips(1 if quick else 5, 1000 if quick else 10_000, 10 if quick else 100)
