@@ -788,11 +788,18 @@ def injective(problem: Problem, boxes: Boxes) -> NDArray[np.bool_]:
 
 @dataclass(frozen=True, eq=False)
 class Certified:
-    """Points with proof of existence: good: (b,); x: (b, n) centre; spread: (b, n) half widths within which one solution lies."""
+    """Points with proof of existence: good: (b,); x: (b, n) centre; spread: (b, n) half widths within which one solution lies; row_spread:
+    (b, m) and factor_spread: (b, q) the same of w and of u of the product rows, with what cancels in a difference of x left out."""
 
     good: NDArray[np.bool_]
     x: Array
     spread: Array
+    row_spread: Array
+    factor_spread: Array
+
+    def boxes(self, problem: Problem) -> Boxes:
+        """The sets that were mapped into themselves, with everything that follows from them."""
+        return boxes_about(problem, self.x, self.spread, self.row_spread, self.factor_spread)
 
 
 def newton_points(problem: Problem, x: Array) -> Array:
@@ -818,10 +825,15 @@ def newton_points(problem: Problem, x: Array) -> Array:
 
 
 def certify(problem: Problem, x: Array) -> Certified:
-    """Existence by Krawczyk: the box x +/- spread is mapped into itself by x - N F + (I - N J)(box - x)."""
+    """Existence by Krawczyk: the set |x' - x| <= spread, |W (x' - x)| <= row_spread, |V (x' - x)| <= factor_spread, which is convex, is
+    mapped into itself by x - N F + (I - N J)(x' - x).
+
+    Bounds of w of their own keep what cancels in a difference of two unknowns that move together.
+    """
     n, m = problem.n, problem.m
     g, b, w, v = problem.magnitudes
     q = problem.product
+    v = v[q]
     size_x = np.abs(x)
     at = problem.layout
     here = boxes_over(problem, x, x)
@@ -830,7 +842,7 @@ def certify(problem: Problem, x: Array) -> Certified:
     _, _, _, _, s, s_rad = problem.centres
     k = n + 2 * m + 8
     residual = _times(problem.G, x) + _times(problem.B, p_mid) - s
-    residual_rad = (_times(g, size_x) + _times(b, np.abs(p_mid)) + np.abs(s)) * gamma(k) + s_rad
+    rounding = (_times(g, size_x) + _times(b, np.abs(p_mid)) + np.abs(s)) * gamma(k)
     a = problem.rows.slope(middle(here.low[:, at.w], here.high[:, at.w])) if m else np.zeros((len(x), 0))
     f = np.zeros_like(a)
     if len(q):
@@ -842,20 +854,32 @@ def certify(problem: Problem, x: Array) -> Certified:
     matrix = problem.G + problem.B @ lines
     inverse = invert(matrix)
     size_n = np.abs(inverse)
-    through = np.abs(inverse @ problem.B)
+    through = inverse @ problem.B
     size_b = _times(b, p_rad)
-    shift = (
-        np.abs(_times(inverse, residual))
-        + _times(through, p_rad)
-        + _times(size_n, residual_rad + (np.abs(residual) + size_b) * gamma(k))
-    )
-    shift = up(shift * (1.0 + gamma(k))) + np.maximum(size_x * (2.0 * UNIT), TINY)
-    spread = shift * 2.0
+    # what the rounding of N, of the residual and of their products can do, x by x
+    inexact = _times(size_n, rounding + (np.abs(residual) + size_b + s_rad) * gamma(k))
+    floor = np.maximum(size_x * (2.0 * UNIT), TINY)
+    # x itself, then W x and V x, whose rows are multiplied into N before any magnitude is taken
+    views = [
+        (inverse, through, np.eye(n)),
+        (problem.W @ inverse, problem.W @ through, w),
+        (problem.V[q] @ inverse, problem.V[q] @ through, v),
+    ]
+    sizes = [np.abs(t) for _, t, _ in views]
+    shifts = []
+    for (rows, _, own), size in zip(views, sizes, strict=True):
+        moved = np.abs(_times(rows, residual)) + _times(size, p_rad) + _times(np.abs(rows), s_rad) + _times(own, inexact)
+        shifts.append(up(moved * (1.0 + gamma(k))) + _times(own, floor) + TINY)
+    spreads = [shift * 2.0 for shift in shifts]
     good = np.zeros(len(x), dtype=bool)
-    proved = np.any(inverse != 0.0, axis=(1, 2)) & np.all(np.isfinite(spread), axis=1)
-    spread = np.where(np.isfinite(spread), spread, 1.0)
+    proved = np.any(inverse != 0.0, axis=(1, 2))
+    for spread in spreads:
+        proved &= np.all(np.isfinite(spread), axis=1)
+    spreads = [np.where(np.isfinite(spread), spread, 1.0) for spread in spreads]
+    error = np.abs(np.eye(n) - inverse @ matrix)
     for _ in range(INFLATIONS):
-        here = start_points(problem, x, spread)
+        spread, row_spread, factor_spread = spreads
+        here = boxes_about(problem, x, spread, row_spread, factor_spread)
         a_low, a_high = problem.rows.slope_bounds(here.low[:, at.w], here.high[:, at.w]) if m else (a, a)
         if len(q):
             a_low, a_high = a_low.copy(), a_high.copy()
@@ -864,27 +888,58 @@ def certify(problem: Problem, x: Array) -> Certified:
             )
         ar = radius(a_low, a_high, a)
         fr = np.zeros_like(a)
+        move = ar * row_spread
+        steep = (np.abs(a) + ar) * _times(w, spread)
         if len(q):
             fr[:, q] = radius(here.low[:, at.f], here.high[:, at.f], f[:, q])
-        move = ar * _times(w, spread) + fr * _times(v, spread)
-        size_row = _times(g, spread) + _times(
-            b, (np.abs(a) + ar) * _times(w, spread) + (np.abs(f) + fr) * _times(v, spread)
-        )
-        error = _times(np.abs(np.eye(n) - inverse @ matrix), spread)
-        image = (
-            shift
-            + error
-            + _times(through, move)
-            + _times(size_n, size_row + _times(b, move)) * (3.0 * gamma(k))
-        )
-        image = up(image * (1.0 + gamma(k))) + TINY
-        inside = np.all(image < spread, axis=1) & proved & ~good
+            move[:, q] += fr[:, q] * factor_spread
+            steep[:, q] += (np.abs(f[:, q]) + fr[:, q]) * _times(v, spread)
+        size_row = _times(g, spread) + _times(b, steep)
+        loose = _times(error, spread) + _times(size_n, size_row + _times(b, move)) * (3.0 * gamma(k))
+        images = [
+            up((shift + _times(own, loose) + _times(size, move)) * (1.0 + gamma(k))) + TINY
+            for shift, size, (_, _, own) in zip(shifts, sizes, views, strict=True)
+        ]
+        inside = proved & ~good
+        for image, spread in zip(images, spreads, strict=True):
+            inside &= np.all(image < spread, axis=1)
         good |= inside
         if np.all(good | ~proved):
             break
-        grow = ~good[:, None] & (image < 1e6 * (1.0 + size_x))
-        spread = np.where(grow, np.maximum(image * 1.2, spread), spread)
-    return Certified(good, x, spread)
+        grow = ~good[:, None]
+        spreads = [
+            np.where(grow & (image < 1e6 * (1.0 + largest)), np.maximum(image * 1.2, spread), spread)
+            for image, spread, largest in zip(
+                images, spreads, (size_x, _times(w, size_x), _times(v, size_x)), strict=True
+            )
+        ]
+    return Certified(good, x, *spreads)
+
+
+def boxes_about(problem: Problem, x: Array, spread: Array, row_spread: Array, factor_spread: Array) -> Boxes:
+    """The boxes x +/- spread with w within row_spread and u within factor_spread of their middles as well; no contraction."""
+    zero = spread == 0.0
+    x_low, x_high = np.where(zero, x, down(x - spread)), np.where(zero, x, up(x + spread))
+    if problem.m == 0:
+        return Boxes(x_low, x_high)
+    q = problem.product
+    w_low, w_high = _about(problem.W, x, problem.c_low, problem.c_high, row_spread)
+    f_low, f_high = problem.rows.bounds(w_low, w_high)
+    if len(q) == 0:
+        return Boxes(np.concatenate([x_low, w_low, f_low], axis=1), np.concatenate([x_high, w_high, f_high], axis=1))
+    u_low, u_high = _about(problem.V[q], x, problem.d_low[q], problem.d_high[q], factor_spread)
+    p_low, p_high = f_low.copy(), f_high.copy()
+    p_low[:, q], p_high[:, q] = multiply(f_low[:, q], f_high[:, q], u_low, u_high)
+    return Boxes(
+        np.concatenate([x_low, w_low, p_low, u_low, f_low[:, q]], axis=1),
+        np.concatenate([x_high, w_high, p_high, u_high, f_high[:, q]], axis=1),
+    )
+
+
+def _about(matrix: Array, x: Array, c_low: Array, c_high: Array, spread: Array) -> tuple[Array, Array]:
+    """matrix @ x + [c] +/- spread: (b, r)."""
+    low, high = _affine(matrix, x, x, c_low, c_high)
+    return down(low - spread), up(high + spread)
 
 
 def start_points(problem: Problem, x: Array, spread: Array) -> Boxes:
@@ -1080,7 +1135,7 @@ def _settle(state: _Search, boxes: Boxes) -> NDArray[np.bool_]:
                 damped_points(problem, middle(part.low[:, at.x], part.high[:, at.x])),
             )
             certified = certify(problem, points)
-        joined = join(part, start_points(problem, certified.x, certified.spread))
+        joined = join(part, certified.boxes(problem))
         # one to one over the hull of the box and the point: the point is the only solution either holds
         closed = certified.good & injective(problem, joined)
         for i in np.flatnonzero(closed):

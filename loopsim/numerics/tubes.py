@@ -25,6 +25,7 @@ from loopsim.numerics.prune import (
     Boxes,
     Index,
     Problem,
+    boxes_about,
     boxes_over,
     certify,
     damped_points,
@@ -38,7 +39,6 @@ from loopsim.numerics.prune import (
     relax,
     split,
     stack,
-    start_points,
     take,
 )
 
@@ -124,7 +124,7 @@ def region(problem: Problem, x: Array, direction: Array, size: Array) -> Region 
         sure = certify(arc, x[None])
         if sure.good[0]:
             for room in ROOM:
-                here = start_points(arc, sure.x, sure.spread * room)
+                here = boxes_about(arc, sure.x, sure.spread * room, sure.row_spread * room, sure.factor_spread * room)
                 if injective(arc, here)[0]:
                     return Region(here.low[0, arc.n :], here.high[0, arc.n :], row, reach, x)
         stretch *= 0.5
@@ -264,7 +264,7 @@ def _settle(work: _Work, boxes: Boxes) -> NDArray[np.bool_]:
         sure = certify(held, newton_points(held, start))
         if not sure.good.all():
             sure = certify(held, np.where(sure.good[:, None], sure.x, damped_points(held, start)))
-        joined = join(part, start_points(held, sure.x, sure.spread))
+        joined = join(part, sure.boxes(held))
         # one to one over the hull of the box and the tube: the tube is the only solution that either holds, level by level
         closed = sure.good & injective(problem, joined)
         for i in np.flatnonzero(closed):
