@@ -2,8 +2,8 @@
 
     OMP_NUM_THREADS=1 python tests/benchmarks/trace.py [--quick]
 
-Times are processor time of this process on one thread, the median of a few repeats; compare the rows of one run, not runs. The peer for trip
-points is `scipy.optimize.fsolve` in a loop over samples, given the same fold equations (F = 0, J v = 0, l . v = 1) in as few unknowns.
+Times are processor time of this process on one thread, the median of a few repeats; compare the rows of one run, not runs. The peer for
+trip points is `scipy.optimize.fsolve` in a loop over samples, given the same fold equations (F = 0, J v = 0, l . v = 1) in as few unknowns.
 """
 
 from __future__ import annotations
