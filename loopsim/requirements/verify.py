@@ -13,6 +13,7 @@ from loopsim.equations.structure import check
 from loopsim.errors import AnalysisError, CircuitError, MissingExtra
 from loopsim.expressions import evaluate
 from loopsim.requirements.computed import Computed
+from loopsim.requirements.corners import place
 from loopsim.requirements.judged import Judged, open_question
 from loopsim.requirements.measures import measure
 from loopsim.requirements.outcomes import RequirementOutcome
@@ -71,8 +72,8 @@ def _over_bindings(computed: Computed, requirement: Requirement, settings: Mappi
         return open_question(error.message)
     found = []
     for bound in bindings:
-        place = ", ".join(f"{name} = {value:.6g}" for name, value in bound.items()) if len(bindings) > 1 else ""
-        found.append(_at(computed, requirement, {**settings, **bound}).at(place))
+        where = place(computed.circuit, bound) if len(bindings) > 1 else ""
+        found.append(_at(computed, requirement, {**settings, **bound}).at(where))
     worst = min(found, key=lambda judged: judged.badness)
     return replace(worst, proof=weakest([judged.proof for judged in found])) if worst.outcome == "met" else worst
 
