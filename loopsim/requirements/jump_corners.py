@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeAlias
 
-from loopsim.analyses.trip_points import trip_points
+import numpy as np
+from numpy.typing import NDArray
+
+from loopsim.analyses.trip_points import TripPoints, trip_points
 from loopsim.circuit import Requirement
 from loopsim.equations.assemble import is_affine
 from loopsim.errors import AnalysisError
@@ -20,8 +23,11 @@ from loopsim.requirements.proof import CORNERS
 if TYPE_CHECKING:
     from loopsim.analyses.trace import Trace
 
+Array: TypeAlias = NDArray[np.float64]
+
 AGREE = 1e-6  # of the range: how near the followed and the traced threshold must be
-FARTHEST = 0.25  # of the range: a fold that moved by more than this is not trusted to be the same one: the corner is traced
+CURVED = 0.5  # of what the sensitivities add up to: a fold further from where they put it may be another one, and the corner is traced
+NEAR = 1e-3  # of the range, more
 
 
 @dataclass
@@ -42,9 +48,9 @@ class Followed:
         return self.computed.trace(self.requirement.along, self.settings)
 
     def prepare(self, corners: Sequence[Corner]) -> None:
-        """Solve the folds of many corners together; those that Newton loses, or finds far away, are left to full traces."""
+        """Solve the folds of many corners together; those that Newton loses, or finds elsewhere, are left to full traces."""
         assert self.requirement.along is not None
-        curve, net, along = self.nominal, self.requirement.target_text, self.requirement.along
+        curve, along = self.nominal, self.requirement.along
         if not corners or not is_affine(self.computed.circuit, along):
             return
         names = list(dict.fromkeys(name for corner in corners for name in corner))
@@ -54,13 +60,24 @@ class Followed:
             points = trip_points(self.computed.circuit, along, samples=samples, nominal=curve, settings=self.settings)
         except AnalysisError:
             return
-        first, *more = (points.threshold(net, way) for way in ways_of(self.requirement))
-        values = first - more[0] if more else first
-        reach = FARTHEST * (curve.high - curve.low)
-        wanted = getattr(curve.thresholds(net), JUMPS[self.requirement.measure])
-        for corner, value in zip(corners, values, strict=True):
-            if abs(value - wanted) < reach:
+        values, expected, slack = self._solved(points)
+        for corner, value, guess, room in zip(corners, values, expected, slack, strict=True):
+            if abs(value - guess) < room:
                 self.moved[_key(corner)] = float(value)
+
+    def _solved(self, points: TripPoints) -> tuple[Array, Array, Array]:
+        """(k,) each: the measure at the samples, what the sensitivities let expect, and how far from that it may be to be the same fold."""
+        net, curve = self.requirement.target_text, self.nominal
+        values, expected, reach = np.zeros(len(points.samples)), np.zeros(len(points.samples)), np.zeros(len(points.samples))
+        plain = self.computed.values(self.settings)
+        steps = points.samples - np.array([float(plain[name]) for name in points.parameters])
+        for sign, way in zip((1.0, -1.0), ways_of(self.requirement), strict=False):
+            slopes = points.sensitivity(net, way)
+            moves = steps * np.array([slopes[name] for name in points.parameters])
+            values += sign * points.threshold(net, way)
+            expected += sign * (getattr(curve.thresholds(net), way) + moves.sum(axis=1))
+            reach += np.abs(moves).sum(axis=1)
+        return values, expected, CURVED * reach + NEAR * (curve.high - curve.low)
 
     def __call__(self, corner: Corner) -> Judged:
         """A full trace at the nominal corner and wherever the folds could not be moved."""

@@ -10,6 +10,7 @@ from __future__ import annotations
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
+from loopsim.analyses.stability import judge
 from loopsim.circuit import Requirement
 from loopsim.equations.assemble import assemble
 from loopsim.errors import AnalysisError
@@ -38,11 +39,20 @@ def settling(computed: Computed, requirement: Requirement, settings: Settings) -
     start = requirement.start or _own_start(computed, requirement, settings)
     moving = bool(assemble(computed.circuit, settings).timed)
     paces = RAMPS if start == "off" and not moving and requirement.measure != "settling time" else RAMPS[:1]
-    tried = [judge_run(computed.run(start, settings, pace), requirement, limits) for pace in paces]
+    tried = [_tried(computed, requirement, settings, limits, computed.run(start, settings, pace)) for pace in paces]
     worst = min(tried, key=lambda judged: judged.badness)
     numbers = sorted(value for judged in tried for value in judged.measured)
     same = not numbers or numbers[-1] - numbers[0] <= SAME * max(abs(numbers[-1]), abs(numbers[0]))
     return worst if same else replace(worst, measured=(numbers[0], numbers[-1]))
+
+
+def _tried(computed: Computed, requirement: Requirement, settings: Settings, limits: Limits, run: Transient) -> Judged:
+    """One run judged. Long steps damp what grows, so that a run can come to rest where the circuit cannot stay: the end is judged first."""
+    if run.end_state or run.end == "settles":
+        (verdict,) = judge(assemble(computed.circuit, settings), run.path.end_x[None])
+        if verdict.stable is not True:
+            return open_question(f"from {run.start} it {run.end}, a point that is {verdict.text}", limits)
+    return judge_run(run, requirement, limits)
 
 
 def _own_start(computed: Computed, requirement: Requirement, settings: Settings) -> str:
@@ -64,9 +74,6 @@ def judge_run(run: Transient, requirement: Requirement, limits: Limits) -> Judge
         return Judged("violated", (), limits, None, f"from {run.start} it never comes to rest: it {run.end}", SIMULATED)
     if not (run.end_state or run.end == "settles"):
         return open_question(f"from {run.start}: {run.end} after {run.times[-1]:.4g} s", limits)
-    unstable = [note for note in run.notes if "unstable" in note]
-    if unstable:
-        return open_question(f"from {run.start}: {unstable[0]}", limits)
     ramp = "".join(f"; {note}" for note in run.notes if note.startswith("supplies came up"))
     if requirement.measure == "settling time":
         value = run.settling_time(net, BAND)

@@ -121,6 +121,12 @@ def test_a_start_from_a_state_is_that_state():
     assert (unknown.outcome, unknown.note[:27]) == ("undecided", "start: there is no state Q")
 
 
+def test_a_run_that_rests_on_an_unstable_point_decides_nothing():
+    outcome = one(PUMP, "expect final value of out in 4 V .. 5 V from B")
+    assert outcome.outcome == "undecided"
+    assert "unstable" in outcome.note
+
+
 def test_which_of_several_stable_states_a_waveform_starts_in_has_to_be_said():
     text = PUMP.replace("gnd -> probe: level", "gnd -> probe: ramp(from = level, to = 8 V, start = 1 us, duration = 1 ms)")
     open_start, said = asked(text, "expect final value of out > 8 V", "expect final value of out > 8 V from A")
