@@ -60,18 +60,18 @@ def run(request: Request, around: Surroundings) -> Answer:
     selected = [chosen(circuit, select) for circuit in circuits]
     if request.has("list"):
         return _listing(request, circuits, selected, mistakes)
-    if not any(circuit.requirements for circuit in selected):
-        return _nothing(request, circuits, mistakes)
     with _journal(request, selected) as (journal, remarks), progress(around, "verify") as tell:
         found = _verified(request, selected, journal, tell)
     if found.interrupted:
         signal.signal(signal.SIGINT, signal.SIG_DFL)  # the second one stops at once
     changes = _compared(request, stored, found, mistakes)
-    codes = [CODES[outcome.outcome] for outcome in found.outcomes]
+    codes = [CODES[outcome.outcome] for outcome in found.outcomes] or [Exit.NOTHING]
     codes += [TROUBLE_CODES.get(circuit.trouble.kind, Exit.UNDECIDED) for circuit in found.circuits if circuit.trouble]
     codes += [Exit.MISTAKE] * bool(mistakes) + [Exit.INTERRUPTED] * found.interrupted
-    codes += [Exit.VIOLATED] * any(change.kind == "vanished" for change in changes)
+    codes += [Exit.VIOLATED] * any(change.kind == "vanished" for change in changes or ())
     remarks += _remarks(request, found, mistakes, journal)
+    if not any(circuit.requirements for circuit in selected) and not mistakes:
+        remarks.append(_why_nothing(request, circuits))
     units = {(c.file, r.label): r.unit for c in selected for r in c.requirements}
     for written, code in _files(request, stored, found, mistakes, units):
         remarks.append(written)
@@ -153,7 +153,7 @@ def _text(
     around: Surroundings,
     found: LibraryRun,
     mistakes: Sequence[CircuitError],
-    changes: Sequence[Moved],
+    changes: Sequence[Moved] | None,
     units: Units,
 ) -> str:
     if request.has("json"):
@@ -162,12 +162,12 @@ def _text(
             "summary": found.summary,
             "mistakes": _mistake_entries(mistakes),
             "interrupted": found.interrupted,
-            "changes": [change.to_dict() for change in changes] if request.has("baseline") else None,
+            "changes": None if changes is None else [change.to_dict() for change in changes],
         }
         return _document(request, body)
     text = verify_text(found.outcomes, units, around.answers)
     lines = annotation_lines(found.outcomes, mistakes) if request.has("annotations") else ""
-    if request.has("baseline"):
+    if changes is not None:
         text += baseline_section(changes, request.get("baseline"))
     return text + lines
 
@@ -203,7 +203,7 @@ def _files(
         "csv": lambda: verify_csv(found.outcomes),
         "summary": lambda: verify_markdown(found.outcomes, units),
     }
-    if request.has("accept") and not (found.interrupted or mistakes):
+    if request.has("accept") and found.outcomes and not (found.interrupted or mistakes):
         path = request.get("baseline")
         makers["baseline"] = lambda: baseline_text(_renewed(request, stored or {}, found, path))
     elif request.has("accept"):
@@ -230,9 +230,10 @@ def _stored_baseline(request: Request) -> dict[Place, Entry] | None:
 
 def _compared(
     request: Request, stored: dict[Place, Entry] | None, found: LibraryRun, mistakes: Sequence[CircuitError]
-) -> tuple[Moved, ...]:
+) -> tuple[Moved, ...] | None:
+    """What differs from the baseline; None where there is none yet."""
     if stored is None:
-        return ()
+        return None
     path = request.get("baseline")
     met = {(seen_from(path, outcome.file or ""), outcome.label) for outcome in found.outcomes}
     unread = {seen_from(path, mistake.file) for mistake in mistakes if mistake.file}
@@ -261,17 +262,6 @@ def _listing(
         body = {"listed": [dict(zip(names, row, strict=True)) for row in rows], "mistakes": _mistake_entries(mistakes)}
         return _answer(_document(request, body), codes, remarks)
     return _answer(listing_text(rows), codes, remarks)
-
-
-def _nothing(request: Request, circuits: Sequence[Circuit], mistakes: Sequence[CircuitError]) -> Answer:
-    """No requirement at all: never green."""
-    found = LibraryRun(mistakes=tuple(mistakes))
-    remarks = [*(str(mistake) for mistake in mistakes), _why_nothing(request, circuits)]
-    codes = [Exit.NOTHING, *([Exit.MISTAKE] if mistakes else [])]
-    for written, code in _files(request, None, found, mistakes, {}):
-        remarks.append(written)
-        codes.append(code)
-    return _answer(_text(request, Surroundings(), found, mistakes, (), {}), codes, remarks)
 
 
 def _why_nothing(request: Request, circuits: Sequence[Circuit]) -> str:

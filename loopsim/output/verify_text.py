@@ -15,7 +15,7 @@ from loopsim.requirements.baseline import Moved
 from loopsim.requirements.outcomes import RANK, RequirementOutcome
 
 MANY_VALUES = 3  # measured values that are shown in a row
-LONG_TEXT = 72  # characters shown of a requirement that is met; the others are shown whole
+LONG_TEXT = 52  # characters of a requirement that a row has room for
 MARKDOWN_MARKS = str.maketrans({mark: f"\\{mark}" for mark in "\\`*_{}[]()<>#+-!|~$@:"})
 
 KINDS = ("moved", "appeared", "vanished")
@@ -46,7 +46,7 @@ def verify_text(outcomes: Sequence[RequirementOutcome], units: Units | None = No
     for o in order:
         unit = found.get((o.file, o.label), "")
         text = o.text.removeprefix("expect ")
-        shown = text if o.outcome != "met" or len(text) <= LONG_TEXT else f"{text[: LONG_TEXT - 4]} ..."
+        shown = text if len(text) <= LONG_TEXT else f"{text[: LONG_TEXT - 4]} ..."
         margin = None if _exact(o) and o.outcome == "met" else o.margin
         rows.append((o.outcome, o.circuit, shown, _values(o, unit), _number(margin, unit), o.proof or "-"))
     lines: list[str] = []
@@ -56,6 +56,8 @@ def verify_text(outcomes: Sequence[RequirementOutcome], units: Units | None = No
         for o, line in zip(order, rest, strict=True):
             mark = palette.alarm if o.outcome == "violated" else palette.strong if o.outcome == "undecided" else palette.calm
             lines.append(line.replace(o.outcome, mark(o.outcome), 1))
+            if o.outcome != "met" and len(o.text.removeprefix("expect ")) > LONG_TEXT:
+                lines.append(palette.faint(f"    all: {printable(o.text)}"))
             if o.note:
                 lines.append(palette.faint(f"    why: {printable(o.note)}"))
         lines.append("")

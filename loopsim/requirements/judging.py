@@ -62,6 +62,7 @@ def task_text(circuit: Circuit, options: Options) -> str:
 
 def judge(task: str, attempt: int = 1) -> str:
     """The record of a task, for any executor. attempt: so that one that runs equal calls only once runs a second attempt."""
+
     asked = json.loads(task)
     options = Options(**asked["options"])
     try:

@@ -188,6 +188,13 @@ def killed(jobs: str, moment: Callable[[], None]) -> int:
     return len(read_lines(JOURNAL.read_bytes())[0]) if JOURNAL.exists() else 0
 
 
+def put_down(circuits: int) -> None:
+    """Wait until a run has put down so many."""
+    deadline = time.monotonic() + 60.0
+    while not (JOURNAL.exists() and JOURNAL.read_bytes().count(b"\n") > circuits) and time.monotonic() < deadline:
+        time.sleep(0.001)
+
+
 def put_down_once(circuits: int) -> bool:
     """Whether the journal holds every circuit once."""
     content = JOURNAL.read_bytes()
@@ -201,12 +208,7 @@ needs_kill = pytest.mark.skipif(not hasattr(signal, "SIGKILL"), reason="needs SI
 def test_a_killed_run_goes_on_to_the_same_report(library: Path) -> None:
     whole = finished("1")
 
-    def first_is_put_down() -> None:
-        deadline = time.monotonic() + 60.0
-        while not (JOURNAL.exists() and JOURNAL.read_bytes().count(b"\n") > 1) and time.monotonic() < deadline:
-            time.sleep(0.001)
-
-    assert 1 <= killed("1", first_is_put_down) < 4
+    assert 1 <= killed("1", lambda: put_down(1)) < 4
     assert finished("1") == whole
     assert put_down_once(4)
 
@@ -221,9 +223,17 @@ def test_runs_killed_fifty_times_at_random_moments_go_on_to_the_same_report(tmp_
     lasts = time.monotonic() - began
     draw = random.Random(20)
     within = 0
-    for _ in range(50):
-        done = killed("2", lambda: time.sleep(draw.uniform(0.2, 1.0) * lasts))
+    for number in range(50):
+
+        def moment(number: int = number) -> None:
+            if number % 2:
+                time.sleep(draw.uniform(0.2, 1.0) * lasts)
+            else:
+                put_down(draw.randrange(12))
+                time.sleep(draw.uniform(0.0, 0.02))
+
+        done = killed("2", moment)
         within += 0 < done < 12
         assert finished("2") == whole
         assert put_down_once(12)
-    assert within > 5  # else the moments show nothing
+    assert within > 12  # else the moments show nothing
