@@ -22,6 +22,11 @@ expect third: values of middle = 1.67 V +/- 10 mV
 """
 
 
+# an inner run forgets what it imported, and NumPy bears no second import
+for _name in ("loopsim.analyses.states", "loopsim.requirements.verify", "loopsim.language.load"):
+    importlib.import_module(_name)
+
+
 @pytest.fixture
 def run(pytester: pytest.Pytester, monkeypatch: pytest.MonkeyPatch):
     """pytest over circuits/pump.loop; a bare checkout names the plugin, an installed one brings it."""
@@ -29,8 +34,6 @@ def run(pytester: pytest.Pytester, monkeypatch: pytest.MonkeyPatch):
     folder = pytester.mkdir("circuits")
     (folder / "pump.loop").write_text(GOOD.format(name="pump"), encoding="utf-8")
     (folder / "kinds.loop").write_text("# nothing to expect here\nkind ohms = resistor(resistance = 1 ohm)\n", encoding="utf-8")
-    for name in ("loopsim.analyses.states", "loopsim.requirements.verify", "loopsim.language.load"):
-        importlib.import_module(name)  # NumPy bears no second import, which an inner run would make after the first one's end
     return lambda *words: pytester.runpytest_inprocess(*PLUGIN, *words)
 
 
