@@ -14,7 +14,8 @@ class RequirementOutcome:
 
     measured: values [SI], sorted; limits: (low, high) of each target [SI], None where open; margin: distance to the nearest limit [SI],
     negative where violated, None where it has none; seconds: wall time; note: where it went wrong or why it is undecided;
-    file, line: of its `expect`; proof: what a met or violated one rests on (`loopsim.requirements.proof`), empty where undecided.
+    file, line: of its `expect`; proof: what the numbers rest on (`loopsim.requirements.proof`), empty where nothing was
+    decided.
     """
 
     circuit: str
