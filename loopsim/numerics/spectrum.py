@@ -19,6 +19,7 @@ Complex: TypeAlias = NDArray[np.complex128]
 RANK = 1e-11  # a singular value of the equilibrated C below this share of the largest is a zero: capacitors of 1 aF beside 1 F
 SINGULAR = 1e-13  # reciprocal condition of an equilibrated block below which it is treated as singular
 ROUNDING = 20.0 * 2.0**-53  # backward error of the eigenvalue solver, relative to the norm
+UNIT = 2.0**-53  # unit roundoff of IEEE double
 
 
 @dataclass(frozen=True, eq=False)
@@ -65,26 +66,51 @@ def spectra(jacobians: Array, dynamics: Array) -> list[Spectrum]:
     if n == 0 or not np.any(dynamics):
         return [none] * batch
     rows, columns = equilibrate(dynamics)
-    left, sigma, right = np.linalg.svd(dynamics * rows[:, None] * columns)
+    balanced = dynamics * rows[:, None] * columns
+    left, sigma, right = np.linalg.svd(balanced)
     rank = int(np.count_nonzero(sigma > RANK * sigma[0]))
     # x = columns * right.T y, equations times left.T rows
-    a = -(left.T @ (jacobians * rows[:, None] * columns[None, :]) @ right.T)
-    a11, a12, a21, a22 = a[:, :rank, :rank], a[:, :rank, rank:], a[:, rank:, :rank], a[:, rank:, rank:]
+    scaled = jacobians * rows[:, None] * columns[None, :]
+    a = -(left.T @ scaled @ right.T)
+    rounded = (2 * n + 6) * UNIT * (np.abs(left.T) @ np.abs(scaled) @ np.abs(right.T))
     e = sigma[:rank]
+    # what is left of C beside the singular values, and the rounding of this very product
+    beside = np.abs(left.T @ balanced @ right.T - np.diag(sigma))
+    beside += (2 * n + 6) * UNIT * (np.abs(left.T) @ np.abs(balanced) @ np.abs(right.T))
+    unsure = beside[:rank, :rank] / e[:, None]
     if rank == n:
-        return _ordinary(a11 / e[:, None])
-    r, c = equilibrate(a22)
-    block = a22 * r[:, :, None] * c[:, None, :]
+        return _ordinary(a / e[:, None], rounded / e[:, None], unsure)
+    r, c = equilibrate(a[:, rank:, rank:])
+    block = a[:, rank:, rank:] * r[:, :, None] * c[:, None, :]
     singular = np.linalg.svd(block, compute_uv=False)
     regular = singular[:, -1] > SINGULAR * singular[:, 0]
-    inner = np.linalg.solve(block[regular], a21[regular] * r[regular][:, :, None])
-    reduced = (a11[regular] - (a12[regular] * c[regular][:, None, :]) @ inner) / e[:, None]
+    reduced, slips = _eliminated(a[regular], rounded[regular], block[regular], r[regular], c[regular])
     found: list[Spectrum] = [none] * batch
-    for i, spectrum in zip(np.flatnonzero(regular), _ordinary(reduced), strict=True):
+    for i, spectrum in zip(
+        np.flatnonzero(regular), _ordinary(reduced / e[:, None], slips / e[:, None], unsure), strict=True
+    ):
         found[i] = spectrum
     for i in np.flatnonzero(~regular):
-        found[i] = _constrained(a11[i], a12[i], a21[i], a22[i], e)
+        found[i] = _constrained(a[i, :rank, :rank], a[i, :rank, rank:], a[i, rank:, :rank], a[i, rank:, rank:], e)
     return found
+
+
+def _eliminated(a: Array, rounded: Array, block: Array, r: Array, c: Array) -> tuple[Array, Array]:
+    """a11 - a12 a22^-1 a21, and a first-order bound of what rounding did to each of its entries: (batch, rank, rank) both.
+
+    a: (batch, n, n) with a22 = block / (r c) its lower right part; rounded: the bound for the entries of a. The solve is charged with a
+    backward error in each row of the block (N. J. Higham, Accuracy and Stability of Numerical Algorithms, ch. 9, from memory).
+    """
+    size = block.shape[-1]
+    rank = a.shape[-1] - size
+    r, c = r[:, :, None], c[:, None, :]
+    a12, a21 = a[:, :rank, rank:] * c, a[:, rank:, :rank] * r
+    inner = np.linalg.solve(block, a21)
+    solved = 3.0 * size * UNIT * np.abs(block).max(axis=-1, keepdims=True) + rounded[:, rank:, rank:] * r * c
+    inner_error = np.abs(np.linalg.inv(block)) @ (rounded[:, rank:, :rank] * r + solved @ np.abs(inner))
+    product = rounded[:, :rank, rank:] * c + (size + 2) * UNIT * np.abs(a12)
+    slips = rounded[:, :rank, :rank] + product @ np.abs(inner) + np.abs(a12) @ inner_error
+    return a[:, :rank, :rank] - a12 @ inner, np.asarray(slips)
 
 
 def _constrained(a11: Array, a12: Array, a21: Array, a22: Array, e: Array) -> Spectrum:
@@ -103,7 +129,8 @@ def _constrained(a11: Array, a12: Array, a21: Array, a22: Array, e: Array) -> Sp
     if mass.shape[0] != mass.shape[1] or np.linalg.cond(mass) > 1.0 / SINGULAR:
         # deeper constraints than index 2: nothing is claimed
         return Spectrum(np.array([0.0 + 0.0j]), np.array([np.inf]))
-    return _ordinary(np.linalg.solve(mass, matrix)[None])[0]
+    reduced = np.linalg.solve(mass, matrix)[None]
+    return _ordinary(reduced, np.zeros_like(reduced), np.zeros_like(reduced[0]))[0]
 
 
 def _null(matrix: Array) -> Array:
@@ -115,29 +142,31 @@ def _null(matrix: Array) -> Array:
     return np.asarray(right[rank:].T)
 
 
-def _ordinary(matrices: Array) -> list[Spectrum]:
-    """Eigenvalues of each M from M and from its inverse, the more accurate one each."""
+def _ordinary(matrices: Array, slips: Array, unsure: Array) -> list[Spectrum]:
+    """Eigenvalues of each M from M and from its inverse, the more accurate one each.
+
+    slips: (batch, r, r) bound of what rounding did to each entry of M before; unsure: (r, r) bound of E where M stands for (1 + E)^-1 M.
+    """
     if len(matrices) == 0:
         return []
-    forward, forward_error = _eigen(matrices)
+    slips = slips + unsure @ np.abs(matrices)
+    forward, forward_error, drift = _eigen(matrices, slips)
+    forward_error = forward_error + drift
     backward, backward_error = np.full(forward.shape, np.nan + 0j), np.full(forward.shape, np.inf)
     with np.errstate(all="ignore"):
-        clear = (
-            np.isfinite(np.linalg.cond(matrices))
-            if matrices.shape[1]
-            else np.zeros(len(matrices), dtype=bool)
-        )
+        clear = np.isfinite(np.linalg.cond(matrices)) if matrices.shape[1] else np.zeros(len(matrices), dtype=bool)
         if np.any(clear):
             inverse = np.linalg.inv(matrices[clear])
             finite = np.isfinite(inverse).all(axis=(1, 2))
             rows = np.flatnonzero(clear)[finite]
             if len(rows):
-                mu, mu_error = _eigen(inverse[finite])
+                # what rounding did to the inverse is charged as a backward error of each entry of M; its eigenvectors are those of M, so
+                # they say what the slips of M do as well
+                charged = slips[rows] + 3.0 * matrices.shape[1] * UNIT * np.abs(matrices[rows])
+                mu, mu_error, drift = _eigen(inverse[finite], charged)
                 lam = 1.0 / np.where(mu == 0.0, np.nan, mu)
                 backward[rows] = lam
-                # the inverse itself was rounded: its relative error is the condition number times the unit roundoff, entrywise small for
-                # graded matrices; charge it once more
-                backward_error[rows] = 2.0 * np.abs(lam) ** 2 * mu_error
+                backward_error[rows] = 2.0 * np.abs(lam) ** 2 * mu_error + drift
     found = []
     for one, one_error, two, two_error in zip(forward, forward_error, backward, backward_error, strict=True):
         order_one, order_two = (
@@ -161,12 +190,13 @@ def _ordinary(matrices: Array) -> list[Spectrum]:
     return found
 
 
-def _eigen(matrices: Array) -> tuple[Complex, Array]:
-    """Eigenvalues with first-order error bounds: the solver's backward error times the condition of each eigenvalue.
+def _eigen(matrices: Array, slips: Array) -> tuple[Complex, Array, Array]:
+    """(eigenvalues, first-order bounds: the solver's backward error times the condition of each eigenvalue, what entrywise changes up to
+    `slips` do to an eigenvalue with these eigenvectors).
 
     Rows and columns are balanced by powers of two first, which is exact.
     """
-    balanced = np.array(matrices)
+    balanced, moved = np.array(matrices), np.array(slips)
     for _ in range(4):
         off = np.abs(balanced) * (1.0 - np.eye(balanced.shape[1]))
         rows, columns = off.sum(axis=2), off.sum(axis=1)
@@ -176,6 +206,7 @@ def _eigen(matrices: Array) -> tuple[Complex, Array]:
             )
         factor = np.where(np.isfinite(factor) & (factor > 0.0), factor, 1.0)
         balanced = balanced * factor[:, :, None] / factor[:, None, :]
+        moved = moved * factor[:, :, None] / factor[:, None, :]
     values, vectors = np.linalg.eig(balanced)
     values, vectors = values.astype(complex), vectors.astype(complex)
     norm = np.linalg.norm(balanced, axis=(1, 2))
@@ -183,7 +214,10 @@ def _eigen(matrices: Array) -> tuple[Complex, Array]:
         try:
             dual = np.linalg.inv(vectors)
             condition = np.linalg.norm(dual, axis=2) * np.linalg.norm(vectors, axis=1)
+            drift = np.sum((np.abs(dual) @ moved) * np.swapaxes(np.abs(vectors), 1, 2), axis=2)
         except np.linalg.LinAlgError:
             condition = np.full(values.shape, 1e8)
+            drift = 1e8 * np.linalg.norm(moved, axis=(1, 2))[:, None] * np.ones(values.shape)
     condition = np.where(np.isfinite(condition), np.clip(condition, 1.0, 1e8), 1e8)
-    return values, ROUNDING * norm[:, None] * condition
+    drift = np.where(np.isfinite(drift), 2.0 * drift, np.inf)  # twice: room for the growth of rounding in an elimination
+    return values, ROUNDING * norm[:, None] * condition, drift
