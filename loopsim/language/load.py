@@ -10,8 +10,10 @@ from pathlib import Path
 from loopsim.circuit import Circuit
 from loopsim.errors import CircuitError, Span
 from loopsim.language import tree as t
-from loopsim.language.builder import Definitions, build, define, statement_place
+from loopsim.language.builder import build
+from loopsim.language.definitions import Definitions, define
 from loopsim.language.mistakes import nearest
+from loopsim.language.names import statement_place
 from loopsim.language.parser import MAX_CHARACTERS, Source, statements
 
 MAX_FILES = 200  # parts files that one circuit may draw in
