@@ -4,7 +4,6 @@ who finished first."""
 from __future__ import annotations
 
 import os
-import re
 from collections import deque
 from collections.abc import Callable, Generator, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Executor, Future, wait
@@ -33,7 +32,7 @@ from loopsim.requirements.workers import WorkerPool
 
 WINDOW = 3  # tasks handed out for each worker: enough that none waits, few enough that an interrupt leaves little behind
 PARTS = "parts"  # a folder of this name holds definitions, no circuits
-_CIRCUIT = re.compile(r"^\s*circuit\b", re.MULTILINE)
+DEFINITIONS = ("use", "kind", "curve", "block")
 
 DEFAULTS = Options()
 
@@ -134,9 +133,9 @@ def verify_circuits(
     try:
         with closing(_judged(tasks, to_do, jobs or cores(), executor)) as judged:
             for number, record in judged:
+                records[number] = record
                 if journal and not trouble:
                     trouble = _put(journal, keys[number], record)
-                records[number] = record
                 if progress:
                     progress(len(records) / len(tasks))
         if journal and not trouble:
@@ -262,22 +261,23 @@ def read_library(
     mistakes: list[CircuitError] = []
     for path, named in circuit_files(paths):
         try:
-            if named or _holds_circuit(path):
+            if named or _meant_as_circuit(path):
                 circuits.append(read(path))
         except CircuitError as error:
             mistakes.append(error)
     return circuits, mistakes
 
 
-def _holds_circuit(path: str) -> bool:
-    """Whether a file found in a folder is meant as a circuit: one of definitions only is none. What cannot be
-    read is left to `load` to tell."""
+def _meant_as_circuit(path: str) -> bool:
+    """Whether a file found in a folder is meant as a circuit. Only one that begins with definitions and has neither a circuit nor a
+    requirement is none; whatever else cannot be read is told, so that no requirement gets lost by a slip in its file."""
     try:
-        with open(path, encoding="utf-8", errors="replace") as stream:
+        with open(path, encoding="utf-8") as stream:
             text = stream.read()
-    except OSError:
+    except (OSError, ValueError):
         return True
-    return _CIRCUIT.search(text) is not None or not text.strip()
+    words = [line.split(maxsplit=1)[0] for line in text.splitlines() if line.strip() and not line.lstrip().startswith("#")]
+    return not words or words[0] not in DEFINITIONS or "circuit" in words or "expect" in words
 
 
 def circuit_files(paths: Sequence[str | os.PathLike[str]]) -> list[tuple[str, bool]]:
