@@ -18,7 +18,9 @@ from loopsim.equations.ordering import Block, blocks
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError
 from loopsim.numerics.enclosure import TINY, down, gamma, multiply, up
-from loopsim.numerics.prune import Found, Problem, invert, search
+from loopsim.numerics.problem import Problem
+from loopsim.numerics.prune import Found, search
+from loopsim.numerics.relaxation import invert
 
 Array: TypeAlias = NDArray[np.float64]
 

@@ -24,7 +24,9 @@ from loopsim.equations.structure import check
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError, InternalError
 from loopsim.expressions import NetRef, references
-from loopsim.numerics.prune import Problem, certify, start_points
+from loopsim.numerics.boxes import start_points
+from loopsim.numerics.certificate import certify
+from loopsim.numerics.problem import Problem
 
 Array: TypeAlias = NDArray[np.float64]
 

@@ -15,9 +15,9 @@ from loopsim.analyses.stability import judge
 from loopsim.analyses.states import whole_problem
 from loopsim.analyses.trace_results import Branch
 from loopsim.errors import InternalError
+from loopsim.numerics.certificate import certify
 from loopsim.numerics.curve import Curve, follow
 from loopsim.numerics.newton import newton
-from loopsim.numerics.prune import certify
 
 Array: TypeAlias = NDArray[np.float64]
 

@@ -15,7 +15,9 @@ from loopsim.analyses.trace_results import Branch, Fold
 from loopsim.devices.phi_rows import rows_of
 from loopsim.equations.ordering import blocks
 from loopsim.errors import InternalError
-from loopsim.numerics.prune import Found, Problem, certify
+from loopsim.numerics.certificate import certify
+from loopsim.numerics.problem import Problem
+from loopsim.numerics.prune import Found
 from loopsim.numerics.tubes import Region, Tubes, all_levels, points_at, region, with_level
 
 Array: TypeAlias = NDArray[np.float64]

@@ -17,32 +17,17 @@ from typing import TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
+from loopsim.numerics.balances import nodal
+from loopsim.numerics.boxes import Boxes, boxes_about, boxes_over, ends, join, stack
+from loopsim.numerics.certificate import certify, damped_points, injective, newton_points
 from loopsim.numerics.enclosure import TINY, UNIT, gamma, middle, radius
-from loopsim.numerics.prune import (
-    MAX_PASSES,
-    PROGRESS,
-    SMALL,
-    Boxes,
-    Index,
-    Problem,
-    boxes_about,
-    boxes_over,
-    certify,
-    damped_points,
-    distinct,
-    ends,
-    hull,
-    injective,
-    join,
-    newton_points,
-    nodal,
-    relax,
-    split,
-    stack,
-    take,
-)
+from loopsim.numerics.hull import hull
+from loopsim.numerics.problem import Problem
+from loopsim.numerics.prune import MAX_PASSES, PROGRESS, SMALL, distinct, split, take
+from loopsim.numerics.relaxation import relax
 
 Array: TypeAlias = NDArray[np.float64]
+Index: TypeAlias = NDArray[np.int64]
 
 LARGEST_STRETCH = 16.0  # scaled arclength on each side: a whole characteristic is 2 to 4 long
 SMALLEST_STRETCH = 1e-7

@@ -5,7 +5,7 @@ import pytest
 from array_systems import Kind, Row, system_of
 
 from loopsim.devices.phi_rows import rows_of
-from loopsim.numerics.prune import Problem
+from loopsim.numerics.problem import Problem
 from loopsim.numerics.tubes import all_levels, points_at, region, with_level
 
 
