@@ -19,6 +19,7 @@ from loopsim.requirements.judged import Judged, number
 from loopsim.requirements.jumps import JUMPS, jumps
 from loopsim.requirements.limits import limits_of
 from loopsim.requirements.proof import CORNERS
+from loopsim.requirements.targets import net_of
 
 if TYPE_CHECKING:
     from loopsim.analyses.trace import Trace
@@ -67,7 +68,7 @@ class Followed:
 
     def _solved(self, points: TripPoints) -> tuple[Array, Array, Array]:
         """(k,) each: the measure at the samples, what the sensitivities let expect, and how far from that it may be to be the same fold."""
-        net, curve = self.requirement.target_text, self.nominal
+        net, curve = net_of(self.requirement), self.nominal
         values, expected, reach = np.zeros(len(points.samples)), np.zeros(len(points.samples)), np.zeros(len(points.samples))
         plain = self.computed.values(self.settings)
         steps = points.samples - np.array([float(plain[name]) for name in points.parameters])
@@ -89,7 +90,7 @@ class Followed:
         self.seen.append((corner, value))
         limits = limits_of(self.requirement.relation, self.computed.values(here))
         error = AGREE * (self.nominal.high - self.nominal.low)
-        net, along = self.requirement.target_text, self.requirement.along
+        net, along = net_of(self.requirement), self.requirement.along
         where = f"hysteresis {value:.6g}" if self.requirement.measure == "hysteresis" else f"{net} jumps at {along} = {value:.6g}"
         return number(value, error, limits, self.requirement.relation.form, CORNERS, where)
 
@@ -125,5 +126,5 @@ def _confirmed(computed: Computed, requirement: Requirement, here: Settings, val
     """Whether a full trace at a corner, complete at its stations, finds the same threshold."""
     assert requirement.along is not None
     curve = computed.trace(requirement.along, here)
-    traced = getattr(curve.thresholds(requirement.target_text), JUMPS[requirement.measure])
+    traced = getattr(curve.thresholds(net_of(requirement)), JUMPS[requirement.measure])
     return curve.complete and traced is not None and abs(traced - value) <= AGREE * (curve.high - curve.low)

@@ -9,11 +9,11 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from loopsim.circuit import Requirement
-from loopsim.expressions import NetRef
 from loopsim.requirements.computed import Computed, Settings
 from loopsim.requirements.judged import Judged, number, open_question
 from loopsim.requirements.limits import Limits, limits_of
 from loopsim.requirements.proof import PROVED, STATIONS
+from loopsim.requirements.targets import net_of
 
 if TYPE_CHECKING:
     from loopsim.analyses.trace import Fold, Trace
@@ -24,7 +24,7 @@ JUMPS = {"rising threshold": "rising", "falling threshold": "falling", "hysteres
 def jumps(computed: Computed, requirement: Requirement, settings: Settings) -> Judged:
     """Server of `rising threshold`, `falling threshold`, `hysteresis`."""
     limits = limits_of(requirement.relation, computed.values(settings))
-    if requirement.along is None or not isinstance(requirement.target, NetRef):
+    if requirement.along is None or net_of(requirement) not in computed.circuit.nets:
         return open_question(f"{requirement.measure}: only of a net along a let", limits)
     # corners are no proof anyway
     proving = computed.require_proof and not requirement.over_tolerances
@@ -34,7 +34,7 @@ def jumps(computed: Computed, requirement: Requirement, settings: Settings) -> J
 
 def judge_trace(curve: Trace, requirement: Requirement, limits: Limits) -> Judged:
     """The threshold of the requirement's net, judged; undecided unless the states are complete at every station."""
-    net = requirement.target_text
+    net = net_of(requirement)
     known = curve.thresholds(net)
     value: float | None = getattr(known, JUMPS[requirement.measure])
     measured = () if value is None else (value,)
@@ -57,7 +57,7 @@ def _none(curve: Trace, requirement: Requirement, limits: Limits, proof: str) ->
     unlanded = [fold for fold in curve.folds if fold.from_stable and fold.lands is None]
     if unlanded:
         return open_question(f"where the jump at {unlanded[0].at:.6g} lands was not found", limits)
-    net = requirement.target_text
+    net = net_of(requirement)
     ways = ("rising", "falling") if requirement.measure == "hysteresis" else (JUMPS[requirement.measure],)
     small = [fold for fold in curve.folds if fold.from_stable and fold.direction in ways]
     if small:
@@ -77,7 +77,7 @@ def _precision(curve: Trace, measure: str) -> float:
 
 def _where(curve: Trace, requirement: Requirement, value: float) -> str:
     """`out jumps from 0.02 to 8.98 V at level = 5.45`."""
-    net, known = requirement.target_text, curve.thresholds(requirement.target_text)
+    net, known = net_of(requirement), curve.thresholds(net_of(requirement))
     if requirement.measure == "hysteresis":
         return f"{net} jumps at {requirement.along} = {known.rising:.6g} and back at {known.falling:.6g}"
     direction = JUMPS[requirement.measure]

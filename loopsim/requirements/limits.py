@@ -6,7 +6,8 @@ from collections.abc import Mapping, Sequence
 from typing import TypeAlias
 
 from loopsim.circuit import Relation
-from loopsim.expressions import Expression, evaluate
+from loopsim.equations.parameters import number
+from loopsim.expressions import Expression
 
 Pair: TypeAlias = tuple[float | None, float | None]
 Limits: TypeAlias = tuple[Pair, ...]
@@ -28,7 +29,8 @@ def limits_of(relation: Relation, values: Mapping[str, object]) -> Limits:
 
 
 def _number(formula: Expression | None, values: Mapping[str, object]) -> float | None:
-    return None if formula is None else float(evaluate(formula, values))
+    """CircuitError `formula-value` where the formula gives no finite number here."""
+    return None if formula is None else float(number(formula, values, {}, "a limit", None))
 
 
 def room(value: float, limits: Pair) -> float:

@@ -14,12 +14,12 @@ from loopsim.analyses.stability import judge
 from loopsim.circuit import Requirement
 from loopsim.equations.assemble import assemble
 from loopsim.errors import AnalysisError
-from loopsim.expressions import NetRef
 from loopsim.requirements.at_rest import RAMPS
 from loopsim.requirements.computed import Computed, Settings
 from loopsim.requirements.judged import Judged, number, open_question
 from loopsim.requirements.limits import Limits, limits_of
 from loopsim.requirements.proof import SIMULATED
+from loopsim.requirements.targets import net_of
 
 if TYPE_CHECKING:
     from loopsim.analyses.transient import Transient
@@ -34,7 +34,7 @@ DOUBT = 10.0  # times the tolerance of the run: how far a voltage it ends with m
 def settling(computed: Computed, requirement: Requirement, settings: Settings) -> Judged:
     """Server of `start state`, `final value`, `settling time`."""
     limits = limits_of(requirement.relation, computed.values(settings))
-    if not isinstance(requirement.target, NetRef):
+    if net_of(requirement) not in computed.circuit.nets:
         return open_question(f"{requirement.measure}: only of a net", limits)
     start = requirement.start or _own_start(computed, requirement, settings)
     moving = bool(assemble(computed.circuit, settings).timed)
@@ -69,7 +69,7 @@ def _own_start(computed: Computed, requirement: Requirement, settings: Settings)
 
 def judge_run(run: Transient, requirement: Requirement, limits: Limits) -> Judged:
     """The number of the requirement's net in a run that has come to rest, judged."""
-    net = requirement.target_text
+    net = net_of(requirement)
     if run.end.startswith("oscillates"):
         return Judged("violated", (), limits, None, f"from {run.start} it never comes to rest: it {run.end}", SIMULATED)
     if not (run.end_state or run.end == "settles"):
@@ -79,7 +79,7 @@ def judge_run(run: Transient, requirement: Requirement, limits: Limits) -> Judge
         value = run.settling_time(net, BAND)
         where = f"from {run.start}: settles in {value:.6g} s{ramp}"
         return number(value, TIMING * value, limits, requirement.relation.form, SIMULATED, where)
-    value = 0.0 if net == "gnd" else run.final(net)
+    value = run.final(net)
     excursion = float(max(abs(run[net]).max(), abs(value)))
     where = f"from {run.start} it {run.end} with {net} at {value:.6g} V{ramp}"
     return number(value, DOUBT * run.tolerance * excursion, limits, requirement.relation.form, SIMULATED, where)

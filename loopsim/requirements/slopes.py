@@ -12,12 +12,12 @@ from loopsim.analyses.family import Family
 from loopsim.analyses.results import State
 from loopsim.circuit import Requirement
 from loopsim.equations.assemble import pin_currents
-from loopsim.equations.parameters import formula_operations
 from loopsim.errors import AnalysisError
-from loopsim.expressions import CurrentRef, NetRef, evaluate, references
+from loopsim.expressions import CurrentRef, NetRef, references
 from loopsim.requirements.computed import Computed, Settings
 from loopsim.requirements.judged import Judged
 from loopsim.requirements.proof import COMPLETE_LIST
+from loopsim.requirements.targets import value_of
 from loopsim.requirements.values import of_states
 
 Array: TypeAlias = NDArray[np.float64]
@@ -37,13 +37,15 @@ def slope(computed: Computed, requirement: Requirement, settings: Settings) -> J
     others = {name: v for name, v in settings.items() if name != let}
     family = Family(computed.circuit, others, let, value - REACH * size, value + REACH * size)
 
-    def read(state: State) -> tuple[float, float]:
+    def read(state: State) -> tuple[float, float] | None:
         moved = _moved(family, state, value)
         if isinstance(target, NetRef):
             index = family.system(value).index
             return (float(moved[index["net", target.name]]) if target.name != "gnd" else 0.0), 0.0
         h = STEP * size
         ends = [_target_at(computed, requirement, settings, state.x + way * moved, value + way) for way in (-h, h)]
+        if ends[0] is None or ends[1] is None:
+            return None
         return (ends[1] - ends[0]) / (2.0 * h), 0.0
 
     return of_states(computed, requirement, settings, read, COMPLETE_LIST)
@@ -60,7 +62,7 @@ def _moved(family: Family, state: State, value: float) -> Array:
     return np.asarray(np.linalg.solve(matrix / rows[:, None], -family.slope(state.x, value) / rows))
 
 
-def _target_at(computed: Computed, requirement: Requirement, settings: Settings, x: Array, value: float) -> float:
+def _target_at(computed: Computed, requirement: Requirement, settings: Settings, x: Array, value: float) -> float | None:
     """The net or formula after `of` with the let at `value` and the unknowns at x."""
     assert requirement.target is not None
     assert requirement.along is not None
@@ -68,5 +70,4 @@ def _target_at(computed: Computed, requirement: Requirement, settings: Settings,
     lets = computed.values(chosen)
     needs_currents = any(isinstance(reference, CurrentRef) for reference in references(requirement.target))
     currents: Mapping[str, float] = pin_currents(computed.circuit, x, chosen) if needs_currents else {}
-    nets = computed.nets(x)
-    return float(evaluate(requirement.target, lets, nets, currents, formula_operations(lets, computed.circuit.curves)))
+    return value_of(computed.circuit, requirement, lets, computed.nets(x), currents)

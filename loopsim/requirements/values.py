@@ -2,19 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
 
 from loopsim.analyses.results import State, States
-from loopsim.circuit import Circuit, Requirement
-from loopsim.equations.parameters import formula_operations
-from loopsim.expressions import NetRef, evaluate
+from loopsim.circuit import Requirement
+from loopsim.expressions import NetRef
 from loopsim.requirements.computed import Computed, Settings
 from loopsim.requirements.counts import doubt
 from loopsim.requirements.judged import Judged, open_question
 from loopsim.requirements.limits import Limits, best_room, keeps_one, limits_of, pair_text, unmet
 from loopsim.requirements.proof import COMPLETE_LIST, PROVED
+from loopsim.requirements.targets import value_of
 
 
 @dataclass(frozen=True)
@@ -31,8 +30,9 @@ def values(computed: Computed, requirement: Requirement, settings: Settings) -> 
     lets = computed.values(settings)
     exact = isinstance(requirement.target, NetRef)
 
-    def read(state: State) -> tuple[float, float]:
-        return target_value(computed.circuit, requirement, lets, state), state.certified_radius
+    def read(state: State) -> tuple[float, float] | None:
+        found = value_of(computed.circuit, requirement, lets, state.nets, state.currents)
+        return None if found is None else (found, state.certified_radius)
 
     return of_states(computed, requirement, settings, read, PROVED if exact else COMPLETE_LIST)
 
@@ -49,13 +49,6 @@ def damping(computed: Computed, requirement: Requirement, settings: Settings) ->
 
 def _or_none(value: float | None) -> tuple[float, float] | None:
     return None if value is None else (value, 0.0)
-
-
-def target_value(circuit: Circuit, requirement: Requirement, lets: Mapping[str, Any], state: State) -> float:
-    """The net or formula after `of` at a state [SI]."""
-    assert requirement.target is not None
-    operations = formula_operations(lets, circuit.curves)
-    return float(evaluate(requirement.target, lets, dict(state.nets), dict(state.currents), operations))
 
 
 def of_states(
@@ -93,7 +86,7 @@ def judge_readings(
         note = f"state {worst.state.name} ({worst.state.verdict}): {worst.value:.6g}"
         return Judged("violated", measured, limits, left, note, proof)
     if missing:
-        return open_question(f"state {', '.join(missing)} has no {requirement.measure}", limits, measured)
+        return open_question(f"{requirement.measure}: no number in state {', '.join(missing)}", limits, measured)
     if outside:
         name = outside[0][1].state.name
         return open_question(f"state {name} is outside its limits but not proved to be there", limits, measured)

@@ -9,9 +9,9 @@ from dataclasses import replace
 
 from loopsim.circuit import Circuit, Requirement
 from loopsim.equations.assemble import parameter_values
+from loopsim.equations.parameters import number
 from loopsim.equations.structure import check
 from loopsim.errors import AnalysisError, CircuitError, MissingExtra
-from loopsim.expressions import evaluate
 from loopsim.requirements.computed import Computed
 from loopsim.requirements.corners import place
 from loopsim.requirements.judged import Judged, open_question
@@ -81,7 +81,10 @@ def _over_bindings(computed: Computed, requirement: Requirement, settings: Mappi
 def _bindings(circuit: Circuit, requirement: Requirement, settings: Mapping[str, float]) -> list[dict[str, float]]:
     """Every combination of the `at` values [SI]."""
     values = parameter_values(circuit, settings)
-    choices = [[float(evaluate(formula, values)) for formula in formulas] for _, formulas in requirement.at]
+    choices = [
+        [float(number(formula, values, {}, "a binding", requirement.span)) for formula in formulas]
+        for _, formulas in requirement.at
+    ]
     names = [let for let, _ in requirement.at]
     return [dict(zip(names, chosen, strict=True)) for chosen in itertools.product(*choices)]
 

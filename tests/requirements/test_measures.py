@@ -46,6 +46,13 @@ u1: amp(plus = gnd, minus = minus, out = out, high = vcc, low = vee)
         ("growth rate > 0 Hz", "violated", "complete list"),
         ("damping > 0.5", "undecided", ""),
         ("phase margin > 45", "undecided", ""),
+        ("values of sqrt((mid - vcc) / vcc) = 1", "undecided", ""),
+        ("values of mid / (supply - vcc) > 1", "undecided", ""),
+        ("values of mid > supply / (supply - 9 V) * 1 V", "undecided", ""),
+        ("states = 3 at level = supply / (supply - 9 V) * 1 V", "undecided", ""),
+        ("rising threshold of gnd along level > 1 V", "undecided", ""),
+        ("final value of gnd = 0 V", "undecided", ""),
+        ("rising threshold of (out) along level > 5 V", "met", "complete at 11 stations"),
     ],
 )
 def test_measures_of_states(line, outcome, proof):
