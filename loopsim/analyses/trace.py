@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -18,7 +19,7 @@ from numpy.typing import NDArray
 from loopsim.analyses.family import Family
 from loopsim.analyses.points import Points
 from loopsim.analyses.states import watched
-from loopsim.analyses.trace_curves import branch, curves, matching
+from loopsim.analyses.trace_curves import branch, closed_curves, curves, matching, starts_of, strangers
 from loopsim.analyses.trace_levels import levels_of, prove_range, states_at
 from loopsim.analyses.trace_results import Branch, Crossing, Fold, Thresholds, Trace
 from loopsim.analyses.trace_ride import thresholds, travel_of
@@ -27,6 +28,7 @@ from loopsim.circuit import Circuit
 from loopsim.equations.assemble import let_range, parameter_values
 from loopsim.equations.structure import check
 from loopsim.errors import CircuitError
+from loopsim.numerics.curve import Curve
 
 Array: TypeAlias = NDArray[np.float64]
 
@@ -62,24 +64,53 @@ def trace(
     proved = states_at(family, levels, values, box, deadline)
     scale = _scale(family, proved, high - low)
     index = {name: j for j, (kind, name) in enumerate(family.system(low).unknowns) if kind == "net"}
-    branches = [branch(family, curve, index) for curve in curves(family, values, proved, scale, deadline)]
-    matched, notes = matching(family, branches, values, proved, scale)
-    others = crossings(family, branches, index, scale)
-    turns, lost = folds(family, branches, [c for c in others if c.kind == "branch point"], index, scale)
-    per_net = thresholds(family, branches, turns, {net: travel_of(branches, net) for net in index}, scale)
-    over_range, gaps = False, tuple[tuple[float, float], ...]()
-    # where branches cross no box closes, however small
-    crossing = any(c.kind == "branch point" for c in others)
-    if len(matched) == len(values) and not lost and not crossing and range_budget > 0.0:
-        until = min(deadline, time.monotonic() + range_budget)
-        over_range, gaps = prove_range(family, levels, values, branches, turns, scale, until)
+    lines = curves(family, starts_of(values, proved), (), scale, deadline)
+    drawn = _drawn(family, lines, index, scale)
+    matched, notes = matching(family, drawn.branches, values, proved, scale)
+    covered = None
+    until = min(deadline, time.monotonic() + range_budget)
+    while levels is not None and len(matched) == len(values) and drawn.provable and time.monotonic() < until:
+        covered = prove_range(family, levels, values, drawn.branches, drawn.folds, scale, until)
+        # states that were proved on the way may lie on a closed curve between two stations
+        more = closed_curves(family, strangers(drawn.branches, covered.x, covered.values, scale), lines, scale, deadline)
+        if len(more) == len(lines):
+            break
+        lines, covered = more, None
+        drawn = _drawn(family, lines, index, scale)
+    travel = {net: travel_of(drawn.branches, net) for net in index}
+    per_net = thresholds(family, drawn.branches, drawn.folds, travel, scale)
+    gaps = covered.gaps if covered is not None and covered.finished else ()
     parameter = circuit.parameters[along]
     return Trace(
         circuit.name, circuit.file, along, parameter.unit, low, high,
-        {name: float(v) for name, v in parameter_values(circuit, settings).items()}, nets, tuple(branches), turns, others, per_net,
+        {name: float(v) for name, v in parameter_values(circuit, settings).items()}, nets,
+        drawn.branches, drawn.folds, drawn.crossings, per_net,
         tuple((float(v), len(p.x)) for v, p in zip(values, proved, strict=True)), tuple(float(v) for v in matched),
-        tuple(float(v) for v in values), over_range, gaps, time.monotonic() - began, (*notes, *lost), scale,
+        tuple(float(v) for v in values), covered is not None and covered.complete, gaps, time.monotonic() - began, (*notes, *drawn.lost),
+        scale,
     )  # fmt: skip
+
+
+@dataclass(frozen=True, eq=False)
+class _Drawn:
+    """Branches with everything that was located on them. lost: a line for each turn that could not be located."""
+
+    branches: tuple[Branch, ...]
+    folds: tuple[Fold, ...]
+    crossings: tuple[Crossing, ...]
+    lost: tuple[str, ...]
+
+    @property
+    def provable(self) -> bool:
+        """Whether a proof over the range can end: where branches cross no box closes, however small."""
+        return not self.lost and all(c.kind != "branch point" for c in self.crossings)
+
+
+def _drawn(family: Family, lines: Sequence[Curve], index: Mapping[str, int], scale: Array) -> _Drawn:
+    branches = tuple(branch(family, curve, index) for curve in lines)
+    others = crossings(family, branches, index, scale)
+    turns, lost = folds(family, branches, [c for c in others if c.kind == "branch point"], index, scale)
+    return _Drawn(branches, turns, others, lost)
 
 
 def _range(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import TypeAlias
 
 import numpy as np
@@ -16,37 +17,77 @@ from loopsim.analyses.states import whole_problem
 from loopsim.analyses.trace_results import Branch
 from loopsim.errors import InternalError
 from loopsim.numerics.certificate import certify
-from loopsim.numerics.curve import Curve, follow
+from loopsim.numerics.curve import Curve, correct, follow
 from loopsim.numerics.newton import newton
 
 Array: TypeAlias = NDArray[np.float64]
 
 SAME = 1e-6  # scaled distance at which a proved state and a point of a curve are one; both are known to 1e-9
+NEAREST = 4  # stretches of a curve that are tried for a state
+REACH = 0.1  # scaled distance beyond which a stretch is none of a state's
+CLEARLY_ON = 1e-4  # scaled distance from the straight line between two traced points at which no finer test is needed
 
 
-def curves(
-    family: Family, values: Array, proved: Sequence[Points], scale: Array, deadline: float
-) -> list[Curve]:
-    """Every curve through a proved state, each once, ends joined: from low or from an inner start to both of its ends."""
-    found: list[Curve] = []
-    order = [0, len(values) - 1, *range(1, len(values) - 1)]
-    for station in order:
-        value = float(values[station])
-        for x in proved[station].x:
-            if any(_passes(family, curve, x, value, scale) for curve in found):
-                continue
-            if time.monotonic() > deadline:
-                return found
-            # from an end of the range only the way inward is wanted
-            outward = 1.0 if station == len(values) - 1 else -1.0
-            inward = follow(family, x, value, -outward, family.low, family.high, scale, deadline)
-            if inward.end == "closed" or station in (0, len(values) - 1):
-                found.append(inward)
-                continue
-            found.append(
-                _joined(follow(family, x, value, outward, family.low, family.high, scale, deadline), inward)
-            )
-    return [_cut(family, curve, scale) for curve in found]
+@dataclass(frozen=True, eq=False)
+class Start:
+    """A proved state that some curve has to pass. x: (n,); value: of the let; at_end: +1, -1 at the high, low end of the range, else 0."""
+
+    x: Array
+    value: float
+    at_end: int = 0
+
+
+def starts_of(values: Array, proved: Sequence[Points]) -> list[Start]:
+    """The proved states, those at the ends of the range first: a curve from there is followed once."""
+    last = len(values) - 1
+    ends = {0: -1, last: 1}
+    order = [0, last, *range(1, last)]
+    return [Start(x, float(values[k]), ends.get(k, 0)) for k in order for x in proved[k].x]
+
+
+def curves(family: Family, starts: Sequence[Start], known: Sequence[Curve], scale: Array, deadline: float) -> list[Curve]:
+    """The known curves and every other one through a start, each once, from one of its ends to the other."""
+    found = list(known)
+    for start in starts:
+        if any(_passes(family, curve, start.x, start.value, scale) for curve in found):
+            continue
+        if time.monotonic() > deadline:
+            break
+        # from an end of the range only the way inward is wanted
+        outward = 1.0 if start.at_end > 0 else -1.0
+        curve = follow(family, start.x, start.value, -outward, family.low, family.high, scale, deadline)
+        if curve.end != "closed" and not start.at_end:
+            curve = _joined(follow(family, start.x, start.value, outward, family.low, family.high, scale, deadline), curve)
+        found.append(_cut(family, curve, scale))
+    return found
+
+
+def closed_curves(family: Family, starts: Sequence[Start], known: Sequence[Curve], scale: Array, deadline: float) -> list[Curve]:
+    """The known curves and every closed one through a start. A curve that reaches an end of the range is known: all states are, there."""
+    found = list(known)
+    for curve in curves(family, starts, known, scale, deadline)[len(known) :]:
+        steepest = int(np.argmax(np.abs(curve.tangent[:, -1])))
+        again = any(_passes(family, other, curve.x[steepest], float(curve.level[steepest]), scale) for other in found)
+        if curve.end == "closed" and not again:
+            found.append(curve)
+    return found
+
+
+def strangers(branches: Sequence[Branch], x: Array, values: Array, scale: Array) -> list[Start]:
+    """Those of the proved states x (k, n) at values (k,) of the let that lie on no branch as far as straight lines between its points
+    tell; which of them really do, `curves` decides."""
+    found = []
+    for state, value in zip(x, values.tolist(), strict=True):
+        near = False
+        for branch in branches:
+            d = branch.values - value
+            for i in np.flatnonzero(d[:-1] * d[1:] <= 0.0):
+                share = 0.0 if d[i] == d[i + 1] else d[i] / (d[i] - d[i + 1])
+                between = branch.x[i] + share * (branch.x[i + 1] - branch.x[i])
+                near |= bool(np.max(np.abs(between - state) / scale[:-1]) < CLEARLY_ON)
+        if not near:
+            found.append(Start(state, value))
+    return found
 
 
 def _joined(back: Curve, ahead: Curve) -> Curve:
@@ -112,7 +153,28 @@ def _crossings(family: Family, level: Array, points: Array, value: float) -> lis
 
 
 def _passes(family: Family, curve: Curve, x: Array, value: float, scale: Array) -> bool:
-    return any(float(np.max(np.abs(y - x) / scale[:-1])) < SAME for y in crossings_of(family, curve, value))
+    """Whether a curve goes through a state: the curve is brought into the plane across it that holds the state, which works at a fold too,
+    and compared there."""
+    n = len(x)
+    points = np.column_stack([curve.x, curve.level]) / scale
+    state = np.append(x, value) / scale
+    if len(points) < 2:
+        return bool(np.max(np.abs(points[0] - state)) < SAME)
+    step = np.diff(points, axis=0)
+    length = np.linalg.norm(step, axis=1)
+    along = step / np.where(length > 0.0, length, 1.0)[:, None]
+    shares = np.clip(np.sum((state - points[:-1]) * along, axis=1), 0.0, length)
+    feet = points[:-1] + shares[:, None] * along
+    distance = np.linalg.norm(feet - state, axis=1)
+    for i in np.argsort(distance)[:NEAREST]:
+        if distance[i] > REACH:
+            break
+        # the plane through the state itself, also beyond the ends of a stretch
+        foot = points[i] + float((state - points[i]) @ along[i]) * along[i]
+        found = correct(family, foot[:n] * scale[:n], float(foot[n] * scale[n]), scale, along[i], 1.0)
+        if found is not None and float(np.max(np.abs(np.append(found[0], found[1]) / scale - state))) < SAME:
+            return True
+    return False
 
 
 def branch(family: Family, curve: Curve, index: Mapping[str, int]) -> Branch:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import time
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TypeAlias
@@ -18,13 +19,12 @@ from loopsim.errors import InternalError
 from loopsim.numerics.certificate import certify
 from loopsim.numerics.problem import Problem
 from loopsim.numerics.prune import Found
-from loopsim.numerics.tubes import Region, Tubes, all_levels, points_at, region, with_level
+from loopsim.numerics.tubes import MAX_BOXES, Region, Tubes, all_levels, points_at, region, with_level
 
 Array: TypeAlias = NDArray[np.float64]
 
 JOINT_GROUPS = 2  # groups with nonlinear rows that are still searched together: k of them multiply their states
 SOURCE_ROUNDING = 4e-15  # relative: s along the let is a straight line through two assemblies, each rounded a few times
-NARROW = 2e-4  # of the range: a stretch that stays open is no wider where only a fold lies in it
 ON_TUBE = 1e-6  # of the picture: a traced point this near to a tube is in it
 
 
@@ -83,24 +83,33 @@ def _points(levels: Levels, found: Tubes, value: float) -> Points:
     return Points(x[:, :-1], spread[:, :-1], len(doubts), doubts, found.boxes, levels.groups)
 
 
+@dataclass(frozen=True, eq=False)
+class Covered:
+    """What a proof over the range came to. gaps: intervals of the let that it could not settle, none where every state for every value is
+    known; finished: it was not ended by its budget. x, values: (k, n), (k,) one state of each tube and the value of the let there."""
+
+    gaps: tuple[tuple[float, float], ...]
+    finished: bool
+    x: Array
+    values: Array
+
+    @property
+    def complete(self) -> bool:
+        """Every state for every value of the let lies in a tube or on a stretch of a traced curve."""
+        return self.finished and not self.gaps
+
+
 def prove_range(
-    family: Family,
-    levels: Levels | None,
-    values: Array,
-    branches: Sequence[Branch],
-    folds: Sequence[Fold],
-    scale: Array,
-    deadline: float,
-) -> tuple[bool, tuple[tuple[float, float], ...]]:
-    """(every value of the let is covered but for the gaps, the gaps). values: edges of the pieces to begin with.
+    family: Family, levels: Levels, values: Array, branches: Sequence[Branch], folds: Sequence[Fold], scale: Array, deadline: float
+) -> Covered:
+    """Every state for every value of the let. values: edges of the pieces to begin with.
 
     Around each fold a region is proved to hold the traced curve alone, then every box of states and values outside is shown empty or to
-    hold one state for each of its values. A gap is a short stretch about a fold whose region could not be proved.
+    hold one state for each of its values. Where nothing is left, no branch is missing: a state outside the regions lies in a tube, tubes go
+    on until an end of the range or a region, and a closed curve would have folds of its own, at which no tube can be.
     """
-    if levels is None:
-        return False, ()
     with np.errstate(all="ignore"):
-        regions = [_region(levels, branches[f.branch], f, scale) for f in folds]
+        regions = [_region(levels, f, scale) for f in folds]
     known = [one for one in regions if one is not None]
     pieces = len(values) - 1
     limits = np.tile(levels.limits, (pieces, 1))
@@ -112,15 +121,13 @@ def prove_range(
         deadline=deadline,
     )
     gaps = _merged(found.open[:, :, -1], 1e-9 * scale[-1])
-    width = NARROW * scale[-1]
-    at_folds = all(high - low <= width and any(low - width <= f.at <= high + width for f in folds) for low, high in gaps)
-    if not at_folds:
-        return False, ()
-    _nothing_excluded(levels, found, known, branches, gaps, scale)
-    return True, gaps
+    finished = found.boxes < MAX_BOXES and time.monotonic() < deadline
+    if finished:
+        _nothing_excluded(levels, found, known, branches, gaps, scale)
+    return Covered(gaps, finished, found.x[:, :-1], found.x[:, -1])
 
 
-def _region(levels: Levels, branch: Branch, found: Fold, scale: Array) -> Region | None:
+def _region(levels: Levels, found: Fold, scale: Array) -> Region | None:
     return region(levels.problem, np.append(found.x, found.at), np.append(found.direction_of_curve, 0.0), scale)
 
 
@@ -166,4 +173,4 @@ def _pinned(problem: Problem, point: Array) -> Problem:
     return problem.with_sources(np.append(s[:-1], point[-1])[None], np.append(s_rad[:-1], 0.0)[None])
 
 
-__all__ = ["Levels", "levels_of", "prove_range", "states_at"]
+__all__ = ["Covered", "Levels", "levels_of", "prove_range", "states_at"]

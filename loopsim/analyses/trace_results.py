@@ -104,8 +104,8 @@ class Thresholds:
 class Trace:
     """The characteristic of a circuit along a let.
 
-    complete_at: values of the let at which the states were proved complete and all lie on the branches. over_range: every value of the let
-    was covered by the proof but for `gaps`, short intervals around folds, mostly none. notes: doubts.
+    complete_at: values of the let at which the states were proved complete and all lie on the branches. over_range: proved for every
+    value of the let. gaps: where that proof ran to its end but could not settle these intervals. notes: doubts.
     """
 
     circuit: str

@@ -56,8 +56,9 @@ def _counts(curve: Trace) -> str:
 def _known(curve: Trace) -> str:
     cost = shortest(curve.seconds, "s", 2)
     if curve.over_range:
-        reach = "over the range" if not curve.gaps else f"over the range but for {counted(len(curve.gaps), 'gap')} at folds"
-        return f"complete {reach} ({cost})"
+        return f"complete over the range ({cost})"
+    if curve.complete and curve.gaps:
+        return f"complete at {len(curve.stations)} stations, undecided in {counted(len(curve.gaps), 'gap')} between them ({cost})"
     if curve.complete:
         return f"complete at {len(curve.stations)} stations, found between them ({cost})"
     return f"undecided: complete at {len(curve.complete_at)} of {len(curve.stations)} stations ({cost})"
@@ -130,7 +131,7 @@ def _gap_notes(curve: Trace) -> list[str]:
     if not named:
         return []
     more = f" and {len(curve.gaps) - GAPS} more" if len(curve.gaps) > GAPS else ""
-    return [f"not covered by the proof over the range: {', '.join(named)}{more}"]
+    return [f"not settled by the proof over the range: {', '.join(named)}{more}"]
 
 
 def trace_csv(curve: Trace) -> str:

@@ -290,6 +290,20 @@ def test_two_gates_on_one_float_each_have_thresholds_of_their_own() -> None:
     assert sea.hysteresis == pytest.approx(land.hysteresis, abs=5e-3) == pytest.approx(4.9 * 10 / 47, abs=0.03)
 
 
+def test_a_closed_curve_between_two_stations_is_found_by_the_proof() -> None:
+    """Two level switches have nine states where both may be on or off (a product of three and three); a part of them lies on a closed
+    curve that no station meets and no ride reaches."""
+    circuit = loopsim.load("circuits/comparators/tide_gauge_gates.loop")
+    without = circuit.trace("tide", range_budget=0.0)
+    assert [branch.closed for branch in without.branches] == [False] and not without.over_range
+    curve = circuit.trace("tide", budget=120.0, range_budget=100.0)
+    assert sorted(branch.closed for branch in curve.branches) == [False, True]
+    assert curve.over_range and curve.gaps == ()
+    assert len(circuit.states(tide=2.75)) == 9
+    crossed = sum(int(np.count_nonzero(np.diff(np.sign(branch.values - 2.75)))) for branch in curve.branches)
+    assert crossed == 9
+
+
 def test_what_cannot_be_traced_is_said() -> None:
     circuit = loopsim.parse(CURVE)
     with pytest.raises(CircuitError, match="unknown-let"):

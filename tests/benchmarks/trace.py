@@ -26,7 +26,7 @@ import loopsim  # noqa: E402
 from loopsim.analyses.family import Family  # noqa: E402
 from loopsim.analyses.points import all_points  # noqa: E402
 from loopsim.analyses.trace import _scale  # noqa: E402
-from loopsim.analyses.trace_curves import curves  # noqa: E402
+from loopsim.analyses.trace_curves import curves, starts_of  # noqa: E402
 from loopsim.analyses.trip_points import _line  # noqa: E402
 from loopsim.equations.assemble import let_range  # noqa: E402
 from loopsim.equations.condensed import arguments, condense  # noqa: E402
@@ -64,7 +64,7 @@ def traces(repeats: int) -> None:
         follow = timed(lambda c=circuit, a=along: _followed(c, a), repeats) / points
         matrix, right = np.random.default_rng(0).standard_normal((n, n)) + n * np.eye(n), np.ones(n)
         solve = timed(lambda m=matrix, r=right: [np.linalg.solve(m, r) for _ in range(1000)], repeats) / 1000
-        covered = "all" if curve.over_range and not curve.gaps else f"but {len(curve.gaps)} gaps" if curve.over_range else "no"
+        covered = "all" if curve.over_range else f"{len(curve.gaps)} gaps" if curve.gaps else "no"
         print(
             f"| {Path(file).stem} along {along} | {len(curve.folds)} | {points} | {1e3 * stations:.0f} | {1e3 * whole:.0f} | {covered} |"
             f" {1e6 * follow:.0f} | {1e6 * solve:.0f} |"
@@ -78,7 +78,7 @@ def _followed(circuit: loopsim.Circuit, along: str) -> None:
         family = Family(circuit, {}, along, low, high)
         values = np.linspace(low, high, 11)
         proved = [all_points(family.system(float(value)), 1e3) for value in values]
-        KNOWN[circuit.name] = (family, values, proved, _scale(family, proved, high - low))
+        KNOWN[circuit.name] = (family, starts_of(values, proved), (), _scale(family, proved, high - low))
     curves(*KNOWN[circuit.name], np.inf)
 
 
