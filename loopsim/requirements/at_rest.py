@@ -40,11 +40,13 @@ def run_to_rest(
     from loopsim.analyses.transient import transient
 
     last, first = waveform_ends(assemble(circuit, settings).timed)
-    constant = slowest(found) or NO_DYNAMICS
+    listed = list(found)
+    constant = slowest(listed) or NO_DYNAMICS
+    begin: State | str = next((state for state in listed if state.name == start), start)
     ramp = min(pace * constant, UNNOTICED * first) if first else pace * constant
     for stretch in STRETCHES:
         duration = stretch * (max(SPANS * constant, 2.0 * last) + 2.0 * ramp)
-        run = transient(circuit, duration, start=start, settings=settings, ramp=ramp, progress=tick)
+        run = transient(circuit, duration, start=begin, settings=settings, ramp=ramp, progress=tick)
         if run.end != "still moving":
             break
     return run

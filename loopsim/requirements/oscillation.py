@@ -21,7 +21,7 @@ OSCILLATION = ("period", "frequency", "duty", "swing")
 EXACT = 1e-5  # of a number read off a cycle that shooting made exact: its tolerance is 1e-8, the extremes are sampled
 READ_OFF = 5e-3  # of one read off a run: states that come back count as the same within 2e-3 of their swings
 STILL = 1e-4  # of the largest swing: a net that moves by less takes no part
-SAMPLES = 256  # of a period, in which a net is compared with itself a part of the period later
+SAMPLES = 256  # of a period, for what needs no extremes
 ALIKE = 1e-2  # of its swing: how near that must be
 
 
@@ -52,7 +52,8 @@ def judge_cycle(found: Cycle, requirement: Requirement, limits: Limits) -> Judge
     if found.stable is False:
         return open_question("the cycle that was found is unstable: no circuit stays on it", limits)
     net = requirement.target.name if isinstance(requirement.target, NetRef) else None
-    largest = max(found.swing(name) for name in found.nets)
+    sampled = found.at(np.arange(SAMPLES) / SAMPLES * found.period)
+    largest = max(float(np.ptp(volts)) for volts in sampled.values())
     still = net is not None and _swing(found, net) <= STILL * largest
     if still and requirement.measure != "swing":
         return Judged("violated", (), limits, None, f"{net} does not move in the oscillation", SIMULATED)
