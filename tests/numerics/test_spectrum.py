@@ -92,6 +92,21 @@ def test_rates_lie_within_their_bounds(block, decades):
         assert_within_their_bounds(spectra(J[None], C)[0], exact_rates(J, C))
 
 
+@pytest.mark.parametrize("apart", [1e-4, 1e-7, 1e-9])
+def test_bounds_count_what_was_eliminated(apart):
+    """Two nets without dynamics that nearly decide each other: their elimination blurs the rates, and the bounds say so."""
+    random = np.random.default_rng(65)
+    worst = 0.0
+    for _ in range(20):
+        J = random.normal(size=(4, 4))
+        J[3] = J[2] + np.array([random.normal(), random.normal(), 0.0, apart])
+        C = np.diag([1.0, 2.0, 0.0, 0.0])
+        found, exact = spectra(J[None], C)[0], exact_rates(J, C)
+        assert_within_their_bounds(found, exact)
+        worst = max(worst, float(np.max(np.min(np.abs(exact[:, None] - found.values), axis=1) / np.abs(exact))))
+    assert worst > 1e-18 / apart
+
+
 def test_bounds_are_not_needlessly_wide():
     """Well-conditioned networks: below a billionth of the rate."""
     for seed in range(40):
