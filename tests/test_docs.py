@@ -27,6 +27,7 @@ LINK = re.compile(r"\[[^\]]*\]\(([^)\s]+)\)")
 VARYING = [
     (re.compile(r"\b\d[\d.]* (?:ns|us|ms|s)(?=[,)\n]|$)"), "TIME"),
     (re.compile(r"\b\d+ boxe?s?\b"), "BOXES"),
+    (re.compile(r"\b\d+ steps, \d+ taken back"), "STEPS"),
     (re.compile(r'"(boxes|seconds)": [\d.e+-]+'), r'"\1": COST'),
 ]
 

@@ -5,6 +5,9 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 
+import numpy as np
+from numpy.typing import NDArray
+
 from loopsim.analyses.results import State, States
 from loopsim.circuit import Requirement
 from loopsim.expressions import NetRef
@@ -43,8 +46,15 @@ def growth_rate(computed: Computed, requirement: Requirement, settings: Settings
 
 
 def damping(computed: Computed, requirement: Requirement, settings: Settings) -> Judged:
-    """Server of `damping`: only states with a complex pair have one."""
-    return of_states(computed, requirement, settings, lambda s: _or_none(s.damping), COMPLETE_LIST)
+    """Server of `damping`: the smallest ratio of all modes, so that a growing real one (-1) is not hidden by a pair that decays."""
+    return of_states(computed, requirement, settings, lambda s: _or_none(smallest_ratio(s.eigenvalues)), COMPLETE_LIST)
+
+
+def smallest_ratio(eigenvalues: NDArray[np.complex128]) -> float | None:
+    """-Re / abs of the least damped mode: 1 for a decaying real one, -1 for a growing one; None without modes or with one at zero."""
+    if len(eigenvalues) == 0 or np.any(eigenvalues == 0.0):
+        return None
+    return float(np.min(-eigenvalues.real / np.abs(eigenvalues)))
 
 
 def _or_none(value: float | None) -> tuple[float, float] | None:

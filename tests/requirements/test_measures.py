@@ -44,7 +44,8 @@ u1: amp(plus = gnd, minus = minus, out = out, high = vcc, low = vee)
         ("values of plus - mid in stable states in -1 V .. 1 V", "met", "complete list"),
         ("values of current(r_fb) in stable states in -0.1 mA .. 0.1 mA", "met", "complete list"),
         ("growth rate > 0 Hz", "violated", "complete list"),
-        ("damping > 0.5", "undecided", ""),
+        ("damping > 0.5", "violated", "complete list"),
+        ("damping in stable states > 0.5", "met", "complete list"),
         ("phase margin > 45", "undecided", ""),
         ("values of sqrt((mid - vcc) / vcc) = 1", "undecided", ""),
         ("values of mid / (supply - vcc) > 1", "undecided", ""),
@@ -96,6 +97,15 @@ def test_slope_is_that_of_the_closed_form(line, value):
     outcome = one(INVERTER, f"expect {line}")
     assert (outcome.outcome, outcome.proof) == ("met", "complete list")
     assert outcome.measured[0] == pytest.approx(value, rel=1e-3, abs=1e-4)
+
+
+def test_damping_is_that_of_the_least_damped_mode_real_ones_included():
+    """-1 for the growing mode between the two stable states; 1 where nothing turns; R / 2 sqrt(C / L) of a series tank."""
+    every, stable = asked(PUMP, "expect damping = -1", "expect damping in stable states = 1")
+    assert (every.outcome, stable.outcome) == ("violated", "met")
+    assert min(every.measured) == pytest.approx(-1.0)
+    tank = 'circuit tank "Tank"\ngnd -> feed: 1 V -> top -- r: 200 ohm -- a -- l: 1 mH -- b -- c: 1 nF -- gnd\n'
+    assert one(tank, "expect damping = 0.1 +/- 0.0001").measured == pytest.approx((0.1,), rel=1e-9)
 
 
 def test_slope_in_every_state_or_in_the_stable_ones():
