@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from loopsim.circuit import Circuit, Requirement
     from loopsim.requirements.outcomes import RequirementOutcome
 
-_EXPECT = re.compile(rb"^\s*expect\b", re.MULTILINE)
+_EXPECT = re.compile(rb"^[ \t]*expect\b", re.MULTILINE)
 SPREAD = ("load", "worksteal", "each")  # ways of handing out items that tear those of a file apart
 DEFAULT_BUDGET = "60"  # [s] for each file
 

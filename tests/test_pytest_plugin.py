@@ -107,3 +107,21 @@ def test_settings_of_the_ini_are_read_and_checked(run, pytester: pytest.Pytester
     found = run()
     assert found.ret == pytest.ExitCode.USAGE_ERROR
     assert "loopsim_budget = soon: not a number with s" in found.stderr.str()
+
+
+def test_the_page_on_the_plugin_says_what_happens(pytester: pytest.Pytester, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setenv("PYTHONPATH", str(ROOT))
+    page = (ROOT / "docs/how-to/pytest.md").read_text(encoding="utf-8")
+    for language, text in re.findall(r"^```(\w+)\n(.*?)^```$", page, re.MULTILINE | re.DOTALL):
+        named = re.match(r"# file: (\S+)\n", text)
+        if named:
+            (pytester.path / named[1]).write_text(text, encoding="utf-8")
+        elif language == "ini":
+            pytester.makeini(text)
+        elif language == "text":
+            shown = text.splitlines()
+    found = pytester.runpytest_inprocess(*PLUGIN, "-v")
+    found.assert_outcomes(passed=5, failed=1)
+    said = "\n".join(re.sub(r" +\[.*?%\]$", "", line) for line in found.outlines)
+    for line in shown[1:]:
+        assert line == "..." or line in said, line

@@ -27,7 +27,7 @@ def annotation_lines(outcomes: Sequence[RequirementOutcome], mistakes: Sequence[
 
 def no_order(text: str) -> str:
     """Lines of a log of which none begins as an order to a CI server does, whatever the files are called."""
-    return re.sub(r"^(\s*)([:#])(?=\2)", lambda match: f"{match[1]}\\x{ord(match[2]):02x}", text, flags=re.MULTILINE)
+    return re.sub(r"^([ \t]*)([:#])(?=\2)", lambda match: f"{match[1]}\\x{ord(match[2]):02x}", text, flags=re.MULTILINE)
 
 
 def _said(mistake: CircuitError) -> str:

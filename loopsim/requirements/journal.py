@@ -11,14 +11,10 @@ from __future__ import annotations
 import hashlib
 import json
 import os
-import platform
 from collections.abc import Callable
-from functools import cache
-from importlib import metadata
-from pathlib import Path
 
-from loopsim._version import __version__
 from loopsim.errors import LoopsimError
+from loopsim.requirements.fingerprint import tool
 from loopsim.requirements.judging import Record, read_record
 
 DEFAULT_NAME = ".loopsim-journal"  # in the folder where the run is started
@@ -173,20 +169,3 @@ def _lock(handle: int, path: str) -> None:
 def key_of(task: str) -> str:
     """What a record is filed under: the tool and libraries that made it, and its task: texts, requirements, options."""
     return hashlib.sha256(f"{tool()}\n{task}".encode()).hexdigest()
-
-
-@cache
-def tool() -> str:
-    """Version and code of loopsim, and the versions of what it computes with: a changed solver never vouches
-    for an old answer."""
-    code = hashlib.sha256()
-    package = Path(__file__).parents[1]
-    for path in sorted(package.rglob("*.py")) + sorted(package.rglob("*.lark")):
-        code.update(f"{path.relative_to(package).as_posix()}\n".encode() + path.read_bytes())
-    libraries = [platform.python_version(), platform.machine()]
-    for name in ("numpy", "scipy", "numba"):
-        try:
-            libraries.append(f"{name} {metadata.version(name)}")
-        except metadata.PackageNotFoundError:
-            continue
-    return " ".join([__version__, code.hexdigest(), *libraries])

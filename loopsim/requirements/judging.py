@@ -14,6 +14,7 @@ from typing import Any
 
 from loopsim.circuit import Circuit, Requirement
 from loopsim.errors import CircuitError, InternalError, LoopsimError
+from loopsim.requirements.fingerprint import code
 from loopsim.requirements.outcomes import RequirementOutcome
 from loopsim.requirements.wall import Overrun, last_resort, within_wall
 
@@ -52,6 +53,7 @@ class Record:
 def task_text(circuit: Circuit, options: Options) -> str:
     """The task of judging the requirements that `circuit` holds."""
     task = {
+        "code": code(),
         "file": circuit.file,
         "sources": list(circuit.sources.items()),  # its own text first
         "labels": [requirement.label for requirement in circuit.requirements],
@@ -64,6 +66,8 @@ def judge(task: str, attempt: int = 1) -> str:
     """The record of a task, for any executor. attempt: so that one that runs equal calls only once runs a second attempt."""
 
     asked = json.loads(task)
+    if asked["code"] != code():
+        return record_text(Record(trouble=Trouble("analysis", f"its worker runs another loopsim ({code()[:20]}...)")))
     options = Options(**asked["options"])
     try:
         record = within_wall(options.budget + GRACE, lambda: _judged(asked, options))

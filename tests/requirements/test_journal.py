@@ -3,6 +3,7 @@
 import json
 import os
 import random
+import shutil
 import signal
 import subprocess
 import sys
@@ -14,6 +15,7 @@ from pathlib import Path
 import pytest
 from dividers import circuit_text, write_library
 
+from loopsim.requirements import fingerprint
 from loopsim.requirements import journal as module
 from loopsim.requirements.journal import HEAD, Journal, JournalError, key_of, read_lines
 from loopsim.requirements.judging import Options, Record, Trouble, record_text
@@ -87,9 +89,19 @@ def test_the_key_holds_the_text_of_a_used_file(library: Path) -> None:
     assert run_with("j").remembered == 3
 
 
-def test_the_tool_is_its_code_and_not_only_its_version() -> None:
-    assert module.tool().split()[1:2] != [""] and len(module.tool().split()[1]) == 64
+def test_the_tool_is_its_code_and_not_only_its_version(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    shutil.copytree(ROOT / "loopsim" / "requirements", tmp_path / "loopsim" / "requirements")
+    before = fingerprint.code()
     assert key_of("a") != key_of("b")
+    monkeypatch.setattr(fingerprint, "__file__", str(tmp_path / "loopsim" / "requirements" / "fingerprint.py"))
+    fingerprint.code.cache_clear()
+    copied = fingerprint.code()
+    (tmp_path / "loopsim" / "requirements" / "proof.py").write_text("CHANGED = True\n", encoding="utf-8")
+    fingerprint.code.cache_clear()
+    try:
+        assert len({before, copied, fingerprint.code()}) == 3
+    finally:
+        fingerprint.code.cache_clear()
 
 
 def test_what_stayed_undecided_is_kept_within_a_run_and_tried_again_by_the_next(tmp_path: Path) -> None:

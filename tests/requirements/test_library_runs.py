@@ -161,6 +161,13 @@ def test_a_task_is_text_alone_and_needs_no_file(library: Path) -> None:
     assert [o.outcome for o in read_record(judge(task)).outcomes] == ["met", "met"]
 
 
+def test_a_worker_with_another_loopsim_decides_nothing(library: Path) -> None:
+    (circuit,), _ = read_library([str(library / "d0.loop")])
+    task = json.loads(task_text(circuit, Options()))
+    record = read_record(judge(json.dumps({**task, "code": "0.0.1 abc"})))
+    assert record.outcomes == () and record.trouble is not None and "another loopsim" in record.trouble.message
+
+
 def test_an_interrupt_ends_with_what_is_finished(library: Path) -> None:
     def progress(share: float) -> None:
         if share > 0.4:
