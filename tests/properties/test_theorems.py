@@ -99,6 +99,19 @@ def test_increasing_parts_have_one_point_between_the_supplies(seed):
     assert all(low - 1e-9 <= volts <= high + 1e-9 for volts in found[0].nets.values())
 
 
+def test_no_net_of_a_pair_of_transistors_leaves_the_supplies(pairs):
+    """No-gain networks, A. N. Willson, IEEE Trans. CAS 22 (1975) 678-687: every net lies between the extreme source potentials. The
+    supplies are currents beside resistors: their potential is that of the two without load."""
+    for circuit, found, _ in pairs:
+        fields = {part.name: part.fields for part in circuit.parts}
+        top = max(
+            fields[name]["current"].value * fields[name.replace("_source", "_resistor")]["resistance"].value
+            for name in fields if name.endswith("_source")
+        )  # fmt: skip
+        for point in found:
+            assert all(-1e-9 <= volts <= top + 1e-9 for volts in point.nets.values())
+
+
 @pytest.mark.parametrize("seed", range(10))
 def test_principal_minors_of_a_junction_network_are_not_negative(seed):
     """I. W. Sandberg, A. N. Willson, SIAM J. Appl. Math. 19 (1970): F(v) + A v = b has one solution for every increasing F

@@ -179,6 +179,41 @@ def test_eigenvalues_of_the_wien_bridge(gain):
         assert verdict.text.startswith("unstable with these dynamics")
 
 
+@pytest.mark.parametrize("w0", [1e-2, 1e3, 1e9])
+def test_eigenvalues_of_the_wien_bridge_grow_with_its_frequency(w0):
+    from loopsim.analyses.stability import judge
+
+    for gain in (2.9, 3.1):
+        verdict = judge(bridge(gain, w0=w0), np.zeros((1, 2)))[0]
+        expected = np.roots([1.0, 3.0 - gain, 1.0]) * w0
+        assert np.allclose(np.sort_complex(verdict.eigenvalues), np.sort_complex(expected), rtol=1e-10)
+        assert verdict.stable is (gain < 3)
+
+
+WIEN = """circuit wien "Bridge oscillator with everything in it"
+let top = 21 kohm
+gnd -> upper: 9 V -> vpos
+vneg -> lower: 9 V -> gnd
+out -- r_1: 10 kohm -- joint -- c_1: 10 nF -- plus
+plus -- r_2: 10 kohm -- gnd
+plus -- c_2: 10 nF -- gnd
+out -- r_top: top -- minus -- r_bottom: 10 kohm -- gnd
+u1: opamp(plus = plus, minus = minus, out = out, high = vpos, low = vneg, gain = 1e7, gain_bandwidth = 1 THz, headroom = 50 mV)
+"""
+
+
+@pytest.mark.parametrize("gain", [2.5, 2.9, 3.1, 3.5])
+def test_slow_eigenvalues_of_a_wien_circuit(gain):
+    """The same closed form in a circuit file; the amplifier is fast enough that it moves them by less than 1e-4."""
+    points = loopsim.parse(WIEN).states(top=(gain - 1.0) * 1e4)
+    assert points.complete
+    assert len(points) == 1
+    assert points[0].stable is (gain < 3)
+    w0 = 1e4
+    slow = sorted((v for v in points[0].eigenvalues if abs(v) < 1e6), key=lambda v: v.imag)
+    assert np.allclose(slow, sorted(np.roots([1.0, 3.0 - gain, 1.0]) * w0, key=lambda v: v.imag), rtol=1e-4)
+
+
 def conditional(gain):
     """Closed loop s^3 + K (s + 10)^2 = 0 as a chain of integrators."""
     G = -np.array([[0.0, 1.0, 0.0], [0.0, 0.0, 1.0], [-100.0 * gain, -20.0 * gain, -gain]])
