@@ -9,7 +9,7 @@ import pytest
 import loopsim
 from loopsim.requirements.jumps import JUMPS
 
-FILES = sorted(path for path in Path("circuits").rglob("*.loop") if path.parent.name != "parts")
+FILES = sorted(path for path in (Path(__file__).parents[2] / "circuits").rglob("*.loop") if path.parent.name != "parts")
 SPREAD = [
     (path, requirement.label)
     for path in FILES
