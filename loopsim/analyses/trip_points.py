@@ -17,7 +17,7 @@ from loopsim.analyses.trace import trace
 from loopsim.analyses.trace_results import Fold, Trace
 from loopsim.circuit import Circuit
 from loopsim.equations.assemble import assemble, is_affine, parameter_values, tolerance_limits
-from loopsim.equations.condensed import arguments, condense
+from loopsim.equations.condensed import arguments, condense, good_shift
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError, CircuitError
 from loopsim.numerics.fold_batch import null_vectors, solve_folds
@@ -107,7 +107,9 @@ def trip_points(
     values = _drawn(circuit, samples, seed, fixed) if isinstance(samples, int) else _given(circuit, samples)
     names = tuple(values)
     table = np.column_stack([values[name] for name in names]) if names else np.zeros((1, 0))
-    rows = [_solved(circuit, curve, {**fixed, **dict(zip(names, part.T, strict=True))}, len(part)) for part in _parts(table)]
+    system, _ = _line(circuit, along, curve.low, curve.high, fixed)
+    shift = good_shift(system, curve.folds[0].x)
+    rows = [_solved(circuit, curve, {**fixed, **dict(zip(names, part.T, strict=True))}, shift, len(part)) for part in _parts(table)]
     slopes = _sensitivities(circuit, curve, names, fixed)
     return TripPoints(circuit.name, along, curve.unit, names, curve.folds, table, np.concatenate(rows), slopes, curve)
 
@@ -139,12 +141,12 @@ def _line(circuit: Circuit, along: str, low: float, high: float, settings: Mappi
     return replace(first, s=first.s - low * rise), rise
 
 
-def _solved(circuit: Circuit, curve: Trace, settings: Mapping[str, Any], count: int) -> Array:
+def _solved(circuit: Circuit, curve: Trace, settings: Mapping[str, Any], shift: Array, count: int) -> Array:
     """(count, f) of one batch."""
     system, rise = _line(circuit, curve.along, curve.low, curve.high, settings)
+    equations = condense(system, rise, shift, count)
     found = []
     for fold in curve.folds:
-        equations = condense(system, rise, fold.x, count)
         start = np.array(np.broadcast_to(arguments(system, np.broadcast_to(fold.x, (count, system.n))), (count, equations.K.shape[1])))
         middle = start.mean(axis=0)
         here = np.full(count, fold.at)

@@ -94,10 +94,14 @@ def _products(system: System) -> NDArray[np.int64]:
     return np.flatnonzero(~(plain if plain.ndim == 1 else plain.all(axis=0)))
 
 
-def condense(system: System, rise: Array, x: Array, batch: int) -> Condensed:
-    """system: s as of level 0, any of its arrays with a batch axis; rise: (n,) or (b, n) ds/dlevel; x: (n,) where slopes are taken."""
+def good_shift(system: System, x: Array) -> Array:
+    """(m,) a for which the linear rest is solved well. x: (n,) where slopes are taken; of a batch the first row is looked at."""
     slopes = system.apply(SLOPE, np.atleast_2d(system.control(x)))[0] * np.atleast_2d(system.factor(x))[0]
-    shift = min(_shifts(slopes), key=lambda a: _condition(system, a))
+    return min(_shifts(slopes), key=lambda a: _condition(system, a))
+
+
+def condense(system: System, rise: Array, shift: Array, batch: int) -> Condensed:
+    """system: s as of level 0, any of its arrays with a batch axis; rise: (n,) or (b, n) ds/dlevel; shift: (m,), of `good_shift`."""
     matrix = system.G + system.B @ (shift[:, None] * system.W)
     products = _products(system)
     n = system.n
@@ -130,4 +134,4 @@ def _condition(system: System, shift: Array) -> float:
     return float(np.linalg.cond(one / np.where(size > 0.0, size, 1.0)))
 
 
-__all__ = ["Condensed", "arguments", "condense"]
+__all__ = ["Condensed", "arguments", "condense", "good_shift"]

@@ -29,7 +29,7 @@ from loopsim.analyses.trace import _scale  # noqa: E402
 from loopsim.analyses.trace_curves import curves, starts_of  # noqa: E402
 from loopsim.analyses.trip_points import _line  # noqa: E402
 from loopsim.equations.assemble import let_range  # noqa: E402
-from loopsim.equations.condensed import arguments, condense  # noqa: E402
+from loopsim.equations.condensed import arguments, condense, good_shift  # noqa: E402
 from loopsim.numerics.fold_batch import null_vectors  # noqa: E402
 
 CIRCUITS = (
@@ -110,8 +110,8 @@ def scipy_loop(circuit: loopsim.Circuit, spread: loopsim.analyses.trip_points.Tr
     table = dict(zip(spread.parameters, spread.samples.T, strict=True))
     system, rise = _line(circuit, curve.along, curve.low, curve.high, table)
     found = np.empty_like(spread.at)
+    whole = condense(system, rise, good_shift(system, curve.folds[0].x), len(spread.samples))
     for f, fold in enumerate(curve.folds):
-        whole = condense(system, rise, fold.x, len(spread.samples))
         K, p, q = whole.K, whole.p, whole.q
         start = np.array(np.broadcast_to(arguments(system, np.broadcast_to(fold.x, (len(K), system.n))), p.shape))
         _, v = null_vectors(whole.jacobian(start, np.full(len(K), fold.at)).mean(axis=0))
