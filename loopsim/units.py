@@ -41,11 +41,12 @@ CODE_PATTERN = r"(?:[0-9]{1,6}[RKkMGpnu\u00b5\u03bc][0-9]{0,6}|R[0-9]{1,6})(?![A
 _CODE = {"R": (0, OHM), "K": (3, OHM), "k": (3, OHM), "M": (6, OHM), "G": (9, OHM), "p": (-12, FARAD), "n": (-9, FARAD),
          "u": (-6, FARAD), "\u00b5": (-6, FARAD), "\u03bc": (-6, FARAD)}  # fmt: skip
 MAX_DIGITS = 400
+MAX_EXPONENT = 20  # of a unit: V^20 is far beyond any characteristic
 
 
 @dataclass(frozen=True, slots=True)
 class Quantity:
-    """value: in SI base units; dimension; scale_free: "degC" where the number is a temperature in degrees, else ""."""
+    """value: in SI base units; dimension; scale: "degC" where the number is a temperature in degrees, else ""."""
 
     value: float
     dimension: Dimension
@@ -53,15 +54,17 @@ class Quantity:
 
 
 def decimal(text: str, power: int = 0) -> float:
-    """text * 10**power, correctly rounded; ValueError for what is no plain number or too large."""
+    """text * 10**power, correctly rounded; ValueError for what is no plain number, or too large or too small for a float."""
     if len(text) > MAX_DIGITS:
         raise ValueError(f"a number of more than {MAX_DIGITS} characters")
-    if not re.fullmatch(r"[0-9]+(?:\.[0-9]+)?(?:[eE][+-]?[0-9]{1,6})?", text):
+    if not re.fullmatch(r"[0-9]+(?:\.[0-9]+)?(?:[eE][+-]?[0-9]+)?", text):
         raise ValueError(f"`{text}` is not a number")
     mantissa, _, exponent = text.lower().partition("e")
     value = float(f"{mantissa}e{int(exponent or 0) + power}")
     if not math.isfinite(value):
         raise ValueError(f"{text} is too large")
+    if value == 0.0 and mantissa.strip("0."):
+        raise ValueError(f"{text} is too small")
     return value
 
 
@@ -69,6 +72,8 @@ def unit_of(text: str) -> tuple[int, Dimension]:
     """(power of ten, dimension) of a unit such as `mA/V^3`; ValueError for an unknown one."""
     power, total = 0, [0, 0, 0, 0]
     for sign, word, exponent in re.findall(r"([/*]?)([^/*^]+)(?:\^(-?[0-9]+))?", text):
+        if len(exponent) > 3 or abs(int(exponent or 1)) > MAX_EXPONENT:
+            raise ValueError(f"the exponent of a unit lies within -{MAX_EXPONENT} .. {MAX_EXPONENT}")
         count = int(exponent or 1) * (-1 if sign == "/" else 1)
         if word == "ppm":
             power -= 6 * count

@@ -3,6 +3,7 @@ such sums."""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
@@ -41,7 +42,11 @@ class Saturating:
 
 
 def constant_limit(x: Scalar, low: Scalar, high: Scalar) -> Scalar:
-    """`limit` of a number: the same smooth law as that of a net voltage."""
+    """`limit` of a number: the same smooth law as that of a net voltage. CircuitError `limit-order` for ends that do not rise."""
+    if not everywhere(low < high):
+        raise CircuitError(
+            "limit-order", "the lower end of `limit` must lie below the upper one", hint="limit(x, low, high)"
+        )
     knee = LIMIT_KNEE * (high - low)
     return low + knee * (np.logaddexp(0.0, (x - low) / knee) - np.logaddexp(0.0, (x - high) / knee))
 
@@ -49,8 +54,30 @@ def constant_limit(x: Scalar, low: Scalar, high: Scalar) -> Scalar:
 def sum_of(tree: Expression, lets: Mapping[str, Scalar], curves: Mapping[str, CurveValues]) -> Sum:
     """`tree` as a sum; lets: name to value; curves: name to its numbers.
 
-    CircuitError `formula-term` for what is no such sum (a product of two voltages, the exponential of one, ...).
+    CircuitError `formula-term` for what is no such sum (a product of two voltages, the exponential of one, ...), `division`,
+    `limit-order`, and `formula-value` where a constant in it is no finite number.
     """
+    with np.errstate(all="ignore"):
+        found = _sum_of(tree, lets, curves)
+    if not _is_finite(found):
+        raise CircuitError("formula-value", "a constant of this formula has no finite value")
+    return found
+
+
+def _is_finite(found: Sum) -> bool:
+    """Whether every number of a sum is finite and real."""
+    constants = (found.constant, *found.coefficients.values(), *(term.scale for term in found.terms))
+    return all(map(_is_number, constants)) and all(_is_finite(term.control) for term in found.terms)
+
+
+def _is_number(value: Scalar) -> bool:
+    """Finite and real throughout; what is neither a number nor an array of them is not judged."""
+    if isinstance(value, float | int | complex | np.ndarray | np.generic):
+        return bool(np.isrealobj(value) and np.all(np.isfinite(value)))
+    return True
+
+
+def _sum_of(tree: Expression, lets: Mapping[str, Scalar], curves: Mapping[str, CurveValues]) -> Sum:
     match tree:
         case Number(value):
             return Sum(value, {})
@@ -61,20 +88,28 @@ def sum_of(tree: Expression, lets: Mapping[str, Scalar], curves: Mapping[str, Cu
         case CurrentRef(part):
             return Sum(0.0, {("current", part): 1.0})
         case Operation(name, arguments, curve):
-            parts = [sum_of(argument, lets, curves) for argument in arguments]
+            parts = [_sum_of(argument, lets, curves) for argument in arguments]
             if name in _RULES:
                 return _RULES[name](*parts)
             if name == "curve":
                 return _term(1.0, curves[curve].kind, parts[0], curves[curve].parameters)
             if all(part.is_constant for part in parts):
-                numbers = tuple(Number(part.constant) for part in parts)
-                return Sum(evaluate(Operation(name, numbers), {}), {})
+                return Sum(_constant(name, [part.constant for part in parts]), {})
             raise CircuitError(
                 "formula-term",
                 f"`{name}` of a net voltage or a current is no term of a controlled source",
                 hint="allowed are sums of constants times voltages, currents, and limit, tanh, atan or a curve of such sums",
             )
     raise TypeError(f"not an expression: {tree!r}")
+
+
+def _constant(name: str, arguments: list[Scalar]) -> Scalar:
+    """The value of an operation on numbers; nan where it has none."""
+    try:
+        value = evaluate(Operation(name, tuple(Number(argument) for argument in arguments)), {})
+    except (ZeroDivisionError, OverflowError, ValueError):
+        return math.nan
+    return math.nan if isinstance(value, complex) else value
 
 
 def _add(a: Sum, b: Sum) -> Sum:
@@ -114,6 +149,8 @@ def _divide(a: Sum, b: Sum) -> Sum:
             "division by a voltage or current is no term of a controlled source",
             hint="divide by a constant",
         )
+    if not everywhere(b.constant != 0.0):
+        raise CircuitError("division", "division by zero")
     return _scale(a, 1.0 / b.constant)
 
 
@@ -135,12 +172,10 @@ def _limit(x: Sum, low: Sum, high: Sum) -> Sum:
         raise CircuitError(
             "formula-term", "the ends of `limit` must be constants", hint="give them as numbers or lets"
         )
-    if not everywhere(low.constant < high.constant):
-        raise CircuitError(
-            "limit-order", "the lower end of `limit` must lie below the upper one", hint="limit(x, low, high)"
-        )
+    # the ends are checked there, too
+    constant = constant_limit(x.constant, low.constant, high.constant)
     if x.is_constant:
-        return Sum(constant_limit(x.constant, low.constant, high.constant), {})
+        return Sum(constant, {})
     knee = LIMIT_KNEE * (high.constant - low.constant)
     inner = _scale(x, 1.0 / knee)
     lower = _add(inner, Sum(-low.constant / knee, {}))

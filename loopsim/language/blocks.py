@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 from loopsim.circuit import Coupling
 from loopsim.devices.catalogue import pins as device_pins
+from loopsim.expressions import Operation
 from loopsim.language import tree as t
 from loopsim.language.chains import add_chain
 from loopsim.language.definitions import BlockKind, Kind, check_fields, named_kind, refuse_positional
@@ -15,7 +16,7 @@ from loopsim.language.fields import fields_of
 from loopsim.language.formulas import Scope, Typed, require, typed
 from loopsim.language.lets import add_lets
 from loopsim.language.mistakes import nearest
-from loopsim.language.names import nets_of, parts_of, statement_place
+from loopsim.language.names import nets_of, parts_of
 from loopsim.language.values import refuse_nets, toleranced, unit_in_words
 from loopsim.units import NUMBER
 
@@ -87,13 +88,14 @@ class _Given:
 def _add_instance(statement: t.PartOf, block: BlockKind, frame: Frame) -> None:
     inner = block.statement
     _check_depth(statement, inner, frame)
-    prefix = frame.new_part(statement.name) + "."
+    full = frame.new_part(statement.name)
+    frame.draft.instances[full] = frame.scope.source.span(statement.name.place)
+    prefix = full + "."
     given = _given(statement, block, frame)
     scope = Scope(block.definitions.source, curves=block.definitions.curve_forms)
     for name, (value, written_in) in given.values.items():
         scope.values[name] = _parameter(prefix + name, value, written_in, frame)
     _check_dimensions(given, block, scope)
-    _check_body(inner.body, scope)
     scope.nets = {**{name: prefix + name for name in nets_of(inner.body)}, **given.pins}
     scope.parts = {name: prefix + name for name in parts_of(inner.body)}
     trail = (*frame.trail, inner.name.text)
@@ -141,10 +143,13 @@ def _given(statement: t.PartOf, block: BlockKind, frame: Frame) -> _Given:
 
 
 def _parameter(full: str, given: t.Toleranced, scope: Scope, frame: Frame) -> Typed:
-    """The value of a block's parameter; one with a tolerance becomes a parameter of the circuit."""
+    """The value of a block's parameter; a formula, or one with a tolerance, becomes a parameter of the circuit."""
     value, tolerance = toleranced(given, scope, frame.draft)
     refuse_nets(value, given.value, scope, "a parameter")
-    return value if tolerance is None else frame.draft.spread(full, value, tolerance, given.value, scope)
+    # a formula handed on as it is would grow from block to block
+    if tolerance is None and not isinstance(value.tree, Operation):
+        return value
+    return frame.draft.name_value(full, value, tolerance, given.value, scope)
 
 
 def _check_dimensions(given: _Given, block: BlockKind, found: Scope) -> None:
@@ -152,27 +157,12 @@ def _check_dimensions(given: _Given, block: BlockKind, found: Scope) -> None:
     for default in block.statement.defaults:
         name = default.name.text
         expected = typed(default.value.value, Scope(block.definitions.source))
-        if found.values[name].dimension != expected.dimension:
+        if (found.values[name].dimension, found.values[name].scale) != (expected.dimension, expected.scale):
             value, scope = given.values[name]
             raise scope.mistake(
                 "dimension",
                 f"`{name}` is in {unit_in_words(expected)}, not {unit_in_words(found.values[name])}",
                 value.value.place,
-            )
-
-
-_OUTSIDE = {t.Head: "circuit", t.Use: "use", t.Block: "block", t.Expect: "expect", t.KindOf: "kind", t.CurveOf: "curve"}
-
-
-def _check_body(body: tuple[t.Statement, ...], scope: Scope) -> None:
-    """Only lets, parts and couplings stand inside a block."""
-    for statement in body:
-        if type(statement) in _OUTSIDE:
-            raise scope.mistake(
-                "misplaced",
-                f"`{_OUTSIDE[type(statement)]}` does not stand inside a block",
-                statement_place(statement),
-                "put it beside the block",
             )
 
 
@@ -190,8 +180,9 @@ def _add_coupling(statement: t.Couple, frame: Frame) -> None:
 
 
 def _part(word: t.Word, scope: Scope) -> str:
-    if word.text not in scope.parts:
+    full = scope.part(word.text)
+    if full is None:
         raise scope.mistake(
             "unknown-part", f"there is no part `{word.text}`", word.place, nearest(word.text, scope.parts)
         )
-    return scope.parts[word.text]
+    return full

@@ -14,6 +14,7 @@ from loopsim.language.draft import Draft, Frame
 from loopsim.language.expects import add_requirement
 from loopsim.language.formulas import Scope, Typed
 from loopsim.language.lets import add_lets
+from loopsim.language.mistakes import nearest
 from loopsim.language.names import nets_of, parts_of, statement_place
 from loopsim.language.parser import Source
 from loopsim.units import KELVIN
@@ -26,12 +27,13 @@ def build(
 ) -> Circuit:
     """The circuit of a file whose first statement is `circuit`."""
     head = _head(source, statements)
-    draft, scope = Draft(), _outer_scope(source, statements, definitions)
+    draft, scope = Draft(definitions.curves), _outer_scope(source, statements, definitions)
     frame = Frame(draft, definitions, "", scope)
     draft.parameters["ambient"] = Parameter("ambient", Number(USUAL_AMBIENT), "degC")
     draft.numbers["ambient"] = USUAL_AMBIENT
     add_lets(statements, frame)
     expand(statements, frame)
+    _check_inner_nets(draft)
     # nets and parts inside blocks are known by now and may be named in requirements
     scope.nets = {name: name for name in draft.nets}
     scope.parts = {name: name for name in draft.parts}
@@ -71,6 +73,15 @@ def _outer_scope(source: Source, statements: tuple[t.Statement, ...], definition
                 statement.name.place,
             )
     return scope
+
+
+def _check_inner_nets(draft: Draft) -> None:
+    """Error for `instance.net` where that block has no such net."""
+    for full, (word, scope) in draft.named_outside.items():
+        if full not in draft.nets:
+            raise scope.mistake(
+                "unknown-net", f"no block here has a net `{word.text}`", word.place, nearest(full, draft.nets)
+            )
 
 
 def _head(source: Source, statements: tuple[t.Statement, ...]) -> t.Head:

@@ -12,7 +12,7 @@ from loopsim.language.fields import current_curve, fields_of, number_field
 from loopsim.language.formulas import Typed, in_words, is_constant
 from loopsim.language.mistakes import nearest
 from loopsim.language.names import a
-from loopsim.language.values import toleranced, unit_in_words
+from loopsim.language.values import refuse_tolerance, toleranced, unit_in_words
 from loopsim.language.waveforms import WAVEFORMS, read_waveform
 from loopsim.units import AMPERE, FARAD, HENRY, OHM, SIEMENS, VOLT, Dimension
 
@@ -76,7 +76,10 @@ def _device(step: t.Step, name: str, frame: Frame) -> tuple[str, dict[str, Field
         found = _named(formula, name, frame)
     elif isinstance(formula, t.Call):
         found = _called(formula, name, frame)
-    return found or _by_unit(step.value, name, frame)
+    if found is None:
+        return _by_unit(step.value, name, frame)
+    refuse_tolerance(step.value, frame.scope, "give one to its fields, or to a let that they name")
+    return found
 
 
 def _named(word: t.Word, part: str, frame: Frame) -> tuple[str, dict[str, FieldValue]] | None:
@@ -90,7 +93,7 @@ def _named(word: t.Word, part: str, frame: Frame) -> tuple[str, dict[str, FieldV
         return "curve_conductance", {"curve": current_curve(word, scope, frame)}
     if text in DEVICES:
         return _of_kind(Kind(text, {}), part, word, frame)
-    if text in scope.nets or text == "gnd":
+    if text == "gnd" or scope.net(text) is not None:
         return None
     known = [*definitions.kinds, *definitions.curves, *scope.values, *scope.nets]
     raise scope.mistake(
@@ -152,13 +155,11 @@ def _controlled(
     device, _ = BY_UNIT[value.dimension]
     if tolerance is not None:
         raise frame.scope.mistake(
-            "tolerance",
-            "a controlled source has no tolerance; give one to a let in its formula",
-            formula.place,
+            "tolerance", "a controlled source has no tolerance", formula.place, "give one to a let in its formula"
         )
     if value.dimension not in (VOLT, AMPERE):
         raise frame.scope.mistake(
             "not-constant", f"the value of {a(device)} cannot depend on a net or a current", formula.place
         )
-    check_controlled(value.tree, formula, frame)
+    check_controlled(formula, frame.scope, frame.draft)
     return f"controlled_{device}", {"formula": value.tree}

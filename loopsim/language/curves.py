@@ -5,9 +5,9 @@ from __future__ import annotations
 import math
 
 from loopsim.circuit import Curve
-from loopsim.expressions import evaluate
 from loopsim.language import tree as t
 from loopsim.language.formulas import Scope, Typed, in_words, require, typed
+from loopsim.language.numbers import nominal
 from loopsim.units import AMPERE, NUMBER, VOLT, Dimension, name_of
 
 
@@ -46,6 +46,7 @@ def _polynomial(call: t.Call, scope: Scope) -> tuple[list[Typed], Dimension, Dim
     for k, (value, item) in enumerate(zip(values, call.positional, strict=True), start=1):
         wanted = (gives[0] - k, gives[1], gives[2], gives[3])
         require(value, wanted, item.value, scope, f"coefficient {k} is in")
+        nominal(value.tree, item.value, scope, {})
     return values, VOLT, gives
 
 
@@ -68,7 +69,8 @@ def _points(call: t.Call, scope: Scope) -> tuple[list[Typed], Dimension, Dimensi
                 raise scope.mistake("dimension", "the pairs of a curve are V: A or V: V", item.value.place)
         require(x, needs, item.value, scope, "x is in")
         require(y, gives, item.pair, scope, "y is in")
-        here = float(evaluate(x.tree, {}))
+        here = nominal(x.tree, item.value, scope, {})
+        nominal(y.tree, item.pair, scope, {})
         if here <= last:
             raise scope.mistake("curve-points", "x has to rise from pair to pair", item.value.place)
         last = here

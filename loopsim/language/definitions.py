@@ -9,6 +9,7 @@ from loopsim.circuit import Curve
 from loopsim.devices.catalogue import DEVICES, field_specs
 from loopsim.errors import CircuitError, Span
 from loopsim.language import tree as t
+from loopsim.language.block_checks import check_block
 from loopsim.language.curves import read_curve
 from loopsim.language.formulas import Scope
 from loopsim.language.mistakes import nearest
@@ -52,6 +53,8 @@ class Definitions:
     def claim(self, word: t.Word) -> None:
         """Error for a name that stands for something already."""
         where = self.source.span(word.place)
+        if "." in word.text:
+            raise CircuitError("reserved-name", f"`{word.text}`: a point belongs to the nets of a block", where)
         if word.text in DEVICES:
             there = "a built-in device"
         elif word.text in self.places:
@@ -75,9 +78,9 @@ def define(source: Source, statements: tuple[t.Statement, ...], used: Callable[[
             case t.KindOf(name, call):
                 found.claim(name)
                 found.kinds[name.text] = kind_of(found, call, found.scope)
-            case t.Block(name, pins, _, _):
+            case t.Block(name, _, _, _):
                 found.claim(name)
-                _check_block_pins(source, pins)
+                check_block(statement, Scope(source))
                 found.blocks[name.text] = BlockKind(statement, found)
             case _:
                 continue
@@ -97,17 +100,6 @@ def _take(found: Definitions, other: Definitions, statement: t.Use) -> None:
     found.curves.update(other.curves)
     found.curve_forms.update(other.curve_forms)
     found.blocks.update(other.blocks)
-
-
-def _check_block_pins(source: Source, pins: tuple[t.Word, ...]) -> None:
-    seen: set[str] = set()
-    for pin in pins:
-        where = source.span(pin.place)
-        if pin.text == "gnd":
-            raise CircuitError("reserved-name", "`gnd` is the reference everywhere; it is no pin", where)
-        if pin.text in seen:
-            raise CircuitError("duplicate-name", f"the pin `{pin.text}` stands twice", where)
-        seen.add(pin.text)
 
 
 def kind_of(definitions: Definitions, call: t.Call, scope: Scope) -> Kind:

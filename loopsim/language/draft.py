@@ -2,24 +2,32 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 from loopsim.circuit import Coupling, Curve, FieldValue, Parameter, Part, Requirement, Tolerance
-from loopsim.expressions import Expression, LetRef, evaluate
+from loopsim.devices.curves import CurveValues, points_curve, polynomial_curve
+from loopsim.devices.phi import VALUE
+from loopsim.errors import Span
+from loopsim.expressions import Expression, LetRef, Operation, evaluate
 from loopsim.language import tree as t
 from loopsim.language.definitions import Definitions
 from loopsim.language.formulas import Scope, Typed
+from loopsim.language.numbers import nominal
 from loopsim.units import name_of
 
-MAX_PARTS = 50_000  # parts after expansion; a file that names more is a mistake or an attack
+MAX_SIZE = 50_000  # parts, blocks and lets after expansion; a file that asks for more is a mistake or an attack
 
 
 @dataclass
 class Draft:
-    """Everything found so far, by full name (`block.part`). numbers: the nominal value of every parameter [SI]."""
+    """Everything found so far, by full name (`block.part`).
 
+    known_curves: all that the file defines or uses; curves: those that are used; numbers: the nominal value of every parameter [SI];
+    instances: of blocks, with their places; named_outside: nets of blocks that statements outside of them name (`block.net`).
+    """
+
+    known_curves: Mapping[str, Curve]
     parameters: dict[str, Parameter] = field(default_factory=dict)
     numbers: dict[str, float] = field(default_factory=dict)
     nets: dict[str, None] = field(default_factory=dict)
@@ -27,20 +35,38 @@ class Draft:
     couplings: list[Coupling] = field(default_factory=list)
     requirements: list[Requirement] = field(default_factory=list)
     curves: dict[str, Curve] = field(default_factory=dict)
+    instances: dict[str, Span] = field(default_factory=dict)
+    named_outside: dict[str, tuple[t.Word, Scope]] = field(default_factory=dict)
+    size: int = 0
+
+    def count(self, where: t.Place, scope: Scope) -> None:
+        """One part, block or let more; few lines can ask for very many."""
+        self.size += 1
+        if self.size > MAX_SIZE:
+            raise scope.mistake(
+                "too-many-parts", f"more than {MAX_SIZE:,} parts, blocks and lets after the blocks are expanded", where
+            )
 
     def number(self, tree: Expression, formula: t.Formula, scope: Scope) -> float:
         """The nominal value of a formula without nets [SI]; CircuitError `formula-value` where it has none."""
-        clip = {"limit": lambda x, low, high: min(max(x, low), high), "curve": lambda *_: 0.0}
-        try:
-            value = float(evaluate(tree, self.numbers, operations=clip))
-        except (ZeroDivisionError, OverflowError, ValueError, FloatingPointError):
-            value = math.nan
-        if not math.isfinite(value):
-            raise scope.mistake("formula-value", "this formula has no finite value", formula.place)
-        return value
+        for name in curves_in(tree):
+            self.curves[name] = self.known_curves[name]
+        return nominal(tree, formula, scope, self.numbers, self._apply)
 
-    def spread(self, full: str, value: Typed, tolerance: Tolerance, formula: t.Formula, scope: Scope) -> Typed:
-        """A value with a tolerance becomes a parameter of that name; the answer refers to it."""
+    def curve_values(self, name: str) -> CurveValues:
+        """A curve with its numbers put in."""
+        curve = self.known_curves[name]
+        values = [float(evaluate(value, self.numbers)) for value in curve.values]
+        return polynomial_curve(values) if curve.form == "polynomial" else points_curve(values)
+
+    def _apply(self, name: str, x: float) -> float:
+        found = self.curve_values(name)
+        return float(VALUE[found.kind](x, found.parameters))
+
+    def name_value(
+        self, full: str, value: Typed, tolerance: Tolerance | None, formula: t.Formula, scope: Scope
+    ) -> Typed:
+        """A value becomes a parameter of that name; the answer refers to it."""
         self.numbers[full] = self.number(value.tree, formula, scope)
         unit = value.scale or name_of(value.dimension)
         span = scope.source.span(formula.place)
@@ -69,7 +95,9 @@ class Frame:
                 "name-clash", f"`{name}` is a let; nets and lets share one name space", word.place
             )
         full = self.pins.get(name, self.prefix + name)
-        if full != "gnd":
+        if "." in name and name not in self.pins:
+            self.draft.named_outside.setdefault(full, (word, self.scope))
+        elif full != "gnd":
             self.draft.nets.setdefault(full)
         return full
 
@@ -77,23 +105,30 @@ class Frame:
         """Full name of a part (or an instance) that stands here for the first time."""
         if "." in word.text:
             raise self.scope.mistake("reserved-name", "a part's own name has no point in it", word.place)
-        full = self.prefix + word.text
-        if full in self.draft.parts:
+        full, draft = self.prefix + word.text, self.draft
+        there = draft.instances.get(full) or (draft.parts[full].span if full in draft.parts else None)
+        if there is not None:
             raise self.scope.mistake(
-                "duplicate-part",
-                f"the part `{full}` is already there",
-                word.place,
-                f"first at {self.draft.parts[full].span}",
+                "duplicate-part", f"the part `{full}` is already there", word.place, f"first at {there}"
             )
+        draft.count(word.place, self.scope)
         return full
 
     def add(
         self, name: str, device: str, pins: Mapping[str, str], fields: Mapping[str, FieldValue], where: t.Place
     ) -> None:
         """One part more in the circuit. name: full; pins: pin to full name of its net."""
-        parts = self.draft.parts
-        if len(parts) >= MAX_PARTS:
-            raise self.scope.mistake(
-                "too-many-parts", f"more than {MAX_PARTS:,} parts after the blocks are expanded", where
-            )
-        parts[name] = Part(name, device, dict(pins), dict(fields), self.scope.source.span(where))
+        self.draft.parts[name] = Part(name, device, dict(pins), dict(fields), self.scope.source.span(where))
+
+
+def curves_in(tree: Expression) -> list[str]:
+    """Names of the curves that a formula applies."""
+    found = []
+    stack = [tree]
+    while stack:
+        node = stack.pop()
+        if isinstance(node, Operation):
+            if node.name == "curve":
+                found.append(node.curve)
+            stack.extend(node.arguments)
+    return found

@@ -5,15 +5,15 @@ from __future__ import annotations
 import re
 
 from loopsim.circuit import Relation, Requirement
-from loopsim.expressions import Expression
+from loopsim.expressions import Expression, LetRef
 from loopsim.language import tree as t
 from loopsim.language.draft import Frame
 from loopsim.language.formulas import Scope, Typed, typed
-from loopsim.language.measures import MEASURES, MeasureForm
+from loopsim.language.measures import COUNTS, MEASURES, MeasureForm
 from loopsim.language.mistakes import nearest
 from loopsim.language.parser import Source
 from loopsim.language.values import constant, limits, refuse_nets, toleranced, unit_in_words
-from loopsim.units import Dimension, name_of
+from loopsim.units import Dimension, dimension_of, name_of
 
 
 def add_requirement(statement: t.Expect, frame: Frame) -> None:
@@ -21,10 +21,12 @@ def add_requirement(statement: t.Expect, frame: Frame) -> None:
     scope, draft = frame.scope, frame.draft
     words = " ".join(word.text for word in statement.words)
     form = _form(words, statement, scope)
-    target = typed(statement.target, scope) if statement.target is not None else None
+    target = _target_of(statement.target, scope) if statement.target is not None else None
     _check_target(form, words, statement, scope)
     _check_along(form, words, statement, scope)
     along = _let_of(statement.along, frame) if statement.along is not None else None
+    if statement.along is not None:
+        _check_range(form, statement.along, frame)
     dimension, scale = _measured(form.dimension, target, along)
     relation = _relation(statement.relation, dimension, scale, words, frame)
     draft.requirements.append(
@@ -32,7 +34,7 @@ def add_requirement(statement: t.Expect, frame: Frame) -> None:
             _label(words, statement, frame),
             words,
             relation,
-            _without_comment(scope.source.lines[statement.place.line - 1]).strip(),
+            _text(scope.source, statement.place.line),
             target.tree if target else None,
             _written(scope.source, statement.target) if statement.target is not None else "",
             scale or name_of(dimension),
@@ -55,6 +57,13 @@ def _form(words: str, statement: t.Expect, scope: Scope) -> MeasureForm:
     return MEASURES[words]
 
 
+def _target_of(formula: t.Formula, scope: Scope) -> Typed:
+    target = typed(formula, scope)
+    if target.scale:
+        raise scope.mistake("degrees", "a temperature is given, not measured", formula.place)
+    return target
+
+
 def _check_target(form: MeasureForm, words: str, statement: t.Expect, scope: Scope) -> None:
     if form.target == "needed" and statement.target is None:
         raise scope.mistake("measure-target", f"`{words}` needs `of NET`", statement.words[-1].place)
@@ -69,13 +78,26 @@ def _check_along(form: MeasureForm, words: str, statement: t.Expect, scope: Scop
         raise scope.mistake("measure-along", f"`{words}` takes no `along`", statement.along.place)
 
 
+def _check_range(form: MeasureForm, word: t.Word, frame: Frame) -> None:
+    """A threshold needs a let that is traced over a range."""
+    if form.dimension in ("along", "along difference") and frame.draft.parameters[word.text].low is None:
+        raise frame.scope.mistake(
+            "measure-along",
+            f"`{word.text}` has no range to be traced over",
+            word.place,
+            f"let {word.text} = ... in LO .. HI",
+        )
+
+
 def _let_of(word: t.Word, frame: Frame) -> Typed:
+    """A let, or the toleranced value `part.field`, by its name."""
     known = frame.draft.parameters
     if word.text not in known:
         raise frame.scope.mistake(
             "unknown-let", f"there is no let `{word.text}`", word.place, nearest(word.text, known)
         )
-    return frame.scope.values[word.text]
+    unit = known[word.text].unit
+    return Typed(LetRef(word.text), dimension_of(unit), unit if unit == "degC" else "")
 
 
 def _measured(form: Dimension | str, target: Typed | None, along: Typed | None) -> tuple[Dimension, str]:
@@ -84,6 +106,8 @@ def _measured(form: Dimension | str, target: Typed | None, along: Typed | None) 
         return target.dimension, ""
     if form == "along" and along is not None:
         return along.dimension, along.scale
+    if form == "along difference" and along is not None:
+        return along.dimension, ""
     if form == "ratio" and target is not None and along is not None:
         a, b = target.dimension, along.dimension
         return (a[0] - b[0], a[1] - b[1], a[2] - b[2], a[3] - b[3]), ""
@@ -116,15 +140,23 @@ def _target(
     """Nominal, lowest and highest value of what is asked for."""
     value, tolerance = toleranced(item, frame.scope, frame.draft)
     refuse_nets(value, item.value, frame.scope, "a requirement")
-    if value.dimension != dimension or (value.scale and value.scale != scale):
+    if value.dimension != dimension or value.scale != scale:
         wanted = scale or (name_of(dimension) or "a pure number")
         raise frame.scope.mistake(
             "dimension",
             f"`{words}` is measured in {wanted}, not in {unit_in_words(value)}",
             item.value.place,
         )
+    if words in COUNTS:
+        _check_count(value, item.value, frame)
     low, high = limits(value.tree, tolerance) if tolerance is not None else (value.tree, value.tree)
     return value.tree, low, high
+
+
+def _check_count(value: Typed, formula: t.Formula, frame: Frame) -> None:
+    number = frame.draft.number(value.tree, formula, frame.scope)
+    if number < 0.0 or number != int(number):
+        raise frame.scope.mistake("relation", f"a count is a whole number, not {number:g}", formula.place)
 
 
 def _bindings(statement: t.Expect, frame: Frame) -> tuple[tuple[str, tuple[Expression, ...]], ...]:
@@ -142,14 +174,14 @@ def _bindings(statement: t.Expect, frame: Frame) -> tuple[tuple[str, tuple[Expre
         elif values is not None or current is None:
             raise scope.mistake("binding", "after `at` stands LET = value", first.place)
         for formula in (first,) if values is None else values:
-            found[current.text].append(_bound(current, formula, scope))
+            found[current.text].append(_bound(current, formula, frame))
     return tuple((name, tuple(values)) for name, values in found.items())
 
 
-def _bound(name: t.Word, formula: t.Formula, scope: Scope) -> Expression:
-    let, value = scope.values[name.text], constant(formula, scope, "a binding")
+def _bound(name: t.Word, formula: t.Formula, frame: Frame) -> Expression:
+    let, value = _let_of(name, frame), constant(formula, frame.scope, "a binding")
     if value.dimension != let.dimension or value.scale != let.scale:
-        raise scope.mistake(
+        raise frame.scope.mistake(
             "dimension", f"`{name.text}` is in {unit_in_words(let)}, not {unit_in_words(value)}", formula.place
         )
     return value.tree
@@ -192,6 +224,16 @@ def _written(source: Source, formula: t.Formula) -> str:
     if where.line != where.end_line:
         return "formula"
     return source.lines[where.line - 1][where.column - 1 : where.end_column - 1]
+
+
+def _text(source: Source, line: int) -> str:
+    """The requirement as written, on one line whatever it was laid out on."""
+    text = _without_comment(source.lines[line - 1]).strip()
+    for more in source.lines[line:]:
+        if text.count("(") <= text.count(")") and not text.endswith(","):
+            break
+        text = f"{text} {_without_comment(more).strip()}".strip()
+    return text
 
 
 def _without_comment(line: str) -> str:

@@ -2,16 +2,17 @@
 
 from __future__ import annotations
 
-from loopsim.circuit import Curve, FieldValue, Tolerance
+from loopsim.circuit import Curve, FieldValue, Tolerance, Waveform
 from loopsim.devices.catalogue import field_specs
 from loopsim.devices.fields import FieldSpec
 from loopsim.expressions import Expression
 from loopsim.language import tree as t
+from loopsim.language.controlled import check_controlled
 from loopsim.language.definitions import Kind
 from loopsim.language.draft import Frame
-from loopsim.language.formulas import Scope, Typed, typed
+from loopsim.language.formulas import Scope, Typed, in_words, require, typed
 from loopsim.language.mistakes import nearest
-from loopsim.language.values import refuse_nets, toleranced, unit_in_words
+from loopsim.language.values import refuse_nets, refuse_tolerance, toleranced, unit_in_words
 from loopsim.language.waveforms import WAVEFORMS, read_waveform
 from loopsim.units import AMPERE, KELVIN, dimension_of
 
@@ -26,6 +27,8 @@ def fields_of(kind: Kind, part: str, frame: Frame) -> dict[str, FieldValue]:
 
 def _field(spec: FieldSpec, part: str, given: t.Toleranced, scope: Scope, frame: Frame) -> FieldValue:
     formula = given.value
+    if spec.form in ("word", "net", "curve", "formula"):
+        refuse_tolerance(given, scope, "only a number has one")
     if spec.words:
         return _word(spec, formula, scope)
     if spec.form == "net":
@@ -37,19 +40,33 @@ def _field(spec: FieldSpec, part: str, given: t.Toleranced, scope: Scope, frame:
             raise scope.mistake("unknown-curve", f"`{spec.name}` is the name of a curve", formula.place)
         return current_curve(formula, scope, frame)
     if spec.form == "formula":
-        return typed(formula, scope).tree
+        value = typed(formula, scope)
+        require(value, dimension_of(spec.unit), formula, scope, f"`{spec.name}` is in")
+        check_controlled(formula, scope, frame.draft)
+        return value.tree
     if spec.form == "source" and isinstance(formula, t.Call) and formula.name.text in WAVEFORMS:
-        return read_waveform(formula, scope, frame.draft)[0]
+        return _waveform(spec, given, formula, scope, frame)
     return _number(spec, part, given, scope, frame)
+
+
+def _waveform(
+    spec: FieldSpec, given: t.Toleranced, call: t.Call, scope: Scope, frame: Frame
+) -> Waveform:
+    refuse_tolerance(given, scope, "give one to a let that its fields name")
+    wave, dimension = read_waveform(call, scope, frame.draft)
+    if dimension != dimension_of(spec.unit):
+        raise scope.mistake("dimension", f"`{spec.name}` is in {spec.unit}, not {in_words(dimension)}", call.place)
+    return wave
 
 
 def _word(spec: FieldSpec, formula: t.Formula, scope: Scope) -> str:
     if isinstance(formula, t.Word) and formula.text in spec.words:
         return formula.text
-    text = formula.text if isinstance(formula, t.Word) else "this"
+    text = formula.text if isinstance(formula, t.Word) else ""
+    instead = f"`{text}`" if text else "this"
     raise scope.mistake(
         "unknown-word",
-        f"`{spec.name}` is {' or '.join(spec.words)}, not `{text}`",
+        f"`{spec.name}` is {' or '.join(spec.words)}, not {instead}",
         formula.place,
         nearest(text, spec.words),
     )
@@ -85,7 +102,7 @@ def number_field(
         )
     if tolerance is None:
         return value.tree
-    return frame.draft.spread(f"{part}.{spec.name}", value, tolerance, formula, scope).tree
+    return frame.draft.name_value(f"{part}.{spec.name}", value, tolerance, formula, scope).tree
 
 
 def current_curve(word: t.Word, scope: Scope, frame: Frame) -> Curve:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 
@@ -10,8 +11,9 @@ from loopsim.expressions import CurrentRef, Expression, LetRef, NetRef, Number, 
 from loopsim.language import tree as t
 from loopsim.language.mistakes import nearest
 from loopsim.language.parser import Source
-from loopsim.units import AMPERE, KELVIN, NUMBER, VOLT, Dimension, name_of
+from loopsim.units import AMPERE, KELVIN, NUMBER, UNIT_PATTERN, VOLT, Dimension, name_of
 
+UNIT_HINT = "a unit stands behind its number, without a blank inside: 3 V/us"
 FUNCTIONS = ("sqrt", "ln", "exp", "abs", "min", "max", "tanh", "atan", "limit", "current")
 
 
@@ -34,6 +36,19 @@ class Scope:
     nets: Mapping[str, str] = field(default_factory=dict)
     parts: Mapping[str, str] = field(default_factory=dict)
     curves: Mapping[str, tuple[Dimension, Dimension]] = field(default_factory=dict)
+
+    def net(self, text: str) -> str | None:
+        """Full name of a net that a formula names: one of this place, or `instance.net` of a block placed here."""
+        return self.nets.get(text) or self._inside(text)
+
+    def part(self, text: str) -> str | None:
+        """Full name of a part that a formula names, likewise."""
+        return self.parts.get(text) or self._inside(text)
+
+    def _inside(self, text: str) -> str | None:
+        # whether the block holds it shows when it is expanded
+        instance, point, inner = text.partition(".")
+        return f"{self.parts[instance]}.{inner}" if point and instance in self.parts else None
 
     def mistake(self, code: str, message: str, where: t.Place, hint: str = "") -> CircuitError:
         """An error at a place of this scope's text."""
@@ -71,14 +86,16 @@ def _named(text: str, where: t.Place, scope: Scope) -> Typed:
         return scope.values[text]
     if text == "gnd":
         return Typed(NetRef("gnd"), VOLT)
-    if text in scope.nets:
-        return Typed(NetRef(scope.nets[text]), VOLT)
+    net = scope.net(text)
+    if net is not None:
+        return Typed(NetRef(net), VOLT)
     known: Iterable[str] = [*scope.values, *scope.nets, *scope.curves, *FUNCTIONS]
     if text in scope.curves:
         raise scope.mistake(
             "unknown-name", f"`{text}` is a curve; it needs an argument here", where, f"write {text}(...)"
         )
-    raise scope.mistake("unknown-name", f"there is no net or let `{text}`", where, nearest(text, known))
+    hint = nearest(text, known) or (UNIT_HINT if re.fullmatch(UNIT_PATTERN, text) else "")
+    raise scope.mistake("unknown-name", f"there is no net or let `{text}`", where, hint)
 
 
 def _plain(formula: t.Formula, scope: Scope) -> Typed:
@@ -180,11 +197,12 @@ def _current(call: t.Call, given: list[t.Formula], scope: Scope) -> Typed:
     part = given[0]
     if not isinstance(part, t.Word):
         raise scope.mistake("call", "`current(...)` takes the name of a part", part.place)
-    if part.text not in scope.parts:
+    full = scope.part(part.text)
+    if full is None:
         raise scope.mistake(
             "unknown-part", f"there is no part `{part.text}`", part.place, nearest(part.text, scope.parts)
         )
-    return Typed(CurrentRef(scope.parts[part.text]), AMPERE)
+    return Typed(CurrentRef(full), AMPERE)
 
 
 def _count(call: t.Call, given: list[t.Formula], counts: tuple[int, int], scope: Scope) -> None:

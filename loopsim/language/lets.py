@@ -50,6 +50,7 @@ def _check_name(name: t.Word, before: dict[str, t.Let], frame: Frame) -> None:
 
 def _add_let(statement: t.Let, frame: Frame) -> None:
     scope, draft, name, formula = frame.scope, frame.draft, statement.name.text, statement.value.value
+    draft.count(statement.name.place, scope)
     value, tolerance = toleranced(statement.value, scope, draft)
     refuse_nets(value, formula, scope, "a let")
     if name == "ambient" and value.scale != "degC":

@@ -11,7 +11,8 @@ PER_SECOND: Dimension = (0, 0, -1, 0)
 
 @dataclass(frozen=True, slots=True)
 class MeasureForm:
-    """dimension: of the value; "target" or "along" where it is that of the net or the let, "ratio" for target over along.
+    """dimension: of the value; "target" or "along" where it is that of the net or the let, "along difference" for a distance on it,
+    "ratio" for target over along.
     target, along: "needed", "allowed" or "refused"."""
 
     dimension: Dimension | str
@@ -26,7 +27,7 @@ MEASURES: dict[str, MeasureForm] = {
     "values": MeasureForm("target", "needed"),
     "rising threshold": MeasureForm("along", "allowed", "needed"),
     "falling threshold": MeasureForm("along", "allowed", "needed"),
-    "hysteresis": MeasureForm("along", "allowed", "needed"),
+    "hysteresis": MeasureForm("along difference", "allowed", "needed"),
     "slope": MeasureForm("ratio", "needed", "needed"),
     "growth rate": MeasureForm(PER_SECOND),
     "damping": MeasureForm(NUMBER),
@@ -40,3 +41,5 @@ MEASURES: dict[str, MeasureForm] = {
     "loop gain": MeasureForm(NUMBER, "allowed"),
     "phase margin": MeasureForm(NUMBER, "allowed"),
 }
+
+COUNTS = ("states", "stable states", "unstable states")

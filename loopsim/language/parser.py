@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import re
+from collections.abc import Iterable, Iterator
+from dataclasses import replace
 from functools import cache
 from importlib.resources import files
 from typing import Any, cast
@@ -15,7 +17,10 @@ from loopsim.language.mistakes import syntax_mistake
 from loopsim.units import CODE_PATTERN, UNIT_PATTERN, code, quantity
 
 MAX_CHARACTERS = 2_000_000  # a circuit file of 50,000 lines; beyond it is not one circuit
-MAX_NESTING = 256  # brackets within brackets
+MAX_NESTING = 100  # operations within operations, brackets within brackets; keeps recursion well within Python's limit of 1000
+
+
+_BRACKETS = re.compile(r'"[^"]*"|#.*|[()]')  # texts and comments are passed over
 
 
 class Source:
@@ -23,7 +28,7 @@ class Source:
 
     def __init__(self, file: str, text: str) -> None:
         self.file = file
-        self.text = text
+        self.text = text = text.removeprefix("\ufeff")
         self.lines = text.split("\n")
 
     def span(self, place: t.Place) -> Span:
@@ -77,19 +82,16 @@ class _BadNumber(Exception):
         self.token, self.reason = token, reason
 
 
-class _TooManySigns(Exception):
+class _TooLong(Exception):
     def __init__(self, where: t.Place) -> None:
         self.where = where
 
 
-def _depth_of(formula: t.Formula) -> int:
-    """How many Negative and Power stand directly inside each other."""
-    depth = 0
-    while isinstance(formula, t.Negative | t.Power):
-        depth += 1
-        formula = formula.operand if isinstance(formula, t.Negative) else formula.exponent
-        if depth > MAX_NESTING:
-            break
+def _deeper(where: t.Place, inner: Iterable[t.Formula], operations: int = 1) -> int:
+    """The depth of a formula that applies some operations to inner ones."""
+    depth = operations + max((t.depth_of(formula) for formula in inner), default=0)
+    if depth > MAX_NESTING:
+        raise _TooLong(where)
     return depth
 
 
@@ -114,7 +116,8 @@ class _Make(Transformer[Token, Any]):
         return t.Word(str(c[0]), place(c[0]))
 
     def bracket(self, c: list[Any]) -> t.Formula:
-        return cast(t.Formula, c[1])
+        inner: t.Formula = c[1]
+        return replace(inner, place=place(c[0]).to(place(c[2])))
 
     def sign(self, c: list[Token]) -> str:
         return str(c[0])
@@ -124,14 +127,13 @@ class _Make(Transformer[Token, Any]):
     def _flat(self, c: list[Any]) -> t.Formula:
         if len(c) == 1:
             return cast(t.Formula, c[0])
-        return t.Chain(tuple(c[1::2]), tuple(c[0::2]), c[0].place.to(c[-1].place))
+        operands, where = tuple(c[0::2]), c[0].place.to(c[-1].place)
+        return t.Chain(tuple(c[1::2]), operands, where, _deeper(where, operands, len(operands) - 1))
 
     sum = product = _flat
 
     def negative(self, c: list[Any]) -> t.Formula:
-        if _depth_of(c[1]) >= MAX_NESTING:
-            raise _TooManySigns(place(c[0]))
-        return t.Negative(c[1], place(c[0]).to(c[1].place))
+        return t.Negative(c[1], place(c[0]).to(c[1].place), _deeper(place(c[0]), c[1:]))
 
     def positive(self, c: list[Any]) -> t.Formula:
         return cast(t.Formula, c[1])
@@ -142,9 +144,8 @@ class _Make(Transformer[Token, Any]):
     def power(self, c: list[Any]) -> t.Formula:
         if len(c) == 1:
             return cast(t.Formula, c[0])
-        if _depth_of(c[2]) >= MAX_NESTING:
-            raise _TooManySigns(c[2].place)
-        return t.Power(c[0], c[2], c[0].place.to(c[2].place))
+        where = c[0].place.to(c[2].place)
+        return t.Power(c[0], c[2], where, _deeper(where, (c[0], c[2])))
 
     def atom(self, c: list[Any]) -> t.Formula:
         return cast(t.Formula, c[0])
@@ -166,7 +167,12 @@ class _Make(Transformer[Token, Any]):
     def call(self, c: list[Any]) -> t.Call:
         fields = tuple(x for x in c if isinstance(x, t.Field))
         positional = tuple(x for x in c if isinstance(x, t.Positional))
-        return t.Call(self.name(c[:1]), fields, positional, place(c[0]).to(place(c[-1])))
+        where = place(c[0]).to(place(c[-1]))
+        inner = [given.value.value for given in fields]
+        inner += [end for item in positional for end in (item.value, item.pair) if end is not None]
+        # `min` and `max` of many apply one operation to each more
+        depth = _deeper(where, inner, max(1, len(positional) - 1) if str(c[0]) in ("min", "max") else 1)
+        return t.Call(self.name(c[:1]), fields, positional, where, depth)
 
     def circuit(self, c: list[Token]) -> t.Head:
         return t.Head(self.name(c[1:2]), str(c[2])[1:-1] if len(c) > 2 else "")
@@ -311,9 +317,12 @@ def statements(source: Source) -> tuple[t.Statement, ...]:
         raise CircuitError(
             "nesting", f"brackets nest deeper than {MAX_NESTING}", source.span(place(deep.token))
         ) from None
-    except _TooManySigns as deep:
+    except _TooLong as long:
         raise CircuitError(
-            "nesting", f"signs or powers nest deeper than {MAX_NESTING}", source.span(deep.where)
+            "formula-size",
+            f"this formula holds more than {MAX_NESTING} operations within each other",
+            source.span(long.where),
+            "name its parts with `let`",
         ) from None
     except _BadNumber as bad:
         raise CircuitError("bad-number", bad.reason, source.span(place(bad.token))) from None
@@ -322,38 +331,39 @@ def statements(source: Source) -> tuple[t.Statement, ...]:
 
 
 def _explained(source: Source, error: UnexpectedInput) -> CircuitError:
+    """The mistake behind a place where the grammar cannot go on."""
     if isinstance(error, UnexpectedCharacters):
-        line, column = error.line, error.column
-        found = error.char
-        return syntax_mistake(
-            source.at(line, column), "", found, error.allowed or set(), _before(source, line, column)
-        )
+        where = t.Place(error.line, error.column, error.line, error.column + 1)
+        return _at(source, where, "", error.char, error.allowed or set())
+    wanted: Iterable[str] = getattr(error, "accepts", None) or getattr(error, "expected", None) or ()
     if isinstance(error, UnexpectedToken) and error.token.type != "$END":
         where = place(error.token)
-        if error.token.type == "_LINE_END":
-            # the statement breaks off: point behind its last character
-            column = min(where.column, len(source.lines[where.line - 1]) + 1)
-            return syntax_mistake(
-                source.at(where.line, column),
-                "_LINE_END",
-                "",
-                error.accepts or error.expected,
-                _before(source, where.line, column),
-            )
-        return syntax_mistake(
-            source.span(where),
-            error.token.type,
-            str(error.token),
-            error.accepts or error.expected,
-            _before(source, where.line, where.column),
-        )
-    last = max(1, len(source.lines))
-    while last > 1 and not source.lines[last - 1].strip():
-        last -= 1
-    return syntax_mistake(
-        source.at(last, len(source.lines[last - 1]) + 1), "$END", "", getattr(error, "expected", set()), ""
-    )
+        if error.token.type != "_LINE_END":
+            return _at(source, where, error.token.type, str(error.token), wanted)
+        # the statement breaks off: point behind its last character
+        column = min(where.column, len(source.lines[where.line - 1]) + 1)
+        return _at(source, t.Place(where.line, column, where.line, column + 1), "_LINE_END", "", wanted)
+    last = max((i for i, line in enumerate(source.lines, start=1) if line.strip()), default=1)
+    end = len(source.lines[last - 1].rstrip("\r")) + 1
+    return _at(source, t.Place(last, end, last, end + 1), "$END", "", wanted)
 
 
-def _before(source: Source, line: int, column: int) -> str:
-    return source.lines[line - 1][: column - 1] if 0 < line <= len(source.lines) else ""
+def _at(source: Source, where: t.Place, kind: str, text: str, wanted: Iterable[str]) -> CircuitError:
+    """A bracket that an earlier line leaves open is the mistake, whatever stands here."""
+    opening = _left_open(source, where.line)
+    if opening is not None:
+        return CircuitError("unfinished", "this bracket is not closed", source.at(*opening), "close it with )")
+    line = source.lines[where.line - 1]
+    return syntax_mistake(source.span(where), kind, text, wanted, line[: where.column - 1], line[where.column - 1 :])
+
+
+def _left_open(source: Source, line: int) -> tuple[int, int] | None:
+    """Line and column of the last round bracket that the lines before `line` open and do not close."""
+    opened: list[tuple[int, int]] = []
+    for number, text in enumerate(source.lines[: line - 1], start=1):
+        for mark in _BRACKETS.finditer(text):
+            if mark.group() == "(":
+                opened.append((number, mark.start() + 1))
+            elif mark.group() == ")" and opened:
+                opened.pop()
+    return opened[-1] if opened else None

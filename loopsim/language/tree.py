@@ -1,4 +1,7 @@
-"""What the parser hands to the builder: statements and formulas as written, with their places; nothing is looked up yet."""
+"""What the parser hands to the builder: statements and formulas as written, with their places; nothing is looked up yet.
+
+`depth` of a formula: see `depth_of`. The parser holds it down, so that whatever walks a formula may recurse.
+"""
 
 from __future__ import annotations
 
@@ -63,6 +66,7 @@ class Call:
     fields: tuple[Field, ...]
     positional: tuple[Positional, ...]
     place: Place
+    depth: int = 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,6 +76,7 @@ class Chain:
     operators: tuple[str, ...]
     operands: tuple[Formula, ...]
     place: Place
+    depth: int = 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -81,6 +86,7 @@ class Power:
     base: Formula
     exponent: Formula
     place: Place
+    depth: int = 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,6 +95,7 @@ class Negative:
 
     operand: Formula
     place: Place
+    depth: int = 1
 
 
 Formula: TypeAlias = Num | Word | Call | Chain | Power | Negative
@@ -228,6 +235,6 @@ class Expect:
 Statement: TypeAlias = Head | Use | Let | KindOf | CurveOf | Block | Couple | PartOf | Path | Expect
 
 
-def place_of(formula: Formula) -> Place:
-    """Where a formula stands."""
-    return formula.place
+def depth_of(formula: Formula) -> int:
+    """How many operations stand within each other; in a sum or product, each operator stands within the next."""
+    return formula.depth if isinstance(formula, Call | Chain | Power | Negative) else 0

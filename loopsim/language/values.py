@@ -6,7 +6,7 @@ from loopsim.circuit import Tolerance
 from loopsim.expressions import Expression, Number, Operation
 from loopsim.language import tree as t
 from loopsim.language.draft import Draft
-from loopsim.language.formulas import Scope, Typed, in_words, is_constant, typed
+from loopsim.language.formulas import Scope, Typed, in_words, is_constant, lets_in, typed
 from loopsim.units import NUMBER
 
 
@@ -28,6 +28,12 @@ def unit_in_words(value: Typed) -> str:
     return f"`{value.scale}`" if value.scale else in_words(value.dimension)
 
 
+def refuse_tolerance(given: t.Toleranced, scope: Scope, hint: str) -> None:
+    """Error for a tolerance behind what is no quantity."""
+    if given.tolerance is not None:
+        raise scope.mistake("tolerance", "this has no tolerance", given.tolerance.place, hint)
+
+
 def toleranced(given: t.Toleranced, scope: Scope, draft: Draft) -> tuple[Typed, Tolerance | None]:
     """Value and tolerance; `+ 10 % - 20 %` behind a value with a unit is a tolerance too."""
     if given.tolerance is None:
@@ -37,30 +43,48 @@ def toleranced(given: t.Toleranced, scope: Scope, draft: Draft) -> tuple[Typed, 
 
 
 def _two_sided(formula: t.Formula, scope: Scope) -> tuple[Typed, Tolerance] | None:
-    """`VALUE + 10 % - 20 %`, unless VALUE is a pure number, which the shares are added to."""
-    if not isinstance(formula, t.Chain) or formula.operators[-2:] != ("+", "-"):
+    """`VALUE + 10 % - 20 %`, in either order, unless VALUE is a pure number, which the shares are added to."""
+    if not isinstance(formula, t.Chain) or set(formula.operators[-2:]) != {"+", "-"}:
         return None
-    up, down = formula.operands[-2:]
-    if not (isinstance(up, t.Num) and isinstance(down, t.Num) and up.percent and down.percent):
+    shares = formula.operands[-2:]
+    if not all(isinstance(share, t.Num) and share.percent for share in shares):
         return None
     first, *others = formula.operands[:-2]
-    rest = t.Chain(formula.operators[:-2], (first, *others), formula.place) if others else first
+    rest = t.Chain(formula.operators[:-2], (first, *others), formula.place, formula.depth) if others else first
     value = typed(rest, scope)
     if value.dimension == NUMBER:
         return None
-    return value, Tolerance(-down.quantity.value, up.quantity.value, True)
+    size = {sign: _share(share, value, scope) for sign, share in zip(formula.operators[-2:], shares, strict=True)}
+    return value, Tolerance(-size["-"], size["+"], True)
+
+
+def _share(written: t.Formula, value: Typed, scope: Scope) -> float:
+    """A tolerance in % or ppm, as a number."""
+    assert isinstance(written, t.Num)
+    size = written.quantity.value
+    if value.scale:
+        raise scope.mistake(
+            "tolerance", "a share of a temperature in degC means nothing", written.place, "write +/- 5 K"
+        )
+    if size >= 1.0 and value.dimension != NUMBER:
+        raise scope.mistake(
+            "tolerance", "a tolerance of 100 % or more would let the value vanish", written.place
+        )
+    return size
 
 
 def _tolerance(value: Typed, written: t.Formula, scope: Scope, draft: Draft) -> Tolerance:
     """What stands behind `+/-`: a share in % or ppm, or a distance in the unit of the value."""
-    spread = constant(written, scope, "a tolerance")
-    size = abs(draft.number(spread.tree, written, scope))
+    if isinstance(written, t.Negative):
+        raise scope.mistake("tolerance", "a tolerance is a size, without a sign", written.place)
     if isinstance(written, t.Num) and written.percent:
-        if size >= 1.0 and value.dimension != NUMBER:
-            raise scope.mistake(
-                "tolerance", "a tolerance of 100 % or more would let the value vanish", written.place
-            )
+        size = _share(written, value, scope)
         return Tolerance(-size, size, True)
+    spread = constant(written, scope, "a tolerance")
+    if lets_in(spread.tree):
+        raise scope.mistake(
+            "tolerance", "a tolerance is written out; it cannot follow a let", written.place, "for example +/- 1 %"
+        )
     if spread.dimension != value.dimension or (spread.scale and not value.scale):
         unit = unit_in_words(value)
         raise scope.mistake(
@@ -68,6 +92,7 @@ def _tolerance(value: Typed, written: t.Formula, scope: Scope, draft: Draft) -> 
             f"the tolerance of {unit} is in %, ppm or {unit}, not {unit_in_words(spread)}",
             written.place,
         )
+    size = abs(draft.number(spread.tree, written, scope))
     return Tolerance(-size, size, False)
 
 
