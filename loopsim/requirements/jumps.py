@@ -62,7 +62,7 @@ def _none(curve: Trace, requirement: Requirement, limits: Limits, proof: str) ->
     small = [fold for fold in curve.folds if fold.from_stable and fold.direction in ways]
     if small:
         at, lands = small[0], small[0].lands or {}
-        note = f"a branch ends at {at.at:.6g}, where {net} goes from {at.nets[net]:.4g} to only {lands.get(net, at.nets[net]):.4g} V"
+        note = f"a branch ends at {at.at:.6g}, but {net} hardly moves there: {at.nets[net]:.4g} to {lands.get(net, at.nets[net]):.4g} V"
         return open_question(note, limits)
     way = {"rising threshold": "for a rising", "falling threshold": "for a falling"}.get(requirement.measure, "both ways for a")
     note = f"{net} never jumps {way} {requirement.along} within {curve.low:.6g} .. {curve.high:.6g}"
