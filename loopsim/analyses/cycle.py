@@ -346,9 +346,14 @@ def _search(
     floor = 1e-3 * plan.volts
     begin, length, steps, nudges = 0.0, 10.0 * scale, 0, 0
     peak: Array | None = None
+
+    def in_time(reached: float) -> None:
+        if time.monotonic() > deadline:
+            raise AnalysisError("no-repetition", f"no state came back within {reached:.4g} s", hint="allow it more time")
+
     while True:
         length = length if duration is None else min(length, max(duration - begin, 1e-3 * duration))
-        path = plan.solve(x, begin, begin + length, SEARCH_TOLERANCE, peak=peak)
+        path = plan.solve(x, begin, begin + length, SEARCH_TOLERANCE, peak=peak, progress=in_time)
         if path.outcome != 0:
             raise AnalysisError("step-too-small", f"the run that looks for a cycle stopped at {path.end:.6g} s")
         period = repetition(path, nets, floor)

@@ -41,7 +41,7 @@ def judge_trace(curve: Trace, requirement: Requirement, limits: Limits) -> Judge
     if not curve.complete or curve.notes:
         why = curve.notes[0] if curve.notes else f"complete at {len(curve.complete_at)} of {len(curve.stations)} stations"
         return open_question(f"the trace is not complete: {why}", limits, measured)
-    proof = PROVED if curve.over_range else STATIONS.format(len(curve.stations))
+    proof = PROVED if curve.over_range and not curve.gaps else STATIONS.format(len(curve.stations))
     if value is None:
         return _none(curve, requirement, limits, proof)
     error = _precision(curve, requirement.measure)
