@@ -8,11 +8,10 @@ from __future__ import annotations
 
 import json
 import traceback
-from collections.abc import Sequence
 from dataclasses import asdict, dataclass, fields, replace
 from typing import Any
 
-from loopsim.circuit import Circuit, Requirement
+from loopsim.circuit import Circuit
 from loopsim.errors import CircuitError, InternalError, LoopsimError
 from loopsim.requirements.fingerprint import code
 from loopsim.requirements.outcomes import RequirementOutcome
@@ -44,7 +43,7 @@ class Trouble:
 
 @dataclass(frozen=True)
 class Record:
-    """What a worker found: an outcome for each requirement, or none and the trouble."""
+    """What a worker found: an outcome for each requirement, or those that came before the trouble."""
 
     outcomes: tuple[RequirementOutcome, ...] = ()
     trouble: Trouble | None = None
@@ -69,10 +68,11 @@ def judge(task: str, attempt: int = 1) -> str:
     if asked["code"] != code():
         return record_text(Record(trouble=Trouble("analysis", f"its worker runs another loopsim ({code()[:20]}...)")))
     options = Options(**asked["options"])
+    heard: list[RequirementOutcome] = []
     try:
-        record = within_wall(options.budget + GRACE, lambda: _judged(asked, options))
-    except Overrun:
-        record = Record(trouble=Trouble("overrun", f"not finished within its budget of {options.budget:g} s"))
+        record = within_wall(options.budget + GRACE, lambda: _judged(asked, options, heard))
+    except Overrun:  # what was judged before stands
+        record = Record(tuple(heard), Trouble("overrun", f"not finished within its budget of {options.budget:g} s"))
     except CircuitError as error:
         record = Record(trouble=Trouble("mistake", str(error)))
     except Exception as error:  # whatever it is, it stays this circuit's
@@ -90,7 +90,7 @@ def judge_in_worker(task: str, attempt: int = 1) -> str:
         return judge(task, attempt)
 
 
-def _judged(asked: dict[str, Any], options: Options) -> Record:
+def _judged(asked: dict[str, Any], options: Options, heard: list[RequirementOutcome]) -> Record:
     from loopsim.language.load import parse
     from loopsim.requirements.verify import verify
 
@@ -100,7 +100,10 @@ def _judged(asked: dict[str, Any], options: Options) -> Record:
     wanted = set(asked["labels"])
     chosen = tuple(requirement for requirement in circuit.requirements if requirement.label in wanted)
     circuit = replace(circuit, requirements=chosen)
-    return Record(verify(circuit, box=options.box, budget=options.budget, require_proof=options.require_proof))
+    found = verify(
+        circuit, box=options.box, budget=options.budget, require_proof=options.require_proof, hear=heard.append
+    )  # fmt: skip
+    return Record(found)
 
 
 def record_text(record: Record) -> str:
@@ -125,12 +128,12 @@ def _frozen(value: Any) -> Any:
     return tuple(_frozen(item) for item in value) if isinstance(value, list) else value
 
 
-def undecided(circuit: Circuit, requirements: Sequence[Requirement], note: str) -> tuple[RequirementOutcome, ...]:
-    """Every requirement as undecided for one reason."""
+def undecided(circuit: Circuit, note: str) -> tuple[RequirementOutcome, ...]:
+    """Every requirement of a circuit as undecided for one reason."""
     return tuple(
         RequirementOutcome(
             circuit.name, r.label, r.text, "undecided", note=note,
             file=r.span.file if r.span else circuit.file, line=r.span.line if r.span else None,
         )
-        for r in requirements
+        for r in circuit.requirements
     )  # fmt: skip

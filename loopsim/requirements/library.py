@@ -164,10 +164,10 @@ def cores() -> int:
 
 
 def _run(circuit: Circuit, record: Record) -> CircuitRun:
-    outcomes = record.outcomes
-    if record.trouble is not None:
-        first, _, _ = record.trouble.message.partition("\n")
-        outcomes = undecided(circuit, circuit.requirements, first)
+    known = {outcome.label: outcome for outcome in record.outcomes}
+    note, _, _ = (record.trouble.message if record.trouble else "no outcome came back").partition("\n")
+    missing = {outcome.label: outcome for outcome in undecided(circuit, note)}
+    outcomes = tuple(known.get(requirement.label, missing[requirement.label]) for requirement in circuit.requirements)
     return CircuitRun(circuit.file or "", circuit.name, outcomes, record.trouble)
 
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 import time
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import replace
 
 from loopsim.circuit import Circuit, Requirement
@@ -27,19 +27,26 @@ def verify(
     box: float = 1e3,
     budget: float = 60.0,
     require_proof: bool = False,
+    hear: Callable[[RequirementOutcome], None] | None = None,
 ) -> tuple[RequirementOutcome, ...]:
     """Every requirement of the circuit, in order.
 
-    box [V] as for `states`; budget: wall time for all of them [s]; require_proof: a requirement is met only by what is proved, so that
-    one that rests on stations, a simulation or corners is undecided. CircuitError for a circuit that is wrong in itself; what goes wrong
-    in one requirement makes that one undecided. InternalError is not caught.
+    box [V] as for `states`; budget: wall time for all of them [s]; require_proof: a requirement is met only by
+    what is proved, so that one that rests on stations, a simulation or corners is undecided; hear: is told
+    each outcome as soon as it is there. CircuitError for a circuit that is wrong in itself; what goes wrong in
+    one requirement makes that one undecided. InternalError is not caught.
     """
     given = dict(settings or {})
     if circuit.requirements:
         check(circuit)
         parameter_values(circuit, given)
     computed = Computed(circuit, box, budget, require_proof)
-    return tuple(_outcome(computed, requirement, given) for requirement in circuit.requirements)
+    outcomes = []
+    for requirement in circuit.requirements:
+        outcomes.append(_outcome(computed, requirement, given))
+        if hear:
+            hear(outcomes[-1])
+    return tuple(outcomes)
 
 
 def _outcome(computed: Computed, requirement: Requirement, settings: Mapping[str, float]) -> RequirementOutcome:
