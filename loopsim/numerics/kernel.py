@@ -34,6 +34,7 @@ SAFETY = 0.9  # factor on the predicted step
 SHRINK, GROW = 0.125, 8.0  # a step changes at most by these
 LANDING = 1.0 + 1e-9  # a step that would end this close to a corner ends on it
 BEND, TOO_BENT = 0.25, 0.5  # wanted and largest change of the Jacobian over a step; see docs/explanation/transient.md
+UNSEEN = 1e-2  # rate of Newton assumed at least until two changes were seen: this step may be the first to meet a knee
 STALE = 0.03  # expected ratio of two changes of Newton up to which factors are used again
 ROUNDING = 0.1  # of the tolerance: changes of Newton that stop shrinking below it are rounding; doubled at each
 # failure in a row, because rounding grows with C / h and a shorter step does not help against it
@@ -700,7 +701,7 @@ def advance(
             continue
         start_iterate(state[POLYNOMIAL_STEP] > 0.0, polynomial, step / max(state[POLYNOMIAL_STEP], 1e-300), nodes, inverse, Z, P)
         if not full:
-            state[RATE] = max(state[RATE], 1e-16) ** 0.8
+            state[RATE] = max(max(state[RATE], 1e-16) ** 0.8, UNSEEN)
         verdict, iterations, fresh = -1.0, 0, True
         while verdict < 0.0 and iterations < limit:
             for a in range(stages):

@@ -126,7 +126,7 @@ def advance(
         Z = _carried_on(polynomial, step / state[kernel.POLYNOMIAL_STEP], method.nodes) if state[kernel.POLYNOMIAL_STEP] > 0.0 else np.zeros((stages, n))  # noqa: E501
         P = method.inverse @ Z
         sources = np.array([source(time + c * step) for c in method.nodes])
-        state[kernel.RATE] = max(state[kernel.RATE], 1e-16) ** 0.8
+        state[kernel.RATE] = max(max(state[kernel.RATE], 1e-16) ** 0.8, kernel.UNSEEN)
         verdict, iterations = -1.0, 0
         while verdict < 0.0 and iterations < limit:
             R = _residual(method, step, P, arrays.right_side(x + Z, sources), arrays.C)

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from moving_circuits import blinker, charging, follower, latch, negative_conductance, series_tank, trigger
 
+import loopsim
 from loopsim.analyses.transient import TransientError
 from loopsim.build import CircuitBuilder, waveform
 from loopsim.errors import AnalysisError, CircuitError
@@ -211,3 +212,23 @@ def test_a_run_does_not_rest_on_an_unstable_point_because_its_steps_are_long() -
     # ten times as long it would be too many steps: then the run says what it did not see
     longer = b.circuit().transient(50e-3)
     assert longer.end.startswith("oscillates") or any("unstable" in note for note in longer.notes)
+
+
+RAILS_THAT_CROSS = """circuit kiln_release "a comparator from nothing"
+gnd -> rail: 5 V -> vcc
+vcc -- r_delay: 100 kohm -- ramp -- c_delay: 1 uF -- gnd
+vcc -- r_top: 22 kohm -- half -- r_bottom: 22 kohm -- gnd
+kind decider = comparator(gain = 100 dB, propagation_delay = 300 ns, output = push_pull, headroom = 50 mV)
+u1: decider(plus = ramp, minus = half, out = run, high = vcc, low = gnd)
+"""
+
+
+@pytest.mark.parametrize("tolerance", [1e-4, 1e-5, 1e-6])
+def test_a_comparator_comes_up_through_the_point_where_its_limits_cross(tolerance: float) -> None:
+    """Below 0.1 V of supply both limits of the output hold it between them; then it must follow the lower one. The first step that
+    meets that knee may not be believed after one change of Newton, however well the steps before it went."""
+    run = loopsim.parse(RAILS_THAT_CROSS).transient(1.0, tolerance=tolerance)
+    assert run.completed
+    held = run.at(np.array([0.02, 0.05]))["run"]
+    assert held == pytest.approx([0.05, 0.05], abs=2e-3)  # the lower limit: headroom above low
+    assert run.final("run") == pytest.approx(4.95, abs=0.01)
