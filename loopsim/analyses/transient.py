@@ -266,7 +266,7 @@ def transient(
         end, end_state, note = _end(circuit, plan, path, settings, listed, duration)
         notes += [note] if note else []
     if ramp_time > 0.0:
-        notes.append(f"supplies came up together within {ramp_time:g} s")
+        notes.append(f"supplies came up together within {1e3 * ramp_time:g} ms")
     run = Transient(
         circuit=circuit.name,
         file=circuit.file,

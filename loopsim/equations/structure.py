@@ -123,7 +123,7 @@ def findings(circuit: Circuit) -> tuple[Finding, ...]:
     """Everything odd about the structure, fatal things first. CircuitError only for what keeps the equations from being set
     up."""
     graph = _graph(circuit)
-    found = [*_missing_ground(graph), *_floating(graph), *_voltage_loops(graph)]
+    found = [*_empty(graph), *_missing_ground(graph), *_floating(graph), *_voltage_loops(graph)]
     if not any(finding.fatal for finding in found):
         found += _undetermined(graph)
     found += [*_short_circuited(graph), *_single_connections(graph), *_no_current(graph)]
@@ -141,6 +141,7 @@ def check(circuit: Circuit) -> None:
 
 
 _HINTS = {
+    "empty-circuit": "join parts to nets beside gnd, as in: gnd -> battery: 5 V -> vcc -- r1: 1 kohm -- gnd",
     "missing-ground": "`gnd` is the reference of all voltages: join something to it",
     "floating-net": "give it a path for direct current, such as a large resistor to gnd",
     "current-cut": "give it a path for direct current, such as a large resistor to gnd",
@@ -167,6 +168,12 @@ def _listed(names: Sequence[str]) -> str:
     if len(names) > SHOWN:
         return f"{', '.join(quoted)} and {len(names) - SHOWN} more"
     return quoted[0] if len(quoted) == 1 else f"{', '.join(quoted[:-1])} and {quoted[-1]}" if quoted else ""
+
+
+def _empty(graph: _Graph) -> list[Finding]:
+    if graph.circuit.nets:
+        return []
+    return [Finding("empty-circuit", "there is no net beside gnd, so no voltage to ask for", (), (), True)]
 
 
 def _missing_ground(graph: _Graph) -> list[Finding]:

@@ -42,8 +42,7 @@ def cycle_text(found: Cycle) -> str:
         f"period {engineering(found.period, 's', 7)}, frequency {engineering(found.frequency, 'Hz', 7)}; {found.verdict}",
     ]
     if found.exact:
-        shown = [_multiplier(m) for m in found.multipliers[:MULTIPLIERS]]
-        lines.append(f"largest multipliers {', '.join(shown) or 'none'} (shift in time off by {found.shift_error:.1e})")
+        lines.append(_multipliers(found))
     lines += ["", f"{'net':<16}{'lowest':>12}{'highest':>12}{'swing':>12}{'duty':>9}"]
     for net in nets:
         low, high = found.extremes(net)
@@ -51,6 +50,14 @@ def cycle_text(found: Cycle) -> str:
         lines.append(f"{net:<16}{columns}{100.0 * found.duty(net):>7.2f} %")
     lines += _more(len(found.watch or found.nets) - len(nets), found.notes)
     return "\n".join(lines)
+
+
+def _multipliers(found: Cycle) -> str:
+    """The largest ones; what is smaller than the error of the one that is known to be 1 is not told from nothing."""
+    clear = [_multiplier(m) for m in found.multipliers[:MULTIPLIERS] if abs(m) > found.shift_error]
+    small = "" if len(clear) == MULTIPLIERS or len(clear) == len(found.multipliers) else f"below {found.shift_error:.1e}"
+    shown = ", ".join([*clear, *([f"the others {small}" if clear else f"all {small}"] if small else [])])
+    return f"multipliers: {shown or 'none'}; the one of a shift in time is 1 within {found.shift_error:.1e}"
 
 
 def _multiplier(value: complex) -> str:

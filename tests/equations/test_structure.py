@@ -209,6 +209,16 @@ def test_a_circuit_without_ground_is_told_so_first():
     assert findings(b.circuit())[0].code == "missing-ground"
 
 
+@pytest.mark.parametrize("text", ["", "gnd -- r1: 1 kohm -- gnd\n"])
+def test_a_circuit_without_a_net_is_told_so(text):
+    import loopsim
+
+    circuit = loopsim.parse(f'circuit nothing "Nothing"\n{text}')
+    assert findings(circuit)[0].code == "empty-circuit"
+    with pytest.raises(CircuitError, match="no net beside gnd"):
+        circuit.states()
+
+
 def test_a_controlled_current_may_set_what_only_a_capacitor_holds():
     # transconductor, capacitor and follower in a loop: at rest the loop sets the voltage
     b = _base()
