@@ -230,5 +230,5 @@ def test_a_comparator_comes_up_through_the_point_where_its_limits_cross(toleranc
     run = loopsim.parse(RAILS_THAT_CROSS).transient(1.0, tolerance=tolerance)
     assert run.completed
     held = run.at(np.array([0.02, 0.05]))["run"]
-    assert held == pytest.approx([0.05, 0.05], abs=2e-3)  # the lower limit: headroom above low
+    assert held == pytest.approx([0.05, 0.05], abs=8e-3)  # the lower limit: headroom above low, and a few knees of 1 mV
     assert run.final("run") == pytest.approx(4.95, abs=0.01)
