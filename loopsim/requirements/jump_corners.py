@@ -16,7 +16,7 @@ from loopsim.errors import AnalysisError
 from loopsim.requirements.computed import Computed, Settings
 from loopsim.requirements.corners import ALL_CORNERS_OF_FOLDS, Corner, over_tolerances
 from loopsim.requirements.judged import Judged, number
-from loopsim.requirements.jumps import JUMPS, jumps
+from loopsim.requirements.jumps import JUMPS, jumps, ways_of
 from loopsim.requirements.limits import limits_of
 from loopsim.requirements.proof import CORNERS
 from loopsim.requirements.targets import net_of
@@ -93,11 +93,6 @@ class Followed:
         net, along = net_of(self.requirement), self.requirement.along
         where = f"hysteresis {value:.6g}" if self.requirement.measure == "hysteresis" else f"{net} jumps at {along} = {value:.6g}"
         return number(value, error, limits, self.requirement.relation.form, CORNERS, where)
-
-
-def ways_of(requirement: Requirement) -> tuple[str, ...]:
-    """The thresholds that a measure is made of."""
-    return ("rising", "falling") if requirement.measure == "hysteresis" else (JUMPS[requirement.measure],)
 
 
 def _key(corner: Corner) -> tuple[tuple[str, float], ...]:

@@ -41,11 +41,31 @@ def judge_trace(curve: Trace, requirement: Requirement, limits: Limits) -> Judge
     if not curve.complete or curve.notes:
         why = curve.notes[0] if curve.notes else f"complete at {len(curve.complete_at)} of {len(curve.stations)} stations"
         return open_question(f"the trace is not complete: {why}", limits, measured)
+    no_start = _no_start(curve, requirement)
+    if no_start:
+        return open_question(no_start, limits, measured)
     proof = PROVED if curve.over_range and not curve.gaps else STATIONS.format(len(curve.stations))
     if value is None:
         return _none(curve, requirement, limits, proof)
     error = _precision(curve, requirement.measure)
     return number(value, error, limits, requirement.relation.form, proof, _where(curve, requirement, value))
+
+
+def ways_of(requirement: Requirement) -> tuple[str, ...]:
+    """The thresholds that a measure is made of."""
+    return ("rising", "falling") if requirement.measure == "hysteresis" else (JUMPS[requirement.measure],)
+
+
+def _no_start(curve: Trace, requirement: Requirement) -> str:
+    """Why a slow ride has nowhere to begin, or may begin in more states than are known to be stable; empty where it can."""
+    for way in ways_of(requirement):
+        end = curve.low if way == "rising" else curve.high
+        stable = [b.stable[k] for b in curve.branches if not b.closed for k in (0, -1) if float(b.values[k]) == end]
+        if None in stable:
+            return f"whether a state at {requirement.along} = {end:.6g} is stable is undecided"
+        if True not in stable:
+            return f"no state at {requirement.along} = {end:.6g} is stable, so that no slow ride begins there"
+    return ""
 
 
 def _none(curve: Trace, requirement: Requirement, limits: Limits, proof: str) -> Judged:
@@ -58,8 +78,7 @@ def _none(curve: Trace, requirement: Requirement, limits: Limits, proof: str) ->
     if unlanded:
         return open_question(f"where the jump at {unlanded[0].at:.6g} lands was not found", limits)
     net = net_of(requirement)
-    ways = ("rising", "falling") if requirement.measure == "hysteresis" else (JUMPS[requirement.measure],)
-    small = [fold for fold in curve.folds if fold.from_stable and fold.direction in ways]
+    small = [fold for fold in curve.folds if fold.from_stable and fold.direction in ways_of(requirement)]
     if small:
         at, lands = small[0], small[0].lands or {}
         note = f"a branch ends at {at.at:.6g}, but {net} hardly moves there: {at.nets[net]:.4g} to {lands.get(net, at.nets[net]):.4g} V"
