@@ -150,6 +150,18 @@ def test_a_file_that_cannot_be_written_costs_neither_the_answer_nor_the_other_fi
     assert len(Path("o.csv").read_text(encoding="utf-8").splitlines()) == 5
 
 
+@pytest.mark.skipif(not hasattr(os, "mkfifo"), reason="needs pipes with a name")
+def test_a_report_into_a_link_or_a_pipe_leaves_it_what_it_is(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    os.symlink("real.csv", "link.csv")
+    assert said(capsys, "lib", "--csv", "link.csv")[0] == 1
+    assert Path("link.csv").is_symlink() and Path("real.csv").read_text(encoding="utf-8").startswith("file,")
+    os.mkfifo("pipe")
+    with subprocess.Popen(["cat", "pipe"], stdout=subprocess.PIPE, text=True) as reader:
+        assert said(capsys, "lib", "--csv", "pipe")[0] == 1
+        assert reader.stdout is not None and reader.stdout.read().startswith("file,")
+    assert Path("pipe").is_fifo()
+
+
 def test_reports_hold_violations_and_broken_files(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
     (folder / "lib" / "bad.loop").write_text("circuit bad\nexpect x y\n", encoding="utf-8")
     _, out, _ = said(capsys, "lib", "--junit", "o.xml", "--annotations", "--summary", "o.md")
@@ -192,6 +204,8 @@ def test_a_run_that_is_not_whole_is_not_accepted(folder: Path, capsys: pytest.Ca
         (["lib", "--accept"], "--accept needs the baseline"),
         (["lib", "--json", "--annotations"], "both want standard output"),
         (["lib", "--jobs", "0"], "at least 1"),
+        (["lib", "--junit", "lib/good.loop"], "a circuit file would be overwritten"),
+        (["lib", "--baseline", "lib/good.loop", "--accept"], "a circuit file would be overwritten"),
         (["lib", "--journl", "x"], "did you mean `--journal`?"),
         (["nowhere"], "there is no file `nowhere`"),
         (["lib/god.loop"], "did you mean `lib/good.loop`?"),

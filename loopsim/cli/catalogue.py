@@ -7,7 +7,7 @@ from loopsim.cli.options import Option, Verb
 
 SET = Option("--set", "LET=VALUE", "give a let another value, as --set level=4.5V; repeatable", values.setting, repeatable=True)
 JSON = Option("--json", "", "one JSON document on standard output (docs/reference/json.md)")
-CSV = Option("--csv", "FILE", "write the table to FILE, numbers in SI units with all their digits")
+CSV = Option("--csv", "FILE", "write the table to FILE, numbers in SI units with all their digits", values.report)
 PLOT = Option("--plot", "FILE", "draw it; the suffix decides: svg, png or pdf (extra `plot`)", values.picture)
 BOX = Option("--box", "VOLTS", "look at all net voltages within +/- VOLTS (1 kV)", values.positive_volts)
 BUDGET = Option("--budget", "SECONDS", "stop after SECONDS and say what is left (60 s)", values.positive_seconds)
@@ -156,11 +156,11 @@ VERIFY = Verb(
         Option("--fresh", "", "forget the journal, judge everything anew"),
         JSON,
         CSV,
-        Option("--junit", "FILE", "write a JUnit report to FILE"),
-        Option("--summary", "FILE", "write a page in Markdown to FILE, for the summary of a CI job"),
+        Option("--junit", "FILE", "write a JUnit report to FILE", values.report),
+        Option("--summary", "FILE", "write a page in Markdown to FILE, for the summary of a CI job", values.report),
         Option("--annotations", "", "error lines that a CI server shows beside the source"),
         Option("--timings", "", "with wall times in --json and --junit; without, equal runs write equal files"),
-        Option("--baseline", "FILE", "compare with a stored run: what moved, appeared or vanished"),
+        Option("--baseline", "FILE", "compare with a stored run: what moved, appeared or vanished", values.report),
         Option("--accept", "", "store this run as the baseline"),
     ),
     "loopsim.cli.verify:run",

@@ -113,14 +113,19 @@ def _split(text: str) -> tuple[str, str]:
 
 
 def write_file(path: str, text: str) -> tuple[str, ...]:
-    """Write an answer's file whole or not at all; the remark to make."""
-    temporary = f"{path}.{os.getpid()}.part"
+    """Write an answer's file whole or not at all; the remark to make. A link stays one, and so does a device."""
+    target = os.path.realpath(path)
+    temporary = f"{target}.{os.getpid()}.part"
+    if os.path.exists(target) and not os.path.isfile(target):
+        temporary = target
     try:
         with open(temporary, "w", encoding="utf-8", newline="") as stream:
             stream.write(text)
-        os.replace(temporary, path)
+        if temporary != target:
+            os.replace(temporary, target)
     except OSError as error:
-        with contextlib.suppress(OSError):
-            os.remove(temporary)
+        if temporary != target:
+            with contextlib.suppress(OSError):
+                os.remove(temporary)
         raise LoopsimError(f"cannot write `{path}`: {error.strerror}") from None
     return (f"wrote {printable(path)}",)

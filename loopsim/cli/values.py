@@ -83,6 +83,13 @@ def names(text: str) -> tuple[str, ...]:
     return found
 
 
+def report(text: str) -> str:
+    """A file name for an answer: never that of a circuit."""
+    if text.lower().endswith(".loop"):
+        raise ValueError("a circuit file would be overwritten")
+    return text
+
+
 def picture(text: str) -> str:
     """A file name whose suffix says which kind of picture."""
     if not text.lower().endswith((".svg", ".png", ".pdf")):

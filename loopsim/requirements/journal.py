@@ -8,9 +8,11 @@ within the run that wrote it: a new run tries again.
 
 from __future__ import annotations
 
+import errno
 import hashlib
 import json
 import os
+import stat
 from collections.abc import Callable
 
 from loopsim.errors import LoopsimError
@@ -145,6 +147,8 @@ def _decided(record: Record) -> bool:
 
 
 def _whole(handle: int) -> bytes:
+    if not stat.S_ISREG(os.fstat(handle).st_mode):
+        raise OSError(errno.EINVAL, "it is no regular file")
     os.lseek(handle, 0, os.SEEK_SET)
     parts = []
     while part := os.read(handle, 1 << 20):

@@ -1,10 +1,12 @@
 """Workers that die or stall on purpose, for the tests of library runs. The product has no such switch."""
 
 import os
+import re
 import signal
 import time
 from concurrent.futures import Executor, Future
 
+from loopsim.requirements.wall import last_resort
 from loopsim.requirements.workers import WorkerPool
 
 
@@ -34,6 +36,12 @@ def process() -> int:
 def sleeps(seconds: float) -> int:
     time.sleep(seconds)
     return os.getpid()
+
+
+def stuck(seconds: float) -> None:
+    """Deep in compiled code, with the interpreter's lock held, for longer than anybody waits."""
+    with last_resort(seconds):
+        re.match(r"(a+)+$", "a" * 60 + "b")
 
 
 def raises(text: str) -> None:

@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
-from dying import leaves, prints, process, raises, sleeps, threads
+from dying import leaves, prints, process, raises, sleeps, stuck, threads
 
 from loopsim.requirements.wall import Overrun, within_wall
 from loopsim.requirements.workers import WorkerDied, WorkerPool
@@ -30,6 +30,11 @@ def test_a_death_is_told_with_its_code_and_the_next_task_gets_a_new_worker(pool:
     with pytest.raises(WorkerDied, match="ended with exit code 7"):
         dead.result()
     assert before.result() != after.result()
+
+
+def test_a_task_that_nothing_else_stops_ends_with_its_worker(pool: WorkerPool) -> None:
+    with pytest.raises(WorkerDied, match="ended with exit code 1"):
+        pool.submit(stuck, 0.2).result(timeout=30.0)
 
 
 def test_what_a_task_prints_or_raises_stays_apart_from_its_answer(pool: WorkerPool) -> None:
