@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from loopsim.analyses.results import Verdict
 from loopsim.equations.ordering import groups, pattern
 from loopsim.equations.system import System
-from loopsim.numerics.spectrum import Spectrum, determinant_signs, spectra
+from loopsim.numerics.spectrum import Spectrum, determinant_signs, ordered, spectra
 
 Array: TypeAlias = NDArray[np.float64]
 Groups: TypeAlias = list[tuple[NDArray[np.int64], NDArray[np.int64]]]
@@ -50,10 +50,10 @@ def judge(system: System, x: Array) -> list[Verdict]:
     everything = pattern(system) | (system.C != 0.0)
     everything[candidates, candidates] = True
     order = groups(system, everything)
-    own = _spectra(order, jacobians, system.C)
     dynamic = bool(np.any(system.C != 0.0))
     trials = _trials(system, candidates, TRIALS if not dynamic else 3)
-    strayed = [_spectra(order, jacobians, matrix) for matrix in trials]
+    own, *strayed = _spectra(order, jacobians, np.stack([system.C, *trials]))
+    grows = [_growing(one) for one in (own, *strayed)]
     return [
         _verdict(
             system,
@@ -61,6 +61,7 @@ def judge(system: System, x: Array) -> list[Verdict]:
             bool(wrong[i]),
             own[i],
             [trial[i] for trial in strayed],
+            [outcome[i] for outcome in grows],
             trials,
             candidates,
             dynamic,
@@ -69,20 +70,59 @@ def judge(system: System, x: Array) -> list[Verdict]:
     ]
 
 
-def _spectra(order: Groups, jacobians: Array, dynamics: Array) -> list[Spectrum]:
-    """Eigenvalues of the whole circuit, group by group of what needs what: nets that sources hold fixed then hide no constraint."""
-    parts: list[list[Spectrum]] = []
+def _spectra(order: Groups, jacobians: Array, dynamics: Array) -> list[list[Spectrum]]:
+    """Eigenvalues of the whole circuit with each C of dynamics: (t, n, n), for each Jacobian: (batch, n, n); group by group of what needs
+    what: nets that sources hold fixed then hide no constraint. Points that share the state of a group share its spectrum."""
+    parts: list[tuple[list[list[Spectrum]], NDArray[np.int64]]] = []
     for unknowns, rows in order:
-        block = dynamics[np.ix_(rows, unknowns)]
-        if np.any(block != 0.0):
-            parts.append(spectra(jacobians[:, rows[:, None], unknowns[None, :]], block))
+        blocks = dynamics[:, rows[:, None], unknowns]
+        if not np.any(blocks):
+            continue
+        size = len(unknowns)
+        different, which = np.unique(
+            jacobians[:, rows[:, None], unknowns].reshape(len(jacobians), -1), axis=0, return_inverse=True
+        )
+        count = len(different)
+        pairs = spectra(
+            np.tile(different.reshape(count, size, size), (len(blocks), 1, 1)), np.repeat(blocks, count, axis=0)
+        )
+        parts.append(([pairs[t * count : (t + 1) * count] for t in range(len(blocks))], which.reshape(-1)))
+    return [
+        _joined([(found[t], which) for found, which in parts], len(jacobians)) for t in range(len(dynamics))
+    ]
+
+
+def _joined(parts: list[tuple[list[Spectrum], NDArray[np.int64]]], batch: int) -> list[Spectrum]:
+    """The spectra of all groups of each point as one, largest real part first."""
+    if not parts:
+        return [Spectrum(np.zeros(0, dtype=complex), np.zeros(0))] * batch
+    if all(len({len(s.values) for s in found}) == 1 for found, _ in parts):
+        values = np.concatenate([np.array([s.values for s in found])[which] for found, which in parts], axis=1)
+        errors = np.concatenate([np.array([s.errors for s in found])[which] for found, which in parts], axis=1)
+        return ordered(values, errors)
     joined = []
-    for i in range(len(jacobians)):
-        values = np.concatenate([part[i].values for part in parts]) if parts else np.zeros(0, dtype=complex)
-        errors = np.concatenate([part[i].errors for part in parts]) if parts else np.zeros(0)
+    for i in range(batch):
+        values = np.concatenate([found[which[i]].values for found, which in parts])
+        errors = np.concatenate([found[which[i]].errors for found, which in parts])
         sequence = np.lexsort((-values.imag, -values.real))
         joined.append(Spectrum(values[sequence], errors[sequence]))
     return joined
+
+
+def _growing(listed: list[Spectrum]) -> list[bool | None]:
+    """Whether each grows: None when its largest real part is within its error bound of zero, or it has no values."""
+    lengths = np.array([len(one.values) for one in listed], dtype=np.int64)
+    full = np.flatnonzero(lengths)
+    answers: list[bool | None] = [None] * len(listed)
+    if len(full) == 0:
+        return answers
+    starts = np.concatenate([[0], np.cumsum(lengths[full])[:-1]])
+    real = np.concatenate([listed[i].values for i in full]).real
+    errors = np.concatenate([listed[i].errors for i in full])
+    upper, lower = np.maximum.reduceat(real + errors, starts), np.maximum.reduceat(real - errors, starts)
+    for i, above, below in zip(full.tolist(), upper.tolist(), lower.tolist(), strict=True):
+        answers[i] = True if below > 0.0 else False if above < 0.0 else None
+    return answers
 
 
 def _branch_orientation(system: System) -> Array:
@@ -155,24 +195,11 @@ def _trials(system: System, candidates: NDArray[np.int64], count: int) -> list[A
     return trials
 
 
-def _growth(spectrum: Spectrum) -> tuple[float, bool | None]:
-    """(largest real part, whether it grows: None when within its error bound)."""
-    if len(spectrum.values) == 0:
-        return 0.0, None
-    upper = float(np.max(spectrum.values.real + spectrum.errors))
-    lower = float(np.max(spectrum.values.real - spectrum.errors))
-    real = float(np.max(spectrum.values.real))
-    if lower > 0.0:
-        return real, True
-    return real, False if upper < 0.0 else None
-
-
 def _verdict(
-    system: System, jacobian: Array, wrong: bool, own: Spectrum, strayed: list[Spectrum], trials: list[Array],
-    candidates: NDArray[np.int64], dynamic: bool,
+    system: System, jacobian: Array, wrong: bool, own: Spectrum, strayed: list[Spectrum],
+    growing: list[bool | None], trials: list[Array], candidates: NDArray[np.int64], dynamic: bool,
 ) -> Verdict:  # fmt: skip
-    _, grows = _growth(own)
-    outcomes = [_growth(s)[1] for s in strayed]
+    grows, *outcomes = growing
     assumed = (
         f"assumed {STRAY * 1e12:g} pF from each net without capacitance to gnd, each varied by 1/10 to 10"
     )
@@ -283,7 +310,7 @@ def _filled(
 
 def growing_mode(jacobian: Array, dynamics: Array, value: complex) -> NDArray[np.complex128]:
     """The direction v with (J + value C) v = 0, largest entry 1: (n,)."""
-    matrix = jacobian + value * dynamics
+    matrix = jacobian + (value if value.imag else value.real) * dynamics
     rows = np.max(np.abs(matrix), axis=1)
     _, _, right = np.linalg.svd(matrix / np.where(rows > 0.0, rows, 1.0)[:, None])
     mode = right[-1].conj()

@@ -123,7 +123,7 @@ def _points_slope_bounds(low: Array, high: Array, p: Any) -> Pair:
 def _quadratic(c0: Array, c1: Array, c2: Array, low: Array, high: Array) -> Pair:
     """Range of c0 + c1 w + c2 w^2: at the ends and at the vertex, whose own rounding enters squared."""
     vertex = np.where(c2 != 0.0, -0.5 * c1 / np.where(c2 != 0.0, c2, 1.0), low)
-    vertex = np.clip(np.nan_to_num(vertex, nan=0.0), low, high)
+    vertex = np.fmin(np.fmax(vertex, low), high)
     ends = [low, vertex, high]
     values = [c0 + (c1 + c2 * t) * t for t in ends]
     size = np.maximum(np.abs(low), np.abs(high))
@@ -190,7 +190,8 @@ def stationary(kind: int, a: Array, low: Array, high: Array, p: Any) -> list[Arr
             found = [p[j] + 0.0 * low for j in range(2, len(p) - 1, 2)]
         else:
             found = _polynomial_stationary(a, low, high, p)
-    return [np.clip(np.nan_to_num(t, nan=0.0), low, high) for t in found]
+    # fmax and fmin put an end in the place of what is no number
+    return [np.fmin(np.fmax(t, low), high) for t in found]
 
 
 def _charge_sheet_stationary(a: Array) -> Array:
@@ -291,10 +292,33 @@ def chord(kind: int, low: Array, high: Array, p: Any) -> tuple[Array, Array, Arr
     width = high - low
     middle = 0.5 * low + 0.5 * high
     flat = width <= FLAT * np.maximum(1.0, np.abs(middle) * 1e-6)
-    rise = VALUE[kind](high, p) - VALUE[kind](low, p)
-    a = np.where(flat, SLOPE[kind](middle, p), rise / np.where(width > 0.0, width, 1.0))
-    e_low, e_high = deviation(kind, a, low, high, p)
-    return a, e_low, e_high
+    ends = np.array([low, high])
+    values = VALUE[kind](ends, [np.asarray(parameter)[None] for parameter in p])
+    a = (values[1] - values[0]) / np.where(width > 0.0, width, 1.0)
+    if flat.any():
+        a = np.where(flat, SLOPE[kind](middle, p), a)
+    if kind in CONVEX:
+        return a, *_convex_deviation(kind, a, ends, values)
+    return a, *deviation(kind, a, low, high, p)
+
+
+def _convex_deviation(kind: int, a: Array, ends: Array, values: Array) -> Pair:
+    """`deviation` of a convex kind without parameters; ends: (2, ...) low and high; values: (2, ...) computed there.
+
+    Highest at an end. From below it is held by the tangent at any point t, phi(w) >= phi(t) + phi'(t) (w - t); t is near where the slope is
+    a, and what is left of phi'(t) - a, with its rounding, is charged over the whole way to the end where it lowers the tangent.
+    """
+    product = a * ends
+    error = np.abs(values) * FUNCTION_ERROR + (np.abs(product) * (2.0 * UNIT) + TINY)
+    top = up(values - product + error)
+    t = stationary(kind, a, ends[0], ends[1], ())[0]
+    value, slope = VALUE[kind](t, ()), SLOPE[kind](t, ())
+    product = a * t
+    base = down(value - product - (np.abs(value) * FUNCTION_ERROR + (np.abs(product) * (2.0 * UNIT) + TINY)))
+    excess, unsure = slope - a, slope * FUNCTION_ERROR + (np.abs(a) * (2.0 * UNIT) + TINY)
+    after = np.minimum(down(excess - unsure), 0.0) * up(ends[1] - t)
+    before = np.maximum(up(excess + unsure), 0.0) * up(t - ends[0])
+    return down(base + down(np.minimum(after, -before))), np.maximum(top[0], top[1])
 
 
 def _inverse_exponential(y: Array) -> Array:
@@ -336,6 +360,16 @@ _INVERSE: dict[int, Callable[[Array], Array]] = {
 }
 
 
+# values that each kind certainly stays between
+REACH: dict[int, tuple[float, float]] = {
+    Kind.EXPONENTIAL: (-1.0 - 1e-12, np.inf),
+    Kind.SATURATION: (-1.0 - 1e-12, 1.0 + 1e-12),
+    Kind.SOFTPLUS: (0.0, np.inf),
+    Kind.CHARGE_SHEET: (0.0, np.inf),
+    Kind.ARCTANGENT: (-1.5708, 1.5708),
+}
+
+
 def inverse(kind: int, low: Array, high: Array, y_low: Array, y_high: Array, p: Any) -> Pair:
     """Part of [low, high] where phi can lie in [y_low, y_high]: a hull, empty where the new low exceeds the new high.
 
@@ -348,29 +382,20 @@ def inverse(kind: int, low: Array, high: Array, y_low: Array, y_high: Array, p: 
 
 
 def _proved_inverse(kind: int, y_low: Array, y_high: Array, p: Any) -> Pair:
-    solve = _INVERSE[kind]
-    least = solve(y_low)
-    step = np.abs(least) * 1e-13 + 1e-13
-    least = least - step
+    y = np.array([y_low, y_high])
+    w = _INVERSE[kind](y)
+    step = np.abs(w) * 1e-13 + 1e-13
+    w[0] -= step[0]
+    w[1] += step[1]
+    value = VALUE[kind](w, p)
+    error = value_error(kind, w, p, value)
     # phi is increasing: if phi(least) < y_low for certain, then phi(w) < y_low for all w <= least
-    least = np.where(value_at(kind, least, p)[1] <= y_low, least, -HUGE)
-    most = solve(y_high)
-    most = most + (np.abs(most) * 1e-13 + 1e-13)
-    most = np.where(value_at(kind, most, p)[0] >= y_high, most, HUGE)
+    least = np.where(up(value[0] + error[0]) <= y_low, w[0], -HUGE)
+    most = np.where(down(value[1] - error[1]) >= y_high, w[1], HUGE)
     # values that phi never reaches empty the row
-    if kind == Kind.EXPONENTIAL:
-        least, most = (
-            np.where(y_high < -1.0 - 1e-12, HUGE, least),
-            np.where(y_high < -1.0 - 1e-12, -HUGE, most),
-        )
-    elif kind in (Kind.SOFTPLUS, Kind.CHARGE_SHEET):
-        least, most = np.where(y_high < 0.0, HUGE, least), np.where(y_high < 0.0, -HUGE, most)
-    elif kind == Kind.SATURATION:
-        none = (y_high < -1.0 - 1e-12) | (y_low > 1.0 + 1e-12)
-        least, most = np.where(none, HUGE, least), np.where(none, -HUGE, most)
-    elif kind == Kind.ARCTANGENT:
-        none = (y_high < -1.5708) | (y_low > 1.5708)
-        least, most = np.where(none, HUGE, least), np.where(none, -HUGE, most)
+    lowest, highest = REACH[kind]
+    if (none := (y_high < lowest) | (y_low > highest)).any():
+        return np.where(none, HUGE, least), np.where(none, -HUGE, most)
     return least, most
 
 
@@ -389,12 +414,16 @@ def _cuts(low: Array, high: Array, pieces: int) -> Array:
 
 def _shave(kind: int, low: Array, high: Array, y_low: Array, y_high: Array, p: Any) -> Pair:
     """Cut [low, high] into pieces and drop those from both ends whose range misses [y_low, y_high]."""
+    # the piece axis stands in front of the box axis, behind that of the parameters
+    q = [np.asarray(parameter)[None] for parameter in p]
     for _ in range(2):
         cuts = _cuts(low, high, SHAVE_PIECES)
         starts, stops = cuts[:-1], cuts[1:]
-        # the new leading axis must stand behind the parameter axis
-        q = [np.asarray(p[j])[None, ...] for j in range(len(p))]
-        bottom, top = bounds(kind, starts, stops, q)
+        value = VALUE[kind](cuts, q)
+        error = value_error(kind, cuts, q, value)
+        at_low, at_high = down(value - error), up(value + error)
+        slopes = slope_bounds(kind, starts, stops, q)
+        bottom, top = _between_lines((at_low[:-1], at_high[:-1]), (at_low[1:], at_high[1:]), *slopes, stops - starts)
         hit = (top >= y_low) & (bottom <= y_high)
         some = np.any(hit, axis=0)
         first = np.argmax(hit, axis=0)

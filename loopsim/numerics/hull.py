@@ -9,41 +9,35 @@ import numpy as np
 from numpy.typing import NDArray
 
 from loopsim.numerics.boxes import Boxes
-from loopsim.numerics.enclosure import TINY, divide_clear, down, gamma, multiply, up
+from loopsim.numerics.enclosure import TINY, divide_clear, gamma, multiply, up
 from loopsim.numerics.problem import Problem
 
 Array: TypeAlias = NDArray[np.float64]
+
+WIDE = 24  # terms in a row from which running sums are quicker than a product with a matrix of ones
 
 
 def hull(problem: Problem, boxes: Boxes) -> Boxes:
     """One pass of hull consistency: every linear row to every variable in it, then every scalar function both ways."""
     table = problem.table
-    b, linear = len(boxes), len(table.places)
-    pad = np.zeros((b, 1))
-    z_low = np.concatenate([boxes.low[:, :linear], pad], axis=1)[:, table.index]
-    z_high = np.concatenate([boxes.high[:, :linear], pad], axis=1)[:, table.index]
-    first, second = table.coefficient * z_low, table.coefficient * z_high
-    t_low, t_high = np.minimum(first, second), np.maximum(first, second)
-    size = np.maximum(-t_low, t_high)
-    if len(table.exclude) <= 24:
-        others_low, others_high, others_size = (
-            t_low @ table.exclude,
-            t_high @ table.exclude,
-            size @ table.exclude,
-        )
-    else:
-        others_low, others_high, others_size = _others(t_low), _others(t_high), _others(size)
+    b, count, width = len(boxes), table.count, len(table.exclude)
+    tops = np.empty((b, 2 * count + 1))  # upper bounds of -z and of z
+    np.negative(boxes.low[:, :count], out=tops[:, :count])
+    tops[:, count:-1] = boxes.high[:, :count]
+    tops[:, -1] = 0.0
+    terms = np.empty((b, 3, *table.weight.shape))  # upper bounds of -c z, of c z, of |c z|
+    np.multiply(np.take(tops, table.gather, axis=1), table.weight, out=terms[:, :2])
+    np.maximum(terms[:, 0], terms[:, 1], out=terms[:, 2])
+    others = (terms.reshape(-1, width) @ table.exclude).reshape(terms.shape) if width <= WIDE else _others(terms)
     # every term carries one rounding itself, the right side two more
-    error = (others_size + table.right_size) * gamma(len(table.exclude) + 4) + TINY
-    first = (table.low - others_high - error) / table.coefficient
-    second = (table.high - others_low + error) / table.coefficient
-    ends = np.empty((2, b, first.shape[1] * first.shape[2] + 1))
-    ends[0, :, :-1] = down(np.minimum(first, second)).reshape(b, -1)
-    ends[1, :, :-1] = up(np.maximum(first, second)).reshape(b, -1)
-    ends[0, :, -1], ends[1, :, -1] = -np.inf, np.inf
+    error = (others[:, 2] + table.size) * gamma(width + 4) + TINY
+    answers = np.empty((b, 2 * error[0].size + 1))
+    answers[:, :-1] = up((others[:, :2] + table.ends + error[:, None]) / table.weight).reshape(b, -1)
+    answers[:, -1] = np.inf
+    least = np.minimum(np.take(answers, table.places, axis=1).min(axis=1), tops[:, :-1])
     low, high = boxes.low.copy(), boxes.high.copy()
-    low[:, :linear] = np.maximum(low[:, :linear], ends[0][:, table.places].max(axis=2))
-    high[:, :linear] = np.minimum(high[:, :linear], ends[1][:, table.places].min(axis=2))
+    np.negative(least[:, :count], out=low[:, :count])
+    high[:, :count] = least[:, count:]
     if problem.m:
         _scalar(problem, low, high)
     return Boxes(low, high)

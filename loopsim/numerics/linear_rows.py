@@ -16,43 +16,47 @@ Index: TypeAlias = NDArray[np.int64]
 
 @dataclass(frozen=True, eq=False)
 class LinearTable:
-    """Sparse rows sum_k coefficient_k z[index_k] in [low, high], padded: index, coefficient: (r, k). places: (z, l) positions of each
-    variable in the flattened (r * k) terms, padded with a position that never binds."""
+    """Sparse rows sum_j c_j z_j in [low, high], padded to k terms, over upper bounds alone: Z = (-z_low, z_high, 0) of a box.
 
-    index: Index
-    coefficient: Array
-    low: Array
-    high: Array
+    gather: (2, r, k) where in Z the upper bound of -c z, then of c z, is found; weight: (r, k) |c|; ends: (2, r, 1) upper bounds of c.z and
+    of -c.z; places: (l, 2 z) positions in the flattened (2, r, k) answers that bound each entry of Z, padded with one past the end, which
+    binds nothing; exclude: (k, k) ones beside the diagonal; size: (r, 1) of the ends; count: how many variables.
+    """
+
+    gather: Index
+    weight: Array
+    ends: Array
     places: Index
     exclude: Array
-    right_size: Array
+    size: Array
+    count: int
 
 
 def linear_table(matrix: Array, low: Array, high: Array) -> LinearTable:
     """Padded form of dense rows; all-zero rows are dropped (they bind nothing here; the caller checks them)."""
     keep = np.any(matrix != 0.0, axis=1)
     matrix, low, high = matrix[keep], low[keep], high[keep]
-    counts = np.count_nonzero(matrix, axis=1)
-    width = max(1, int(counts.max(initial=1)))
-    index = np.full(
-        (len(matrix), width), matrix.shape[1], dtype=np.int64
-    )  # one past the end: a constant zero
-    coefficient = np.ones((len(matrix), width))
-    where: list[list[int]] = [[] for _ in range(matrix.shape[1])]
-    for r, row in enumerate(matrix):
-        columns = np.flatnonzero(row)
-        index[r, : len(columns)] = columns
-        coefficient[r, : len(columns)] = row[columns]
-        for k, column in enumerate(columns):
-            where[column].append(r * width + k)
+    r, n = matrix.shape
+    width = max(1, int(np.count_nonzero(matrix, axis=1).max(initial=1)))
+    gather = np.full((2, r, width), 2 * n, dtype=np.int64)  # a constant zero
+    weight = np.ones((r, width))
+    where: list[list[int]] = [[] for _ in range(2 * n)]
+    for i, row in enumerate(matrix):
+        for k, j in enumerate(np.flatnonzero(row).tolist()):
+            weight[i, k] = abs(row[j])
+            # the upper bound of c z is at z_high where c > 0, at z_low else
+            above, below = (n + j, j) if row[j] > 0.0 else (j, n + j)
+            gather[1, i, k], gather[0, i, k] = above, below
+            # answer 0 bounds c z from above, answer 1 bounds -c z
+            where[above].append(i * width + k)
+            where[below].append((r + i) * width + k)
     length = max(1, max((len(w) for w in where), default=1))
-    places = np.full((matrix.shape[1], length), len(matrix) * width, dtype=np.int64)
-    for column, spots in enumerate(where):  # type: ignore[assignment]
-        places[column, : len(spots)] = spots
+    places = np.full((length, 2 * n), 2 * r * width, dtype=np.int64)
+    for entry, spots in enumerate(where):
+        places[: len(spots), entry] = spots
     size = np.maximum(np.abs(low), np.abs(high))[:, None]
-    return LinearTable(
-        index, coefficient, low[:, None], high[:, None], places, np.ones((width, width)) - np.eye(width), size
-    )
+    ends = np.stack([high, -low])[:, :, None]
+    return LinearTable(gather, weight, ends, places, np.ones((width, width)) - np.eye(width), size, n)
 
 
 def differences(matrix: Array, low: Array, high: Array, n: int) -> tuple[Array, Array, Array]:

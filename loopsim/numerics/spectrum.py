@@ -18,6 +18,7 @@ Complex: TypeAlias = NDArray[np.complex128]
 
 RANK = 1e-11  # a singular value of the equilibrated C below this share of the largest is a zero: capacitors of 1 aF beside 1 F
 SINGULAR = 1e-13  # reciprocal condition of an equilibrated block below which it is treated as singular
+CLEAR = 1e-9  # relative error below which an eigenvalue needs no second look
 ROUNDING = 20.0 * 2.0**-53  # backward error of the eigenvalue solver, relative to the norm
 UNIT = 2.0**-53  # unit roundoff of IEEE double
 
@@ -60,39 +61,68 @@ def determinant_signs(matrices: Array) -> NDArray[np.int64]:
 
 
 def spectra(jacobians: Array, dynamics: Array) -> list[Spectrum]:
-    """Finite eigenvalues for each Jacobian: (batch, n, n), with the common C: (n, n)."""
+    """Finite eigenvalues for each Jacobian: (batch, n, n), with a common C: (n, n), or with one C each: (batch, n, n)."""
     batch, n, _ = jacobians.shape
     none = Spectrum(np.zeros(0, dtype=complex), np.zeros(0))
     if n == 0 or not np.any(dynamics):
         return [none] * batch
+    if n == 1:
+        return _single(jacobians[:, 0, 0], np.broadcast_to(dynamics, jacobians.shape)[:, 0, 0])
+    if dynamics.ndim == 2:
+        dynamics = dynamics[None]
     rows, columns = equilibrate(dynamics)
-    balanced = dynamics * rows[:, None] * columns
+    balanced = dynamics * rows[:, :, None] * columns[:, None, :]
     left, sigma, right = np.linalg.svd(balanced)
-    rank = int(np.count_nonzero(sigma > RANK * sigma[0]))
+    rank = np.broadcast_to(np.count_nonzero(sigma > RANK * sigma[:, :1], axis=1), (batch,))
     # x = columns * right.T y, equations times left.T rows
-    scaled = jacobians * rows[:, None] * columns[None, :]
-    a = -(left.T @ scaled @ right.T)
-    rounded = (2 * n + 6) * UNIT * (np.abs(left.T) @ np.abs(scaled) @ np.abs(right.T))
-    e = sigma[:rank]
+    turn, back = np.swapaxes(left, 1, 2), np.swapaxes(right, 1, 2)
+    scaled = jacobians * rows[:, :, None] * columns[:, None, :]
+    a = -(turn @ scaled @ back)
+    rounded = (2 * n + 6) * UNIT * (np.abs(turn) @ np.abs(scaled) @ np.abs(back))
     # what is left of C beside the singular values, and the rounding of this very product
-    beside = np.abs(left.T @ balanced @ right.T - np.diag(sigma))
-    beside += (2 * n + 6) * UNIT * (np.abs(left.T) @ np.abs(balanced) @ np.abs(right.T))
-    unsure = beside[:rank, :rank] / e[:, None]
-    if rank == n:
-        return _ordinary(a / e[:, None], rounded / e[:, None], unsure)
+    beside = np.abs(turn @ balanced @ back - sigma[:, None, :] * np.eye(n))
+    beside += (2 * n + 6) * UNIT * (np.abs(turn) @ np.abs(balanced) @ np.abs(back))
+    sigma, beside = np.broadcast_to(sigma, (batch, n)), np.broadcast_to(beside, a.shape)
+    found: list[Spectrum] = [none] * batch
+    for r in np.unique(rank[rank > 0]).tolist():
+        which = np.flatnonzero(rank == r)
+        settled = _of_rank(a[which], rounded[which], sigma[which, :r, None], beside[which, :r, :r])
+        for i, spectrum in zip(which.tolist(), settled, strict=True):
+            found[i] = spectrum
+    return found
+
+
+def _single(jacobians: Array, dynamics: Array) -> list[Spectrum]:
+    """One unknown: -J / C, (batch,) each, whose error is that of one division."""
+    none = Spectrum(np.zeros(0, dtype=complex), np.zeros(0))
+    moves = (dynamics != 0.0).tolist()
+    values = -jacobians / np.where(dynamics != 0.0, dynamics, 1.0)
+    return [
+        Spectrum(values[i : i + 1].astype(complex), np.abs(values[i : i + 1]) * ROUNDING) if moves[i] else none
+        for i in range(len(values))
+    ]
+
+
+def _of_rank(a: Array, rounded: Array, e: Array, beside: Array) -> list[Spectrum]:
+    """e x1' = a11 x1 + a12 x2, 0 = a21 x1 + a22 x2 for each of a batch. e: (batch, r, 1) positive; rounded: error bound of a's entries;
+    beside: (batch, r, r) what of C stands beside e."""
+    rank = e.shape[1]
+    unsure = beside / e
+    if rank == a.shape[1]:
+        return _ordinary(a / e, rounded / e, unsure)
     r, c = equilibrate(a[:, rank:, rank:])
     block = a[:, rank:, rank:] * r[:, :, None] * c[:, None, :]
     singular = np.linalg.svd(block, compute_uv=False)
     regular = singular[:, -1] > SINGULAR * singular[:, 0]
-    reduced, slips = _eliminated(a[regular], rounded[regular], block[regular], r[regular], c[regular])
-    found: list[Spectrum] = [none] * batch
-    for i, spectrum in zip(
-        np.flatnonzero(regular), _ordinary(reduced / e[:, None], slips / e[:, None], unsure), strict=True
-    ):
-        found[i] = spectrum
-    for i in np.flatnonzero(~regular):
-        found[i] = _constrained(a[i, :rank, :rank], a[i, :rank, rank:], a[i, rank:, :rank], a[i, rank:, rank:], e)
-    return found
+    k = np.flatnonzero(regular)
+    reduced, slips = _eliminated(a[k], rounded[k], block[k], r[k], c[k])
+    settled = iter(_ordinary(reduced / e[k], slips / e[k], unsure[k]))
+    return [
+        next(settled)
+        if regular[i]
+        else _constrained(a[i, :rank, :rank], a[i, :rank, rank:], a[i, rank:, :rank], a[i, rank:, rank:], e[i, :, 0])
+        for i in range(len(a))
+    ]
 
 
 def _eliminated(a: Array, rounded: Array, block: Array, r: Array, c: Array) -> tuple[Array, Array]:
@@ -130,7 +160,7 @@ def _constrained(a11: Array, a12: Array, a21: Array, a22: Array, e: Array) -> Sp
         # deeper constraints than index 2: nothing is claimed
         return Spectrum(np.array([0.0 + 0.0j]), np.array([np.inf]))
     reduced = np.linalg.solve(mass, matrix)[None]
-    return _ordinary(reduced, np.zeros_like(reduced), np.zeros_like(reduced[0]))[0]
+    return _ordinary(reduced, np.zeros_like(reduced), np.zeros_like(reduced))[0]
 
 
 def _null(matrix: Array) -> Array:
@@ -143,51 +173,57 @@ def _null(matrix: Array) -> Array:
 
 
 def _ordinary(matrices: Array, slips: Array, unsure: Array) -> list[Spectrum]:
-    """Eigenvalues of each M from M and from its inverse, the more accurate one each.
+    """Eigenvalues of each M from M and, where those are blurred, from its inverse, the more accurate one each.
 
-    slips: (batch, r, r) bound of what rounding did to each entry of M before; unsure: (r, r) bound of E where M stands for (1 + E)^-1 M.
+    slips: (batch, r, r) bound of what rounding did to each entry of M before; unsure: (batch, r, r) bound of E where M stands for
+    (1 + E)^-1 M.
     """
     if len(matrices) == 0:
         return []
     slips = slips + unsure @ np.abs(matrices)
-    forward, forward_error, drift = _eigen(matrices, slips)
-    forward_error = forward_error + drift
-    backward, backward_error = np.full(forward.shape, np.nan + 0j), np.full(forward.shape, np.inf)
+    values, errors, drift = _eigen(matrices, slips)
+    errors = errors + drift
     with np.errstate(all="ignore"):
-        clear = np.isfinite(np.linalg.cond(matrices)) if matrices.shape[1] else np.zeros(len(matrices), dtype=bool)
-        if np.any(clear):
+        # an inverse helps only where an eigenvalue is blurred by larger ones
+        blurred = np.flatnonzero(~(errors <= CLEAR * np.abs(values)).all(axis=1))
+        if len(blurred):
+            clear = blurred[np.isfinite(np.linalg.cond(matrices[blurred]))]
             inverse = np.linalg.inv(matrices[clear])
             finite = np.isfinite(inverse).all(axis=(1, 2))
-            rows = np.flatnonzero(clear)[finite]
+            rows = clear[finite]
             if len(rows):
                 # what rounding did to the inverse is charged as a backward error of each entry of M; its eigenvectors are those of M, so
                 # they say what the slips of M do as well
                 charged = slips[rows] + 3.0 * matrices.shape[1] * UNIT * np.abs(matrices[rows])
                 mu, mu_error, drift = _eigen(inverse[finite], charged)
-                lam = 1.0 / np.where(mu == 0.0, np.nan, mu)
-                backward[rows] = lam
-                backward_error[rows] = 2.0 * np.abs(lam) ** 2 * mu_error + drift
-    found = []
-    for one, one_error, two, two_error in zip(forward, forward_error, backward, backward_error, strict=True):
-        order_one, order_two = (
-            np.argsort(np.abs(one)),
-            np.argsort(np.abs(np.where(np.isfinite(two), two, np.inf))),
-        )
-        a, a_error, b, b_error = one[order_one], one_error[order_one], two[order_two], two_error[order_two]
-        better = np.isfinite(b_error) & (b_error < a_error)
-        # the cut between the two lists must not part a conjugate pair
-        count = int(np.count_nonzero(better))
-        if (
-            0 < count < len(a)
-            and abs(b[count - 1].imag) > 0.0
-            and np.isclose(b[count - 1], np.conj(b[count]), rtol=1e-6)
-        ):
-            count += 1
-        values = np.concatenate([b[:count], a[count:]])
-        errors = np.concatenate([b_error[:count], a_error[count:]])
-        order = np.lexsort((-values.imag, -values.real))
-        found.append(Spectrum(values[order], errors[order]))
-    return found
+                lam = np.asarray(1.0 / np.where(mu == 0.0, np.nan, mu), dtype=complex)
+                lam_error = 2.0 * np.abs(lam) ** 2 * mu_error + drift
+                values[rows], errors[rows] = _merged(values[rows], errors[rows], lam, lam_error)
+    return ordered(values, errors)
+
+
+def ordered(values: Complex, errors: Array) -> list[Spectrum]:
+    """Spectra from (batch, r) eigenvalues and errors, largest real part first."""
+    order = np.lexsort((-values.imag, -values.real), axis=-1)
+    values, errors = np.take_along_axis(values, order, axis=1), np.take_along_axis(errors, order, axis=1)
+    return [Spectrum(value, error) for value, error in zip(values, errors, strict=True)]
+
+
+def _merged(values: Complex, errors: Array, lam: Complex, lam_error: Array) -> tuple[Complex, Array]:
+    """The same eigenvalues found twice, (batch, r) each: the slow ones from the second list where its errors are smaller."""
+    one = np.argsort(np.abs(values), axis=1)
+    two = np.argsort(np.abs(np.where(np.isfinite(lam), lam, np.inf)), axis=1)
+    a, a_error = np.take_along_axis(values, one, axis=1), np.take_along_axis(errors, one, axis=1)
+    b, b_error = np.take_along_axis(lam, two, axis=1), np.take_along_axis(lam_error, two, axis=1)
+    count = np.count_nonzero(np.isfinite(b_error) & (b_error < a_error), axis=1)
+    # the cut between the two lists must not part a conjugate pair
+    width = values.shape[1]
+    each = np.arange(len(values))
+    last, following = b[each, np.maximum(count - 1, 0)], b[each, np.minimum(count, width - 1)]
+    paired = (np.abs(last.imag) > 0.0) & (np.abs(last - following.conj()) <= 1e-6 * np.abs(following))
+    count = count + ((count > 0) & (count < width) & paired)
+    slow = np.arange(width) < count[:, None]
+    return np.where(slow, b, a), np.where(slow, b_error, a_error)
 
 
 def _eigen(matrices: Array, slips: Array) -> tuple[Complex, Array, Array]:
@@ -197,14 +233,17 @@ def _eigen(matrices: Array, slips: Array) -> tuple[Complex, Array, Array]:
     Rows and columns are balanced by powers of two first, which is exact.
     """
     balanced, moved = np.array(matrices), np.array(slips)
+    others = 1.0 - np.eye(balanced.shape[1])
     for _ in range(4):
-        off = np.abs(balanced) * (1.0 - np.eye(balanced.shape[1]))
+        off = np.abs(balanced) * others
         rows, columns = off.sum(axis=2), off.sum(axis=1)
         with np.errstate(divide="ignore", invalid="ignore"):
             factor = np.where(
                 (rows > 0.0) & (columns > 0.0), np.exp2(np.round(0.5 * np.log2(columns / rows))), 1.0
             )
         factor = np.where(np.isfinite(factor) & (factor > 0.0), factor, 1.0)
+        if (factor == 1.0).all():
+            break
         balanced = balanced * factor[:, :, None] / factor[:, None, :]
         moved = moved * factor[:, :, None] / factor[:, None, :]
     values, vectors = np.linalg.eig(balanced)
