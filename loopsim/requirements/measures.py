@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from dataclasses import replace
 
 from loopsim.circuit import Requirement
 from loopsim.requirements.computed import Computed, Settings
@@ -12,6 +13,8 @@ from loopsim.requirements.judged import Judged, open_question
 from loopsim.requirements.jump_corners import jumps_over_tolerances
 from loopsim.requirements.jumps import JUMPS, jumps
 from loopsim.requirements.oscillation import OSCILLATION, oscillation
+from loopsim.requirements.proof import PROVED
+from loopsim.requirements.proved_tolerances import count_is_proved
 from loopsim.requirements.settling import SETTLING, settling
 from loopsim.requirements.slopes import slope
 from loopsim.requirements.values import damping, growth_rate, values
@@ -39,4 +42,8 @@ def measure(computed: Computed, requirement: Requirement, settings: Settings) ->
         return server(computed, requirement, settings)
     if requirement.measure in JUMPS:
         return jumps_over_tolerances(computed, requirement, settings)
-    return over_tolerances(computed, requirement, settings, lambda corner: server(computed, requirement, {**settings, **corner}))
+    found = over_tolerances(computed, requirement, settings, lambda corner: server(computed, requirement, {**settings, **corner}))
+    if computed.require_proof and found.outcome == "met" and len(found.measured) == 1:
+        if count_is_proved(computed, requirement, settings, found.measured[0]):
+            return replace(found, proof=PROVED)
+    return found

@@ -103,6 +103,35 @@ def test_counts_at_corners():
     assert "A stable" in outcome.note
 
 
+# a cubic with a falling part: three states from 0.53 V to 1.04 V of the source, one elsewhere
+FALLING = """
+circuit falling "Load line across a falling curve"
+curve dip = polynomial(45 mA/V, -305 mA/V^2, 540 mA/V^3)
+gnd -> source: supply -> feed -- r: 470 ohm -- top -> d: dip -> gnd
+"""
+
+
+def test_corners_miss_what_happens_between_them_and_are_never_called_proof():
+    text = FALLING + "let supply = 1.5 V + 0 % - 95 %\n"
+    inside = one(text, "expect states = 3 at supply = 0.7 V")
+    line = "expect states = 1 over tolerances"
+    usual, strict = one(text, line), one(text, line, require_proof=True)
+    assert inside.outcome == "met"
+    assert (usual.outcome, usual.proof) == ("met", "by corners")  # which is why this label says so little
+    assert strict.outcome == "undecided"
+
+
+def test_a_count_over_the_tolerance_of_one_source_is_proved_where_that_is_asked_for():
+    text = FALLING + "let supply = 0.7 V +/- 5 %\n"
+    line = "expect states = 3 over tolerances"
+    assert one(text, line).proof == "by corners"
+    strict = one(text, line, require_proof=True)
+    assert (strict.outcome, strict.proof, strict.measured) == ("met", "proved", (3.0,))
+    # with a second value that varies there is no such proof
+    both = one(text.replace("470 ohm", "470 ohm +/- 1 %"), line, require_proof=True)
+    assert (both.outcome, both.proof) == ("undecided", "by corners")
+
+
 def test_a_spent_budget_leaves_it_undecided():
     outcome = one(PUMP, "expect states = 3 at level = 5.3 V over tolerances", budget=1e-9)
     assert outcome.outcome == "undecided"
