@@ -96,7 +96,8 @@ class Cycle:
     def extremes(self, net: str) -> tuple[float, float]:
         """Lowest and highest voltage of a net in the period [V]."""
         column = self.columns[("net", net)]
-        return tuple(float(sign * _top(self.path, column, sign)) for sign in (-1.0, 1.0))  # type: ignore[return-value]
+        low, high = (float(sign * _top(self.path, column, sign)) for sign in (-1.0, 1.0))
+        return low, high
 
     def swing(self, net: str) -> float:
         """Highest less lowest voltage [V]."""

@@ -267,7 +267,8 @@ def held_start(given: Mapping[str, float], system: System, s: Array, duration: f
     off = np.abs(x[places] - volts)
     if np.any(off > 1e-6 * np.maximum(1.0, np.abs(volts))):
         worst = nets[int(np.argmax(off))]
-        raise AnalysisError("start", f"{worst} cannot start at {given[worst]:g} V: a source holds it at {x[places[int(np.argmax(off))]]:.6g} V")  # noqa: E501
+        held = x[places[int(np.argmax(off))]]
+        raise AnalysisError("start", f"{worst} cannot start at {given[worst]:g} V: a source holds it at {held:.6g} V")
     released = newton(system, x, s, push=1.0 / (INSTANT * duration), anchor=x)
     if released is None:
         raise AnalysisError("start", f"the circuit cannot be let go from {_listed(given)}")

@@ -14,7 +14,7 @@ from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from types import CellType, FunctionType, ModuleType
-from typing import Any, TypeVar
+from typing import Any, TypeVar, cast
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -33,8 +33,7 @@ def compile_kernel(function: F) -> F:
         return function
     import numba
 
-    compiled: F = numba.njit(error_model="numpy", forceinline=True)(function)  # type: ignore[assignment]
-    return compiled
+    return cast("F", numba.njit(error_model="numpy", forceinline=True)(function))
 
 
 def compile_entry(*modules: ModuleType) -> Callable[[F], F]:
@@ -51,8 +50,7 @@ def compile_entry(*modules: ModuleType) -> Callable[[F], F]:
         code = function.__code__.replace(co_freevars=(*function.__code__.co_freevars, "source_key"))
         cells = (*(function.__closure__ or ()), CellType(source_stamp(__file__, function.__code__.co_filename, *modules)))
         keyed = FunctionType(code, function.__globals__, function.__name__, function.__defaults__, cells)
-        compiled: F = numba.njit(cache=True, error_model="numpy")(keyed)  # type: ignore[assignment]
-        return compiled
+        return cast("F", numba.njit(cache=True, error_model="numpy")(keyed))
 
     return decorate
 

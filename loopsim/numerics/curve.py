@@ -64,7 +64,7 @@ def tangent(equations: CurveEquations, x: Array, level: float, scale: Array, las
     except np.linalg.LinAlgError:
         return None
     length = float(np.linalg.norm(found))
-    return found / length if np.isfinite(length) and length > 0.0 else None  # type: ignore[return-value]
+    return np.asarray(found / length) if np.isfinite(length) and length > 0.0 else None
 
 
 def correct(

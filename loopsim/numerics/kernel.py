@@ -58,40 +58,40 @@ _slope_0, _slope_1, _slope_2, _slope_3, _slope_4, _slope_5, _slope_6, _slope_7 =
 def phi_value(kind: int, w: float, p: Any) -> float:
     """phi of one row; kind: number of loopsim.devices.phi.Kind."""
     if kind == 0:
-        return _value_0(w, p)  # type: ignore[no-any-return]
+        return _value_0(w, p)
     if kind == 1:
-        return _value_1(w, p)  # type: ignore[no-any-return]
+        return _value_1(w, p)
     if kind == 2:
-        return _value_2(w, p)  # type: ignore[no-any-return]
+        return _value_2(w, p)
     if kind == 3:
-        return _value_3(w, p)  # type: ignore[no-any-return]
+        return _value_3(w, p)
     if kind == 4:
-        return _value_4(w, p)  # type: ignore[no-any-return]
+        return _value_4(w, p)
     if kind == 5:
-        return _value_5(w, p)  # type: ignore[no-any-return]
+        return _value_5(w, p)
     if kind == 6:
-        return _value_6(w, p)  # type: ignore[no-any-return]
-    return _value_7(w, p)  # type: ignore[no-any-return]
+        return _value_6(w, p)
+    return _value_7(w, p)
 
 
 @compile_kernel
 def phi_slope(kind: int, w: float, p: Any) -> float:
     """d phi / dw of one row."""
     if kind == 0:
-        return _slope_0(w, p)  # type: ignore[no-any-return]
+        return _slope_0(w, p)
     if kind == 1:
-        return _slope_1(w, p)  # type: ignore[no-any-return]
+        return _slope_1(w, p)
     if kind == 2:
-        return _slope_2(w, p)  # type: ignore[no-any-return]
+        return _slope_2(w, p)
     if kind == 3:
-        return _slope_3(w, p)  # type: ignore[no-any-return]
+        return _slope_3(w, p)
     if kind == 4:
-        return _slope_4(w, p)  # type: ignore[no-any-return]
+        return _slope_4(w, p)
     if kind == 5:
-        return _slope_5(w, p)  # type: ignore[no-any-return]
+        return _slope_5(w, p)
     if kind == 6:
-        return _slope_6(w, p)  # type: ignore[no-any-return]
-    return _slope_7(w, p)  # type: ignore[no-any-return]
+        return _slope_6(w, p)
+    return _slope_7(w, p)
 
 
 @compile_kernel
@@ -283,9 +283,9 @@ def wave_at(form: int, data: Any, first: int, piece: Any, time: float) -> float:
     """Value at `time` by the formula in `piece`."""
     if form == SINE:
         if time < data[first + 4]:
-            return piece[0]  # type: ignore[no-any-return]
-        return data[first] + data[first + 1] * np.sin(data[first + 2] * (time - data[first + 4]) + data[first + 3])  # type: ignore[no-any-return]
-    return piece[0] + piece[1] * (time - piece[2])  # type: ignore[no-any-return]
+            return piece[0]
+        return data[first] + data[first + 1] * np.sin(data[first + 2] * (time - data[first + 4]) + data[first + 3])
+    return piece[0] + piece[1] * (time - piece[2])
 
 
 @compile_kernel
@@ -300,7 +300,8 @@ def sources(
     time: float, base: Any, forms: Any, starts: Any, data: Any, pieces: Any, column_starts: Any, column_rows: Any,
     column_values: Any, out: Any,
 ) -> None:
-    """out = base + sum of column_k wave_k(time); wave 0 multiplies all others (the common ramp) and its column holds what else it scales."""  # noqa: E501
+    """out = base + sum of column_k wave_k(time); wave 0 multiplies all others (the common ramp) and its column holds what else it
+    scales."""
     for i in range(base.size):
         out[i] = base[i]
     if forms.size == 0:
@@ -369,7 +370,7 @@ def scaled_norm(x: Any, scale: Any, weight: Any) -> float:
     for i in range(x.size):
         part = weight[i] * x[i] / scale[i]
         total += part * part
-    return np.sqrt(total / x.size)  # type: ignore[no-any-return]
+    return np.sqrt(total / x.size)
 
 
 @compile_kernel
@@ -418,7 +419,9 @@ def start_iterate(have_polynomial: bool, polynomial: Any, ratio: float, nodes: A
 
 
 @compile_kernel
-def error_right_side(gamma_step: float, weights: Any, Z: Any, C: Any, C_columns: Any, C_values: Any, slope: Any, room: Any, out: Any) -> None:  # noqa: E501
+def error_right_side(
+    gamma_step: float, weights: Any, Z: Any, C: Any, C_columns: Any, C_values: Any, slope: Any, room: Any, out: Any
+) -> None:
     """out = f(start) + (gamma / h) C (weights . Z)."""
     stages, n = Z.shape
     for i in range(n):
@@ -432,7 +435,8 @@ def error_right_side(gamma_step: float, weights: Any, Z: Any, C: Any, C_columns:
 
 @compile_kernel
 def jacobian_change(before: Any, after: Any, change: Any, scale: Any, weight: Any, lu: Any, pivots: Any, room: Any) -> float:
-    """How fast Newton with the Jacobian of the start would converge: size of (gamma / h C + J)^-1 (J_end - J_start) change over change's."""  # noqa: E501
+    """How fast Newton with the Jacobian of the start would converge: size of (gamma / h C + J)^-1 (J_end - J_start) change over
+    change's."""
     n = change.size
     for i in range(n):
         room[i] = 0.0
@@ -544,7 +548,7 @@ def newton_norm(R: Any, scale: Any, weight: Any) -> float:
         for i in range(R.shape[1]):
             part = weight[i] * R[a, i] / scale[i]
             total += part * part
-    return np.sqrt(total / R.size)  # type: ignore[no-any-return]
+    return np.sqrt(total / R.size)
 
 
 @compile_kernel
@@ -552,8 +556,9 @@ def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, rounding
     """What the sizes of the changes say: 0 converged, negative go on, positive the factor on the step of a new try.
 
     RATE holds theta / (1 - theta), the estimate of the change still to come over the last one (full: the factor on its square);
-    rounding: size below which changes that stop shrinking are noise; NEWTON_NORM: the last size; THETA the last ratio of two sizes that rounding had no part in.
-    """  # noqa: E501
+    rounding: size below which changes that stop shrinking are noise; NEWTON_NORM: the last size; THETA the
+    last ratio of two sizes that rounding had no part in.
+    """
     if not (size < 1e300):
         return 0.5
     if iteration == 0:
@@ -565,7 +570,8 @@ def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, rounding
         if full:  # every iteration has its own Jacobian: the next change is in proportion to the square of this one
             state[RATE] = size / max(state[NEWTON_NORM], 1e-150) ** 2
             state[NEWTON_NORM] = size
-            if size <= 0.1 * control[NEWTON_LIMIT] or (theta > 0.5 and size <= rounding) or (theta if fresh else 1.0) * theta * size <= control[NEWTON_LIMIT]:  # noqa: E501
+            close = (theta if fresh else 1.0) * theta * size <= control[NEWTON_LIMIT]
+            if size <= 0.1 * control[NEWTON_LIMIT] or (theta > 0.5 and size <= rounding) or close:
                 return 0.0
             return 0.25 if theta > 2.0 else -1.0
         if theta >= 0.99:
@@ -576,7 +582,7 @@ def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, rounding
         if size <= rounding and (theta > 0.5 or iteration == limit - 1):
             return 0.0
         if left >= 1.0:
-            return 0.8 * max(1e-4, min(20.0, left)) ** (-1.0 / (4.0 + limit - 1 - iteration))  # type: ignore[no-any-return]
+            return 0.8 * max(1e-4, min(20.0, left)) ** (-1.0 / (4.0 + limit - 1 - iteration))
     state[NEWTON_NORM] = size
     left = max(1.0, 10.0 * state[RATE]) * size * size if full else state[RATE] * size
     return 0.0 if left <= control[NEWTON_LIMIT] else -1.0
@@ -586,7 +592,7 @@ def newton_verdict(iteration: int, limit: int, full: bool, fresh: bool, rounding
 def error_factor(error: float, stages: int, iterations: int, limit: int) -> float:
     """What the step is divided by: error norm, and Newton's effort."""
     safety = min(SAFETY, SAFETY * (1.0 + 2.0 * limit) / (iterations + 2.0 * limit))
-    return max(1.0 / GROW, min(1.0 / SHRINK, error ** (1.0 / (stages + 1.0)) / safety))  # type: ignore[no-any-return]
+    return max(1.0 / GROW, min(1.0 / SHRINK, error ** (1.0 / (stages + 1.0)) / safety))
 
 
 @compile_kernel
@@ -744,7 +750,8 @@ def advance(
                     for i in range(n):
                         P[a, i] += R[a, i]
                 mix(transform, P, Z)
-            verdict = newton_verdict(iterations, limit, full, fresh, min(1.0, ROUNDING * 2.0**stuck), newton_norm(R, scale, weight), state, control)  # noqa: E501
+            size = newton_norm(R, scale, weight)
+            verdict = newton_verdict(iterations, limit, full, fresh, min(1.0, ROUNDING * 2.0**stuck), size, state, control)
             iterations += 1
         counts[EVALUATIONS] += iterations * stages
         if verdict != 0.0:  # no convergence: a smaller step, with the same Jacobian

@@ -99,7 +99,7 @@ def tableau(stages: int) -> Tableau:
     return Tableau(
         nodes=np.asarray(c, dtype=np.float64),
         A=A,
-        A_inverse=np.linalg.inv(A),  # type: ignore[arg-type]
+        A_inverse=np.asarray(np.linalg.inv(A), dtype=np.float64),
         transform=np.ascontiguousarray(transform),
         inverse=np.linalg.inv(transform),
         order_real=gamma,
@@ -166,7 +166,8 @@ class Equations:
         """A^-1 x C of all stages together, row by row."""
         stages = len(method.nodes)
         if stages not in self.stage_masses:
-            self.stage_masses[stages] = np.kron(method.A_inverse, self.mass.reshape(self.n, self.n)).ravel()  # type: ignore[assignment]
+            product = np.kron(method.A_inverse, self.mass.reshape(self.n, self.n))
+            self.stage_masses[stages] = np.asarray(product, dtype=np.float64).ravel()
         return self.stage_masses[stages]
 
 

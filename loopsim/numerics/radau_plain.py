@@ -123,7 +123,8 @@ def advance(
             rejected_last = True
             counts[kernel.REJECTED] += 1
             continue
-        Z = _carried_on(polynomial, step / state[kernel.POLYNOMIAL_STEP], method.nodes) if state[kernel.POLYNOMIAL_STEP] > 0.0 else np.zeros((stages, n))  # noqa: E501
+        before = state[kernel.POLYNOMIAL_STEP]
+        Z = _carried_on(polynomial, step / before, method.nodes) if before > 0.0 else np.zeros((stages, n))
         P = method.inverse @ Z
         sources = np.array([source(time + c * step) for c in method.nodes])
         state[kernel.RATE] = max(max(state[kernel.RATE], 1e-16) ** 0.8, kernel.UNSEEN)

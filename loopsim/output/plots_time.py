@@ -32,7 +32,9 @@ def plot_transient(run: Transient, path: str, nets: Sequence[str] = (), levels: 
         for other, volts, name in levels:
             if other == net:
                 panel.axhline(volts, color=PALE, linewidth=0.8, linestyle=(0, (4, 3)))
-                panel.annotate(name, (1.0, volts), xycoords=("axes fraction", "data"), xytext=(4, -3), textcoords="offset points", fontsize=8)  # noqa: E501
+                panel.annotate(
+                    name, (1.0, volts), xycoords=("axes fraction", "data"), xytext=(4, -3), textcoords="offset points", fontsize=8
+                )  # fmt: skip
                 dots = [crossing.time for crossing in run.crossings(net, volts)]
                 panel.plot(np.array(dots) / scale, [volts] * len(dots), "o", color=COLOURS[i % len(COLOURS)], markersize=3.5)
         _label(panel, net, values[net])

@@ -69,9 +69,9 @@ class Computed:
     def trace(self, along: str, settings: Settings) -> Trace:
         """The characteristic along a let over its own range, every net of it; not proved between its stations."""
         chosen = self._along(along, settings)
-        proved = self._known.get(("proved trace", along, _key(chosen)))
+        proved: Trace | AnalysisError | None = self._known.get(("proved trace", along, _key(chosen)))
         if proved is not None and not isinstance(proved, AnalysisError):
-            return proved  # type: ignore[no-any-return]
+            return proved
         return self._once(("trace", along, _key(chosen)), lambda: self._traced(along, chosen, 0.0))
 
     def proved_trace(self, along: str, settings: Settings) -> Trace:
@@ -131,10 +131,10 @@ class Computed:
                 if error.code == "budget":
                     raise
                 self._known[key] = error
-        found = self._known[key]
+        found: Found | AnalysisError = self._known[key]
         if isinstance(found, AnalysisError):
             raise found
-        return found  # type: ignore[no-any-return]
+        return found
 
 
 def _key(settings: Settings) -> tuple[tuple[str, float], ...]:

@@ -18,7 +18,7 @@ def test_supplies_come_up_together_within_the_stated_ramp() -> None:
     assert run.at(0.5e-3)["feed"] == pytest.approx(0.5)
     assert run.at(1e-3)["out"] == pytest.approx(np.exp(-1.0), abs=1e-5)
     assert run.end_state == "A" and run.end == "ends in state A"
-    assert any("0.001 s" in note for note in run.notes)
+    assert any("1 ms" in note for note in run.notes)
 
 
 def test_a_stable_state_stays_where_it_is() -> None:
@@ -70,7 +70,7 @@ def test_inductors_start_without_current() -> None:
 )
 def test_a_faulty_question_is_told_so(options: dict[str, object], code: str) -> None:
     with pytest.raises(AnalysisError) as caught:
-        charging().transient(1e-3, **options)  # type: ignore[arg-type]
+        charging().transient(1e-3, **options)
     assert caught.value.code == code
 
 

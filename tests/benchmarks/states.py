@@ -12,12 +12,10 @@ runs. codac is needed for this script alone.
 from __future__ import annotations
 
 import argparse
-import statistics
 import subprocess
 import sys
 import time
 import warnings
-from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -26,10 +24,11 @@ from scipy.optimize import fsolve
 
 sys.path[:0] = [str(Path(__file__).parents[2]), str(Path(__file__).parents[1])]
 
-from array_systems import Kind, Row, solve, system_of, unit  # noqa: E402
+from array_systems import Kind, Row, solve, system_of, unit
+from clock import median_time
 
-import loopsim  # noqa: E402
-from loopsim.equations.system import System  # noqa: E402
+import loopsim
+from loopsim.equations.system import System
 
 BOX = 1e3  # V, the box that `states` starts from, for all
 LIMIT = 30.0  # s, after which a search loop gives up
@@ -108,17 +107,6 @@ def problems(quick: bool) -> list[Problem]:
         listed.insert(3, Problem("5 comparators", comparators(5), 243, 10.0))
         listed.insert(4, Problem("6 comparators", comparators(6), 729, 10.0))
     return listed
-
-
-def median_time(action: Callable[[], object], repeats: int) -> float:
-    """Median processor time [s] after one warm-up."""
-    action()
-    took = []
-    for _ in range(repeats):
-        began = time.process_time()
-        action()
-        took.append(time.process_time() - began)
-    return statistics.median(took)
 
 
 def from_random_starts(problem: Problem, known: np.ndarray) -> tuple[float, int]:

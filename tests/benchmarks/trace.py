@@ -9,10 +9,8 @@ trip points is `scipy.optimize.fsolve` in a loop over samples, given the same fo
 from __future__ import annotations
 
 import argparse
-import statistics
 import sys
 import time
-from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
@@ -22,15 +20,17 @@ from scipy.optimize import fsolve
 ROOT = Path(__file__).parents[2]
 sys.path[:0] = [str(ROOT)]
 
-import loopsim  # noqa: E402
-from loopsim.analyses.family import Family  # noqa: E402
-from loopsim.analyses.points import all_points  # noqa: E402
-from loopsim.analyses.trace import _scale  # noqa: E402
-from loopsim.analyses.trace_curves import curves, starts_of  # noqa: E402
-from loopsim.analyses.trip_points import _line  # noqa: E402
-from loopsim.equations.assemble import let_range  # noqa: E402
-from loopsim.equations.condensed import arguments, condense, good_shift  # noqa: E402
-from loopsim.numerics.fold_batch import null_vectors  # noqa: E402
+from clock import median_time
+
+import loopsim
+from loopsim.analyses.family import Family
+from loopsim.analyses.points import all_points
+from loopsim.analyses.trace import _scale
+from loopsim.analyses.trace_curves import curves, starts_of
+from loopsim.analyses.trip_points import _line
+from loopsim.equations.assemble import let_range
+from loopsim.equations.condensed import arguments, condense, good_shift
+from loopsim.numerics.fold_batch import null_vectors
 
 CIRCUITS = (
     ("comparators/cistern_pump.loop", "level"),
@@ -40,30 +40,19 @@ CIRCUITS = (
 )
 
 
-def timed(work: Callable[[], object], repeats: int) -> float:
-    """Median processor time [s] after one call that warms up."""
-    work()
-    found = []
-    for _ in range(repeats):
-        began = time.process_time()
-        work()
-        found.append(time.process_time() - began)
-    return statistics.median(found)
-
-
 def traces(repeats: int) -> None:
     print("| circuit | folds | points | 11 stations, ms | and over the range, ms | covered | us a point | one dense solve, us |")
     print("| --- | --- | --- | --- | --- | --- | --- | --- |")
     for file, along in CIRCUITS:
         circuit = loopsim.load(str(ROOT / "circuits" / file))
-        stations = timed(lambda c=circuit, a=along: c.trace(a, range_budget=0.0), repeats)
-        whole = timed(lambda c=circuit, a=along: c.trace(a), repeats)
+        stations = median_time(lambda c=circuit, a=along: c.trace(a, range_budget=0.0), repeats)
+        whole = median_time(lambda c=circuit, a=along: c.trace(a), repeats)
         curve = circuit.trace(along)
         points = sum(len(branch.values) for branch in curve.branches)
         n = curve.branches[0].x.shape[1]
-        follow = timed(lambda c=circuit, a=along: _followed(c, a), repeats) / points
+        follow = median_time(lambda c=circuit, a=along: _followed(c, a), repeats) / points
         matrix, right = np.random.default_rng(0).standard_normal((n, n)) + n * np.eye(n), np.ones(n)
-        solve = timed(lambda m=matrix, r=right: [np.linalg.solve(m, r) for _ in range(1000)], repeats) / 1000
+        solve = median_time(lambda m=matrix, r=right: [np.linalg.solve(m, r) for _ in range(1000)], repeats) / 1000
         covered = "all" if curve.over_range else f"{len(curve.gaps)} gaps" if curve.gaps else "no"
         print(
             f"| {Path(file).stem} along {along} | {len(curve.folds)} | {points} | {1e3 * stations:.0f} | {1e3 * whole:.0f} | {covered} |"
@@ -91,7 +80,7 @@ def trips(repeats: int, samples: int, peer: int) -> None:
     for file, along in CIRCUITS[:2]:
         circuit = loopsim.load(str(ROOT / "circuits" / file))
         nominal = circuit.trace(along, range_budget=0.0)
-        ours = timed(lambda c=circuit, a=along, n=nominal: c.trip_points(a, samples=samples, nominal=n), repeats)
+        ours = median_time(lambda c=circuit, a=along, n=nominal: c.trip_points(a, samples=samples, nominal=n), repeats)
         spread = circuit.trip_points(along, samples=peer, nominal=nominal)
         began = time.process_time()
         found = scipy_loop(circuit, spread)

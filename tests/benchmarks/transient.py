@@ -27,11 +27,11 @@ from scipy.integrate import odeint, solve_ivp
 
 sys.path[:0] = [str(Path(__file__).parents[2]), str(Path(__file__).parents[1]), str(Path(__file__).parents[1] / "published")]
 
-from test_transistor_amplifier import START as AMPLIFIER_START  # noqa: E402
-from test_transistor_amplifier import amplifier  # noqa: E402
+from test_transistor_amplifier import START as AMPLIFIER_START
+from test_transistor_amplifier import amplifier
 
-from loopsim.devices.phi import SLOPE, VALUE, Kind  # noqa: E402
-from loopsim.numerics import kernel, radau  # noqa: E402
+from loopsim.devices.phi import SLOPE, VALUE, Kind
+from loopsim.numerics import kernel, radau
 
 Array = NDArray[np.float64]
 

@@ -13,7 +13,6 @@ from __future__ import annotations
 import argparse
 import os
 import resource
-import statistics
 import subprocess
 import sys
 import tempfile
@@ -26,12 +25,13 @@ from typing import Any
 ROOT = Path(__file__).parents[2]
 sys.path[:0] = [str(ROOT), str(ROOT / "tests" / "requirements")]
 
-from dividers import write_library  # noqa: E402
+from clock import median_time
+from dividers import write_library
 
-from loopsim.output.junit import junit_text  # noqa: E402
-from loopsim.requirements.journal import Journal, key_of  # noqa: E402
-from loopsim.requirements.library import LibraryRun, read_library, verify_library  # noqa: E402
-from loopsim.requirements.verify import verify  # noqa: E402
+from loopsim.output.junit import junit_text
+from loopsim.requirements.journal import Journal, key_of
+from loopsim.requirements.library import LibraryRun, read_library, verify_library
+from loopsim.requirements.verify import verify
 
 REPEATS = 3
 
@@ -43,16 +43,6 @@ class Here(Executor):
         future: Future[Any] = Future()
         future.set_result(fn(*args))
         return future
-
-
-def cost(function: Callable[[], object]) -> float:
-    """Processor time of a call [s], the median of a few."""
-    times = []
-    for _ in range(REPEATS):
-        began = time.process_time()
-        function()
-        times.append(time.process_time() - began)
-    return statistics.median(times)
 
 
 def around(count: int) -> None:
@@ -70,9 +60,9 @@ def around(count: int) -> None:
         circuits, _ = read_library([library])
         key_of("")  # the fingerprint of the tool is taken once a process
         assert len(whole().circuits) == count
-        analyses = cost(lambda: [verify(circuit) for circuit in circuits])
-        everything = cost(whole)
-        remembered = cost(lambda: _remembered(library, Path(folder) / "again"))
+        analyses = median_time(lambda: [verify(circuit) for circuit in circuits], REPEATS)
+        everything = median_time(whole, REPEATS)
+        remembered = median_time(lambda: _remembered(library, Path(folder) / "again"), REPEATS)
     each = 1e3 / count
     print(f"{count} circuits with two requirements, processor time a circuit\n")
     print("| | ms |\n| --- | --- |")

@@ -57,7 +57,7 @@ class Deadly(Executor):
         self.attempts = attempts
         self.calls: list[tuple[bool, int]] = []
 
-    def submit(self, fn, /, *args, **kwargs) -> Future[str]:  # type: ignore[override]
+    def submit(self, fn, /, *args, **kwargs) -> Future[str]:
         task, attempt = args
         deadly = self.mark in task
         self.calls.append((deadly, attempt))

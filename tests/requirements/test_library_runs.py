@@ -28,7 +28,7 @@ def library(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
 class Shuffled(Executor):
     """Runs every task when it is handed over, and finishes them in another order."""
 
-    def submit(self, fn, /, *args, **kwargs) -> Future[str]:  # type: ignore[override]
+    def submit(self, fn, /, *args, **kwargs) -> Future[str]:
         assert not kwargs
         future: Future[str] = Future()
         self.held = [*getattr(self, "held", []), (future, fn(*args))]
@@ -86,7 +86,7 @@ class Breaking(Executor):
         self.pool = ProcessPoolExecutor(1, mp_context=get_context("spawn"))
         self.count = 0
 
-    def submit(self, fn, /, *args, **kwargs) -> Future[str]:  # type: ignore[override]
+    def submit(self, fn, /, *args, **kwargs) -> Future[str]:
         self.count += 1
         return self.pool.submit(breaks if self.count == 1 else fn, *args)
 
