@@ -39,8 +39,12 @@ def versions() -> list[tuple[str, str]]:
 def explain(error: BaseException, words: Sequence[str]) -> tuple[str, Exit]:
     """The message for standard error and the exit code. words: the command line, for a bug report."""
     match error:
-        case UsageError() | CircuitError():
+        case UsageError():
             return str(error), Exit.MISTAKE
+        case CircuitError():
+            from loopsim.language.rules import with_way_out
+
+            return str(with_way_out(error)), Exit.MISTAKE
         case AnalysisError():
             last = ", ".join(f"{printable(net)} = {engineering(volts, 'V')}" for net, volts in error.last_good.items())
             return printable(str(error)) + (f"\n    last good state: {last}" if last else ""), (

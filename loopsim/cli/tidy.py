@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import os
+from pathlib import Path
 
 from loopsim.cli.answer import Answer, Surroundings
 from loopsim.cli.exits import Exit
 from loopsim.cli.options import Request
 from loopsim.cli.reading import readable, write_file
-from loopsim.errors import CircuitError, Span
 from loopsim.printable import printable
 
 
@@ -16,9 +16,10 @@ def run(request: Request, around: Surroundings) -> Answer:
     """Rewrite the file in the standard layout; with --check only tell whether it would change (exit code 1)."""
     path = request.paths[0]
     readable(path)
+    from loopsim.language.load import read_text
     from loopsim.language.tidy import tidy
 
-    before = _text(path)
+    before = read_text(Path(path), path)
     after = tidy(before, path)
     if before == after:
         return Answer(f"{printable(path)}: tidy\n")
@@ -31,13 +32,3 @@ def run(request: Request, around: Surroundings) -> Answer:
     write_file(target, after)
     os.chmod(target, mode & 0o7777)
     return Answer(f"{printable(path)}: laid out anew\n")
-
-
-def _text(path: str) -> str:
-    with open(path, "rb") as stream:
-        data = stream.read()
-    try:
-        return data.decode("utf-8-sig")
-    except UnicodeDecodeError as error:
-        line = data[: error.start].count(b"\n") + 1
-        raise CircuitError("not-text", "this is no UTF-8 text", Span(path, line, 1, 1)) from None

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import codecs
 import os
 import posixpath
 from collections.abc import Mapping
@@ -15,6 +16,7 @@ from loopsim.language.definitions import Definitions, define
 from loopsim.language.mistakes import nearest
 from loopsim.language.names import statement_place
 from loopsim.language.parser import MAX_CHARACTERS, Source, statements
+from loopsim.language.rules import with_way_out
 
 MAX_FILES = 200  # parts files that one circuit may draw in
 PARTS = "parts"  # a folder of this name marks the library root
@@ -29,7 +31,7 @@ def load(path: str | os.PathLike[str], library_root: str | os.PathLike[str] | No
     shown = os.fspath(path)
     real = Path(shown).resolve()
     root = Path(library_root).resolve() if library_root is not None else _root_of(real.parent)
-    text = _read(real, shown)
+    text = read_text(real, shown)
     try:
         key = real.relative_to(root).as_posix()
     except ValueError:
@@ -62,7 +64,8 @@ def _root_of(folder: Path) -> Path:
     return folder
 
 
-def _read(path: Path, shown: str) -> str:
+def read_text(path: Path, shown: str) -> str:
+    """The text of a file; CircuitError `cannot-read`, `file-size`, `not-text`. shown: its name in messages."""
     try:
         data = path.read_bytes()
     except OSError as error:
@@ -73,15 +76,14 @@ def _read(path: Path, shown: str) -> str:
             f"`{shown}` holds more than {MAX_CHARACTERS:,} characters",
             hint="one circuit per file",
         )
+    data = data.removeprefix(codecs.BOM_UTF8)
     try:
-        text = data.decode("utf-8-sig")
+        return data.decode("utf-8")
     except UnicodeDecodeError as error:
-        line = data[: error.start].count(b"\n") + 1
-        column = error.start - (data.rfind(b"\n", 0, error.start) + 1) + 1
-        raise CircuitError(
-            "not-text", "this is no UTF-8 text", Source(shown, "\n" * line).at(line, column)
-        ) from None
-    return text
+        before = data[: error.start].decode("utf-8")
+        line, column = before.count("\n") + 1, len(before) - before.rfind("\n")
+        place = Source(shown, data.decode("utf-8", errors="replace")).at(line, column)
+        raise CircuitError("not-text", "this is no UTF-8 text", place, "save it as UTF-8") from None
 
 
 class _Reader:
@@ -95,9 +97,12 @@ class _Reader:
 
     def circuit(self, source: Source, key: str) -> Circuit:
         self.sources[key] = source.text
-        found = statements(source)
-        definitions = define(source, found, lambda use: self._used(use, source, key, (key,)))
-        return build(source, found, definitions, self.sources)
+        try:
+            found = statements(source)
+            definitions = define(source, found, lambda use: self._used(use, source, key, (key,)))
+            return build(source, found, definitions, self.sources)
+        except CircuitError as error:
+            raise with_way_out(error) from None
 
     def _used(self, use: t.Use, source: Source, key: str, trail: tuple[str, ...]) -> Definitions:
         where = source.span(use.place)
@@ -161,4 +166,4 @@ class _Reader:
             raise CircuitError(
                 "use-missing", f"there is no file `{use.path}`", span, nearest(path.name, near)
             )
-        return _read(real, shown)
+        return read_text(real, shown)

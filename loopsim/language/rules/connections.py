@@ -1,0 +1,90 @@
+"""Mistakes of parts: how they are joined, and what they are given."""
+
+from loopsim.language.rules.entry import Mistake, mistake
+
+CONNECTIONS: tuple[Mistake, ...] = (
+    mistake(
+        "duplicate-part",
+        "Parts and instances of blocks have names of their own.",
+        "rename one of them",
+        "a -- r1: 1 kohm -- gnd\na -- ⟦r1⟧: 2 kohm -- gnd\n",
+        "block cell(p) {\n}\nx1: cell(p = a)\n⟦x1⟧: cell(p = b)\n",
+    ),
+    mistake(
+        "duplicate-field",
+        "A field, pin or parameter is given once.",
+        "drop one of them",
+        "kind clamp = diode(ideality = 1, ⟦ideality⟧ = 2)\n",
+        "gnd -> v1: sine(amplitude = 1 V, ⟦amplitude⟧ = 2 V, frequency = 1 kHz) -> a\n",
+        "block cell(p) {\n}\nx1: cell(p = a, ⟦p⟧ = b)\n",
+    ),
+    mistake(
+        "polarity",
+        "`->` joins a part with a direction, `--` one without, on both sides.",
+        "`->` points the way the current, or the rise of a source, goes",
+        "a ⟦->⟧ r1: 1 kohm -> gnd\n",
+        "gnd ⟦--⟧ battery: 9 V -- vcc\n",
+        "a -- r1: 1 kohm ⟦->⟧ b\n",
+        "a -> d1: diode ⟦--⟧ gnd\n",
+    ),
+    mistake(
+        "too-many-pins",
+        "Only parts with two pins stand in a chain.",
+        "write NAME: KIND(pin = net, ...)",
+        "a -- ⟦u1⟧: opamp -- gnd\n",
+    ),
+    mistake(
+        "pin-missing",
+        "Every pin is connected.",
+        "connect every pin",
+        "⟦u1⟧: opamp(plus = a, minus = b, out = b)\n",
+        "block cell(p, m) {\n  p -- r1: 1 kohm -- m\n}\n⟦x1⟧: cell(p = a)\n",
+    ),
+    mistake("value-missing", "A resistor, a source and their like have a value.", "write the value", "a -- r1: ⟦resistor⟧ -- gnd\n"),
+    mistake(
+        "field-missing",
+        "What a device or waveform cannot do without is given.",
+        "give that field",
+        "⟦r1⟧: resistor(from = a, to = gnd)\n",
+        "a -- ⟦s1⟧: switch -- gnd\n",
+        "gnd -> v1: ⟦sine(amplitude = 1 V)⟧ -> a\n",
+        "gnd -> v1: ⟦square(period = 1 ms)⟧ -> a\n",
+        "⟦u1⟧: opamp(plus = a, minus = b, out = b, high = c, low = gnd, slew_rate = 1 V/us)\n",
+    ),
+    mistake(
+        "field-range",
+        "A value lies within the range of its field.",
+        "the ranges are listed in docs/reference/devices.md",
+        "a -- r1: ⟦-1 kohm⟧ -- gnd\n",
+        "a -- r1: ⟦0 ohm⟧ -- gnd\n",
+        "let ⟦ambient⟧ = 1000 degC\n",
+        "a -- l1: 1 mH -- b -- l2: 1 mH -- gnd\ncouple l1, l2: ⟦1.2⟧\n",
+        "gnd -> ⟦v1⟧: ramp(to = 1 V, duration = 0 s) -> a\n",
+        "a -- ⟦r1⟧: resistor(resistance = 1 kohm, temperature_coefficient = -50000 ppm/K) -- gnd\nlet ambient = 60 degC\n",
+    ),
+    mistake(
+        "field-clash",
+        "A switch has a control net or times, not both.",
+        "drop one of them",
+        "a -- ⟦s1⟧: switch(control = a, close_time = 1 ms) -- gnd\n",
+    ),
+    mistake(
+        "waveform-times",
+        "The times of a waveform rise, and the parts of a square wave fit into its period.",
+        "a jump needs a short ramp",
+        "gnd -> v1: points(1 s: 0 V, ⟦1 ms⟧: 5 V) -> a\n",
+        "gnd -> ⟦v1⟧: square(high = 5 V, period = 1 ms, width = 2 ms) -> a\n",
+    ),
+    mistake(
+        "coupling",
+        "`couple` joins two different inductors.",
+        "name another inductor",
+        "a -- l1: 1 mH -- gnd\ncouple l1, ⟦l1⟧: 0.9\n",
+    ),
+    mistake(
+        "unknown-inductor",
+        "What `couple` names are inductors.",
+        "the inductors are the parts with a value in H",
+        "a -- l1: 1 mH -- b -- r1: 1 kohm -- gnd\ncouple ⟦l1⟧, r1: 0.9\n",
+    ),
+)
