@@ -23,7 +23,8 @@ from loopsim.devices.contribution import Contribution
 from loopsim.equations.parts import Key, part_contribution, resolve
 from loopsim.equations.plan import plan
 from loopsim.equations.sparse import assemble_sparse
-from loopsim.errors import CircuitError
+from loopsim.errors import CircuitError, Span
+from loopsim.language.rules import with_way_out
 
 GROUND: Key = ("net", "gnd")
 SHOWN = 6  # names in one message
@@ -134,19 +135,19 @@ def check(circuit: Circuit) -> None:
     """CircuitError for the first fatal finding, at the place of the first part concerned."""
     for finding in findings(circuit):
         if finding.fatal:
-            part = next((part for part in circuit.parts if part.name in finding.parts), None)
-            raise CircuitError(
-                finding.code, finding.message, part.span if part else None, _HINTS.get(finding.code, "")
-            )
+            raise with_way_out(CircuitError(finding.code, finding.message, _place(circuit, finding)))
 
 
-_HINTS = {
-    "empty-circuit": "join parts to nets beside gnd, as in: gnd -> battery: 5 V -> vcc -- r1: 1 kohm -- gnd",
-    "missing-ground": "`gnd` is the reference of all voltages: join something to it",
-    "floating-net": "give it a path for direct current, such as a large resistor to gnd",
-    "current-cut": "give it a path for direct current, such as a large resistor to gnd",
-    "voltage-loop": "put the small resistance in series that a real one has",
-}
+def _place(circuit: Circuit, finding: Finding) -> Span | None:
+    """Of the first part that is named, else of the first that touches a net named, else of the first part."""
+    named = [part for part in circuit.parts if part.name in finding.parts]
+    touching = [
+        part for part in circuit.parts if {*part.pins.values(), part.fields.get("control")} & set(finding.nets)
+    ]
+    part = next(iter((*named, *touching, *circuit.parts)), None)
+    if part is not None:
+        return part.span
+    return Span(circuit.file, 1, 1, 2) if circuit.file else None
 
 
 def _graph(circuit: Circuit) -> _Graph:

@@ -1,16 +1,22 @@
 """Mistakes of the circuit as a whole: nothing then determines its voltages and currents."""
 
-from loopsim.language.rules.entry import Mistake, mistake
+from loopsim.language.rules.entry import Example, Mistake, mistake
 
 _NET = "gnd -> v1: 1 V -> a\na -- r1: 1 kohm -- gnd\n"
 
 STRUCTURE: tuple[Mistake, ...] = (
-    mistake("empty-circuit", "A circuit has a net besides `gnd`.", "place a part", "", "gnd -- r1: 1 kohm -- gnd\n"),
+    mistake(
+        "empty-circuit",
+        "A circuit has a net besides `gnd`.",
+        "join parts to nets beside gnd, as in: gnd -> battery: 5 V -> vcc -- r1: 1 kohm -- gnd",
+        Example("⟦⟧circuit example\n", headless=True),
+        "gnd -- ⟦r1⟧: 1 kohm -- gnd\n",
+    ),
     mistake(
         "missing-ground",
         "Some part is joined to `gnd`.",
         "`gnd` is the reference of all voltages: join something to it",
-        "a -- r1: 1 kohm -- b\n",
+        "a -- ⟦r1⟧: 1 kohm -- b\n",
     ),
     mistake(
         "floating-net",
