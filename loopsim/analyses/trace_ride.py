@@ -13,7 +13,7 @@ from loopsim.analyses.trace_results import Branch, Fold, Thresholds
 
 Array: TypeAlias = NDArray[np.float64]
 
-MOVES = 0.05  # of a net's travel over all branches: a jump that moves it by less is no jump of that net
+MOVES = 0.01  # of a net's travel over all branches: a jump that moves it by less is no jump of that net
 
 
 def travel_of(branches: Sequence[Branch], net: str) -> float:
