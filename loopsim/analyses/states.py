@@ -19,7 +19,7 @@ from loopsim.analyses.stability import judge
 from loopsim.analyses.sweep import sweep
 from loopsim.circuit import Circuit
 from loopsim.devices.phi_rows import rows_of
-from loopsim.equations.assemble import assemble, parameter_values, pin_currents
+from loopsim.equations.assemble import assemble, let_range, parameter_values, pin_currents
 from loopsim.equations.structure import check
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError, InternalError
@@ -74,11 +74,24 @@ def states(
         boxes=found.boxes,
         seconds=time.monotonic() - began,
         watch=watch,
-        notes=_notes(listed),
+        notes=(*_notes(listed), *_outside_ranges(circuit, settings, values)),
         remainder=found.remainder,
         chosen=worth_showing(circuit, settings),
         units={name: parameter.unit for name, parameter in circuit.parameters.items()},
     )
+
+
+def _outside_ranges(
+    circuit: Circuit, settings: Mapping[str, Any] | None, values: Mapping[str, float]
+) -> tuple[str, ...]:
+    """A note on each let that was set outside the range its file states for it."""
+    notes = []
+    for name in settings or {}:
+        span = let_range(circuit, name, settings) if name in circuit.parameters else None
+        if span is not None and not span[0] <= values[name] <= span[1]:
+            unit = circuit.parameters[name].unit
+            notes.append(f"{name} is set outside the range its file states: {span[0]:g} .. {span[1]:g} {unit}".rstrip())
+    return tuple(notes)
 
 
 def worth_showing(circuit: Circuit, settings: Mapping[str, Any] | None = None) -> tuple[str, ...]:

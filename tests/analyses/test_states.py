@@ -83,6 +83,11 @@ def test_states_are_lettered_in_ascending_order_of_the_watched_net():
     assert points["A"]["right"] == -points["C"]["right"] == pytest.approx(-1.0, abs=0.01)
 
 
+def test_a_let_set_outside_its_stated_range_is_told():
+    assert loopsim.parse(LATCH).states(strength=10).notes == loopsim.parse(LATCH).states().notes
+    assert "strength is set outside the range its file states: 1 .. 10" in loopsim.parse(LATCH).states(strength=11).notes
+
+
 def test_after_z_comes_aa():
     names = letters(26 + 26 * 26 + 1)
     assert names[25:28] == ["Z", "AA", "AB"]
