@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from loopsim.analyses.results import State, States, Verdict
     from loopsim.circuit import Circuit
     from loopsim.language.load import load, parse
+    from loopsim.requirements.library import verify_library
 
 __all__ = [
     "AnalysisError",
@@ -26,6 +27,7 @@ __all__ = [
     "__version__",
     "load",
     "parse",
+    "verify_library",
 ]
 
 _LAZY = {
@@ -35,6 +37,7 @@ _LAZY = {
     "Verdict": "loopsim.analyses.results",
     "load": "loopsim.language.load",
     "parse": "loopsim.language.load",
+    "verify_library": "loopsim.requirements.library",
 }
 
 

@@ -119,7 +119,7 @@ def test_equal_runs_say_and_write_equal_bytes_whether_judged_or_remembered(
     files = ("--csv", "o.csv", "--junit", "o.xml", "--summary", "o.md")
     first = said(capsys, "lib", "--json", *files)[1], *(Path(name).read_bytes() for name in files[1::2])
     _, out, err = said(capsys, "lib", "--json", *files)
-    assert "2 of 2 circuits as the journal .loopsim-journal has them" in err
+    assert "2 of 2 circuits as the journal .loopsim-journal has it" in err
     assert (out, *(Path(name).read_bytes() for name in files[1::2])) == first
     _, out, err = said(capsys, "lib", "--json", "--fresh", "--jobs", "2", *files)
     assert "as the journal" not in err and (out, *(Path(name).read_bytes() for name in files[1::2])) == first
@@ -129,7 +129,7 @@ def test_one_circuit_leaves_no_journal_unless_it_is_named(folder: Path, capsys: 
     said(capsys, "lib/good.loop")
     assert not Path(".loopsim-journal").exists()
     said(capsys, "lib/good.loop", "--journal", "mine")
-    assert "1 of 1 circuits as the journal mine" in said(capsys, "lib/good.loop", "--journal", "mine")[2]
+    assert "1 of 1 circuit as the journal mine" in said(capsys, "lib/good.loop", "--journal", "mine")[2]
 
 
 def test_a_journal_that_cannot_be_kept_is_told_and_one_that_was_named_is_a_mistake(
@@ -247,15 +247,19 @@ def test_an_interrupt_keeps_what_is_finished_and_says_how_to_go_on(folder: Path)
     environment = {**os.environ, "PYTHONPATH": str(ROOT)}
     done = subprocess.run([sys.executable, "-c", program], capture_output=True, text=True, env=environment, check=False)
     assert done.returncode == 130 and "2 requirements of 1 circuit" in done.stdout
-    assert "interrupted: 1 circuits not judged, 1 judged; the journal .loopsim-journal keeps them" in done.stderr
+    assert "interrupted: 1 circuit judged, 1 not; the journal .loopsim-journal keeps them" in done.stderr
     assert "Traceback" not in done.stderr and "not accepted" in done.stderr
     assert len(ET.parse("o.xml").getroot()) == 1 and not Path("b.json").exists()
+
+
+CLUSTER_ENVIRONMENT = {
+    **os.environ, "PYTHONPATH": os.pathsep.join([str(ROOT), str(ROOT / "tests" / "requirements")]), "OMP_NUM_THREADS": "1"
+}  # fmt: skip
 
 
 @pytest.fixture(scope="module")
 def scheduler() -> Iterator[str]:
     """The address of a scheduler with two workers of their own processes, on loopback."""
-    environment = {**os.environ, "PYTHONPATH": str(ROOT), "OMP_NUM_THREADS": "1"}
     program = (
         "import sys, distributed\n"
         "if __name__ == '__main__':\n"
@@ -265,7 +269,7 @@ def scheduler() -> Iterator[str]:
         "    cluster.close()\n"
     )
     with subprocess.Popen(
-        [sys.executable, "-c", program], stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True, env=environment
+        [sys.executable, "-c", program], stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True, env=CLUSTER_ENVIRONMENT
     ) as server:
         assert server.stdin is not None and server.stdout is not None
         yield server.stdout.readline().strip()
@@ -284,6 +288,29 @@ def test_a_cluster_of_two_workers_gives_the_same_bytes(folder: Path, scheduler: 
     alone, together = run("--jobs", "1"), run("--cluster", scheduler)
     assert together.returncode == alone.returncode == 1, together.stderr
     assert together.stdout == alone.stdout
+
+
+@pytest.mark.slow
+@pytest.mark.skipif(importlib.util.find_spec("distributed") is None, reason="needs the extra cluster")
+def test_a_circuit_that_kills_the_workers_of_a_cluster_costs_itself_alone(folder: Path, scheduler: str) -> None:
+    program = (
+        "import sys\n"
+        "from concurrent.futures import Executor\n"
+        "import distributed\n"
+        "from dying import killed\n"
+        "from loopsim.requirements.library import verify_library\n"
+        "with distributed.Client(sys.argv[1]) as client:\n"
+        "    inner = client.get_executor()\n"
+        "    class Deadly(Executor):\n"
+        "        def submit(self, fn, /, *values):\n"
+        "            return inner.submit(killed if 'circuit off ' in values[0] else fn, *values)\n"
+        "    run = verify_library(['lib'], executor=Deadly(), jobs=2)\n"
+        "    print([(c.circuit, c.trouble and c.trouble.kind, *(o.outcome for o in c.outcomes)) for c in run.circuits])\n"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", program, scheduler], capture_output=True, text=True, env=CLUSTER_ENVIRONMENT, check=False, timeout=240
+    )
+    assert done.stdout.strip() == str([("good", None, "met", "met"), ("off", "died", "undecided", "undecided")]), done.stderr
 
 
 @pytest.mark.slow

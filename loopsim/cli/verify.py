@@ -19,6 +19,7 @@ from loopsim.errors import CircuitError, LoopsimError
 from loopsim.output.annotations import annotation_lines, no_order
 from loopsim.output.document import document, document_text
 from loopsim.output.junit import junit_text
+from loopsim.output.text import counted
 from loopsim.output.verify_text import (
     Units,
     baseline_section,
@@ -138,13 +139,13 @@ def _remarks(request: Request, found: LibraryRun, mistakes: Sequence[CircuitErro
     if journal and found.remembered:
         whole = len(found.circuits) + found.missing
         remarks.append(
-            f"{found.remembered} of {whole} circuits as the journal {printable(journal.path)} has them; --fresh judges them anew"
+            f"{found.remembered} of {counted(whole, 'circuit')} as the journal {printable(journal.path)} has it; --fresh judges anew"
         )
     if found.journal_trouble:
         remarks.append(printable(found.journal_trouble))
     if found.interrupted:
         kept = f"; the journal {printable(journal.path)} keeps them: the same command goes on from there" if journal else ""
-        remarks.append(f"interrupted: {found.missing} circuits not judged, {len(found.circuits)} judged{kept}")
+        remarks.append(f"interrupted: {counted(len(found.circuits), 'circuit')} judged, {found.missing} not{kept}")
     return remarks
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import importlib
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 from loopsim.errors import LoopsimError
@@ -10,6 +11,7 @@ from loopsim.errors import LoopsimError
 if TYPE_CHECKING:
     from loopsim.analyses.results import States
     from loopsim.analyses.trace import Trace
+    from loopsim.requirements.outcomes import RequirementOutcome
 
 
 def _pandas() -> Any:
@@ -50,3 +52,8 @@ def trace_frame(curve: Trace) -> Any:
         for number, branch in enumerate(curve.branches, 1)
     ]
     return pandas.concat(parts, ignore_index=True) if parts else pandas.DataFrame()
+
+
+def requirements_frame(outcomes: Sequence[RequirementOutcome]) -> Any:
+    """One row a requirement, in the order of the files: its JSON keys, `file` and `line`."""
+    return _pandas().DataFrame([{**o.to_dict(), "file": o.file, "line": o.line} for o in outcomes])

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import html
 import math
 from collections.abc import Mapping, Sequence
 
@@ -62,6 +63,21 @@ def verify_text(outcomes: Sequence[RequirementOutcome], units: Units | None = No
                 lines.append(palette.faint(f"    why: {printable(o.note)}"))
         lines.append("")
     return "\n".join([*lines, counts_line(outcomes), ""])
+
+
+def verify_html(outcomes: Sequence[RequirementOutcome]) -> str:
+    """The table as a small HTML fragment for notebooks; every text escaped."""
+    head, *rows = [("outcome", "circuit", "requirement", "measured", "margin", "by", "why")] + [
+        (o.outcome, o.circuit, o.text, _values(o, ""), _number(o.margin, ""), o.proof or "-", o.note)
+        for o in sorted(outcomes, key=shortage)
+    ]
+
+    def line(cells: Sequence[str], tag: str) -> str:
+        return "<tr>" + "".join(f"<{tag}>{html.escape(printable(text))}</{tag}>" for text in cells) + "</tr>"
+
+    body = "".join(line(cells, "td") for cells in rows)
+    caption = html.escape(counts_line(outcomes))
+    return f"<table><caption>{caption}</caption><thead>{line(head, 'th')}</thead><tbody>{body}</tbody></table>"
 
 
 def counts_line(outcomes: Sequence[RequirementOutcome]) -> str:

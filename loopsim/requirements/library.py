@@ -77,11 +77,28 @@ class LibraryRun:
 
     def __repr__(self) -> str:
         counts = ", ".join(f"{number} {word}" for word, number in self.summary.items())
-        return f"LibraryRun({len(self.circuits)} circuits, {counts})"
+        many = "s" * (len(self.circuits) != 1)
+        return f"LibraryRun({len(self.circuits)} circuit{many}, {counts})"
+
+    def __str__(self) -> str:
+        from loopsim.output.verify_text import verify_text
+
+        return verify_text(self.outcomes)
+
+    def _repr_html_(self) -> str:
+        from loopsim.output.verify_text import verify_html
+
+        return verify_html(self.outcomes)
 
     def to_dict(self) -> dict[str, Any]:
         """The JSON form."""
         return {"requirements": [outcome.to_dict() for outcome in self.outcomes], "summary": self.summary}
+
+    def to_dataframe(self) -> Any:
+        """A pandas data frame, one row a requirement; LoopsimError where pandas is not installed."""
+        from loopsim.output.frames import requirements_frame
+
+        return requirements_frame(self.outcomes)
 
 
 def verify_library(

@@ -24,6 +24,7 @@ from loopsim.output.verify_text import (
     verify_text,
 )
 from loopsim.requirements.baseline import Moved
+from loopsim.requirements.library import CircuitRun, LibraryRun
 from loopsim.requirements.outcomes import RequirementOutcome
 
 MET = RequirementOutcome(
@@ -134,6 +135,21 @@ def test_json_is_ascii_and_markdown_keeps_its_table(text: str) -> None:
     assert all(plain_line(line) for line in page.splitlines())
     cell = re.sub(r"\\.", "", markdown_cell(text)).replace("&amp;", "")
     assert not re.search(r"[<>`*_\[\]()&!@:#]|www\.", cell)
+
+
+@pytest.mark.parametrize("text", NASTY)
+def test_a_notebook_is_shown_text_and_no_markup(text: str) -> None:
+    root = ET.fromstring(LibraryRun((CircuitRun("f", "c", (dressed(text), MET)),))._repr_html_())
+    assert {element.tag for element in root.iter()} == {"table", "caption", "thead", "tbody", "tr", "th", "td"}
+    assert len(root.findall("tbody/tr")) == 2
+
+
+def test_a_run_shows_itself_as_table_line_and_frame() -> None:
+    run = LibraryRun((CircuitRun("p.loop", "pump", (MET, VIOLATED)),))
+    assert repr(run) == "LibraryRun(1 circuit, 1 violated, 0 undecided, 1 met)"
+    assert str(run) == verify_text([MET, VIOLATED])
+    frame = run.to_dataframe()
+    assert list(frame["outcome"]) == ["met", "violated"] and list(frame["line"]) == [7, 7]
 
 
 def test_junit_gives_counts_places_margins_and_proofs() -> None:
