@@ -20,6 +20,7 @@ FIRST_STEP = 1e-3  # scaled arclength, of a range that is 1 long
 LARGEST_STEP = 0.04  # at least 25 points over the range, for a picture
 SMALLEST_STEP = 1e-13
 TURN = 0.35  # [rad] largest turn of the tangent in one accepted step: more means a corner was cut or a branch jumped
+CROSSING_STEP = 1e-5  # a curve that turns over within a step as short as this has crossed another branch, not been left for it
 CORRECTIONS = 7
 CORRECTOR_SHARE = 0.3  # of the step: a corrector that moves further has probably left the branch
 MAX_POINTS = 20_000
@@ -48,8 +49,12 @@ class Curve:
     end: str
 
 
-def tangent(equations: CurveEquations, x: Array, level: float, scale: Array, last: Array) -> Array | None:
-    """Unit tangent in scaled variables, on the side of `last`. scale: (n + 1,)."""
+def tangent(equations: CurveEquations, x: Array, level: float, scale: Array, last: Array) -> tuple[Array, float] | None:
+    """(unit tangent in scaled variables, on the side of `last`; orientation: sign of the bordered determinant). scale: (n + 1,).
+
+    Along a curve the orientation keeps its sign, through folds too; it turns where another branch crosses, and on a neighbour that the
+    curve was left for (E. L. Allgower, K. Georg, Numerical Continuation Methods, 1990, ch. 8, from memory).
+    """
     n = len(x)
     bordered = np.empty((n + 1, n + 1))
     bordered[:n, :n] = equations.jacobian(x, level) * scale[:n]
@@ -64,7 +69,9 @@ def tangent(equations: CurveEquations, x: Array, level: float, scale: Array, las
     except np.linalg.LinAlgError:
         return None
     length = float(np.linalg.norm(found))
-    return np.asarray(found / length) if np.isfinite(length) and length > 0.0 else None
+    if not (np.isfinite(length) and length > 0.0):
+        return None
+    return np.asarray(found / length), float(np.linalg.slogdet(bordered)[0])
 
 
 def correct(
@@ -115,10 +122,11 @@ def follow(
     n = len(x)
     last = np.zeros(n + 1)
     last[n] = toward
-    here = tangent(equations, x, level, scale, last)
+    begun = tangent(equations, x, level, scale, last)
     xs, levels, tangents, lengths = [x], [level], [], [0.0]
-    if here is None:
+    if begun is None:
         return Curve(np.array(xs), np.array(levels), np.zeros((1, n + 1)), np.zeros(1), "stuck")
+    here, orientation = begun
     tangents.append(here)
     start, start_tangent = np.append(x / scale[:n], level / scale[n]), here
     step, end = FIRST_STEP, "stuck"
@@ -131,8 +139,10 @@ def follow(
             equations, x + step * here[:n] * scale[:n], level + step * here[n] * scale[n], scale, here, step
         )
         new = tangent(equations, corrected[0], corrected[1], scale, here) if corrected is not None else None
-        turn = float(np.arccos(np.clip(new @ here, -1.0, 1.0))) if new is not None else np.pi
-        if corrected is None or new is None or turn > TURN:
+        turn = float(np.arccos(np.clip(new[0] @ here, -1.0, 1.0))) if new is not None else np.pi
+        # turned over: another branch was hit, unless one crosses right here
+        hit = new is not None and new[1] != orientation and step > CROSSING_STEP
+        if corrected is None or new is None or turn > TURN or hit:
             step *= 0.4
             if step < SMALLEST_STEP:
                 break
@@ -142,8 +152,8 @@ def follow(
         if (
             left_start
             and away < 1.5 * step
-            and float(new @ start_tangent) > 0.5
-            and float((start - point) @ new) < step
+            and float(new[0] @ start_tangent) > 0.5
+            and float((start - point) @ new[0]) < step
         ):
             xs.append(xs[0])
             levels.append(levels[0])
@@ -152,7 +162,7 @@ def follow(
             end = "closed"
             break
         left_start = left_start or away > 3.0 * LARGEST_STEP
-        x, level, here = corrected[0], corrected[1], new
+        x, level, (here, orientation) = corrected[0], corrected[1], new
         xs.append(x)
         levels.append(level)
         tangents.append(here)
