@@ -147,6 +147,9 @@ DEFINITIONS: tuple[Mistake, ...] = (
         "connect them side by side",
         "block cell(p) {\n  ⟦x1⟧: cell(p = p)\n}\nx1: cell(p = a)\n",
         "block cell(p) {\n  x1: other(p = p)\n}\nblock other(p) {\n  ⟦x1⟧: cell(p = p)\n}\nx1: cell(p = a)\n",
+        "block b0(p) {\n  p -- r1: 1 kohm -- gnd\n}\n"
+        + "".join(f"block b{k}(p) {{\n  x1: b{k - 1}(p = p)\n}}\n" for k in range(1, 33))
+        + "x1: b32(p = a)\n",
     ),
     mistake(
         "too-many-parts",
