@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from loopsim.devices.phi import SLOPE, Kind
 from loopsim.devices.phi_rows import rows_of
+from loopsim.equations.between import Between, held_between
 from loopsim.equations.ordering import Block, blocks
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError
@@ -70,6 +71,7 @@ def all_points(
     owner = np.empty(n, dtype=np.int64)
     for i, block in enumerate(order):
         owner[block.unknowns] = i
+    between = [one for one in held_between(system) if source_radius is None or not np.any(source_radius[one.members])]
     seen: dict[bytes, Found] = {}
     undecided, boxes = 0, 0
     remainder: list[str] = []
@@ -81,10 +83,10 @@ def all_points(
         for g in range(len(groups)):
             first = int(np.flatnonzero(member == g)[0])
             problem, rows = group_problem(system, block, low[first], high[first], source_radius)
-            limits = _limits(system, block, box)
-            key = _key(problem, rows, limits)
+            start = _start(system, block, box, between, owner < i, low[first], high[first])
+            key = _key(problem, rows, start)
             if key not in seen:
-                seen[key] = _solve(problem, rows, limits, deadline, max_boxes)
+                seen[key] = _solve(problem, rows, start, deadline, max_boxes)
                 boxes += seen[key].boxes
             found.append(seen[key])
             if not seen[key].complete:
@@ -115,15 +117,26 @@ def all_points(
     return Points(centre, spread, undecided, tuple(dict.fromkeys(remainder)), boxes, len(order))
 
 
-def _limits(system: System, block: Block, box: float) -> Array:
-    """(k,) half width of the start box of each unknown of a group: the box for nets, INNER_LIMIT for what is not a net."""
-    return np.array([box if system.unknowns[j][0] == "net" else INNER_LIMIT for j in block.unknowns])
+def _start(
+    system: System, block: Block, box: float, between: list[Between], known: NDArray[np.bool_], low: Array, high: Array
+) -> Array:
+    """(2, k) start box of the unknowns of a group: the box for nets, INNER_LIMIT for what is not a net; less where other nets hold a net
+    between them. known: (n,) which unknowns lie in [low, high] already."""
+    reach = np.array([box if kind == "net" else INNER_LIMIT for kind, _ in system.unknowns])
+    least, most = np.where(known, low, -reach), np.where(known, high, reach)
+    start = np.stack([-reach, reach])
+    for one in between:
+        below, above = one.bounds(least, most)
+        # a set that lies outside the box altogether is left to the search
+        if below <= box and above >= -box:
+            start[0, one.members], start[1, one.members] = max(below, -box), min(above, box)
+    return start[:, block.unknowns]
 
 
-def _key(problem: Problem, kinds: NDArray[np.int64], limits: Array) -> bytes:
+def _key(problem: Problem, kinds: NDArray[np.int64], start: Array) -> bytes:
     """Groups with the same numbers have the same solutions: several equal cells are searched once."""
     arrays = (
-        limits,
+        start,
         problem.G,
         problem.B,
         problem.W,
@@ -142,14 +155,14 @@ def _key(problem: Problem, kinds: NDArray[np.int64], limits: Array) -> bytes:
 
 
 def _solve(
-    problem: Problem, kinds: NDArray[np.int64], limits: Array, deadline: float, max_boxes: int
+    problem: Problem, kinds: NDArray[np.int64], start: Array, deadline: float, max_boxes: int
 ) -> Found:
     if problem.m == 0:
         return _solve_linear(problem)
-    scale = np.where(limits < INNER_LIMIT, 1.0, 1e-3)
-    found = search(problem, -limits, limits, deadline=deadline, scale=scale, max_boxes=max_boxes)
+    scale = np.where(start[1] < INNER_LIMIT, 1.0, 1e-3)
+    found = search(problem, start[0], start[1], deadline=deadline, scale=scale, max_boxes=max_boxes)
     if found.complete and not parity_holds(problem, kinds, found):
-        doubt = np.stack([-limits, limits])[None]
+        doubt = start[None]
         return Found(found.x, found.spread, found.clusters, doubt, found.boxes, found.seconds, ("parity",))
     return found
 

@@ -26,7 +26,7 @@ Array: TypeAlias = NDArray[np.float64]
 Index: TypeAlias = NDArray[np.int64]
 
 BATCH = 128  # boxes per round: array calls are then well past their fixed cost, and memory stays small
-PROGRESS = 0.15  # a pass that narrows no width by this share has done its work; the box is tested and split
+PROGRESS = 0.2  # a pass that narrows no width by this share has done its work; the box is tested and split
 SMALL = 1e-7  # relative width at which an undecided box is called a cluster: a double root cannot be resolved below sqrt(2^-53) = 1e-8
 RECENT = 24  # proved regions that a box is compared with: only neighbours of the last few still appear
 FAR = 400.0  # width of a row's argument beyond which a cut of the argument itself comes first, for rows that grow without bound there
