@@ -35,7 +35,12 @@ def pytest_addoption(parser: pytest.Parser) -> None:
 
 def pytest_configure(config: pytest.Config) -> None:
     """Refuse a budget that is none before anything runs."""
-    _budget(config)
+    if _wanted(config):
+        _budget(config)
+
+
+def _wanted(config: pytest.Config) -> bool:
+    return bool(config.getoption("loopsim") or config.getini("loopsim"))
 
 
 def _budget(config: pytest.Config) -> float:
@@ -50,8 +55,7 @@ def _budget(config: pytest.Config) -> float:
 
 def pytest_collect_file(file_path: Path, parent: pytest.Collector) -> CircuitFile | None:
     """A collector for a circuit file that holds an `expect`."""
-    wanted = parent.config.getoption("loopsim") or parent.config.getini("loopsim")
-    if not wanted or file_path.suffix != ".loop":
+    if not _wanted(parent.config) or file_path.suffix != ".loop":
         return None
     try:
         content = file_path.read_bytes()

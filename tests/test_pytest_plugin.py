@@ -11,7 +11,8 @@ import pytest
 pytest_plugins = ["pytester"]
 ROOT = Path(__file__).parents[1]
 INSTALLED = any(entry.name == "loopsim" for entry in entry_points(group="pytest11"))
-PLUGIN = () if INSTALLED else ("-p", "loopsim.pytest_plugin")
+BARE = ("-p", "no:hypothesispytest")  # a plugin that takes a second to load and has no part in this
+PLUGIN = BARE if INSTALLED else (*BARE, "-p", "loopsim.pytest_plugin")
 GOOD = """circuit {name} "divider"
 let supply = 5 V
 gnd -> battery: supply -> top

@@ -63,6 +63,9 @@ class Journal:
         try:
             _lock(handle, path)
             content = _whole(handle)
+            if HEAD.startswith(content):  # killed while it was begun
+                os.ftruncate(handle, 0)
+                content = b""
             known, damaged, good = read_lines(content)
             foreign = bool(content) and not content.startswith(HEAD) and not good
             kept = content if foreign else treat(handle, content)

@@ -141,6 +141,13 @@ def test_damaged_lines_are_left_out_and_counted_and_the_journal_goes_on(tmp_path
     assert "more" in known and good == kept + 1
 
 
+def test_a_journal_that_was_killed_while_it_was_begun_is_begun_again(tmp_path: Path) -> None:
+    path = tmp_path / "j"
+    path.write_bytes(HEAD[:9])
+    Journal.resume(str(path)).close()
+    assert path.read_bytes() == HEAD
+
+
 def test_two_runs_do_not_write_one_journal(tmp_path: Path) -> None:
     path = str(tmp_path / "j")
     journal = Journal.resume(path)
