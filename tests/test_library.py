@@ -81,6 +81,12 @@ def test_laid_out_in_the_standard_way(path):
     assert tidy(text) == text
 
 
+def test_the_page_of_circuits_is_made_from_the_files():
+    import write_circuits
+
+    assert write_circuits.PAGE.read_text(encoding="utf-8") == write_circuits.page(), "write it anew: python tests/write_pages.py"
+
+
 def test_the_page_of_circuits_names_every_file():
     page = (ROOT / "docs" / "reference" / "circuits.md").read_text(encoding="utf-8")
     listed = set(re.findall(r"^\| `([a-z_/]+\.loop)` \|", page, re.MULTILINE))

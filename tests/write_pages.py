@@ -2,6 +2,7 @@
 
 from pathlib import Path
 
+import write_circuits
 import write_errors
 
 from loopsim.cli.catalogue import COMMON, VERBS
@@ -19,4 +20,5 @@ def with_verbs(page: str) -> str:
 if __name__ == "__main__":
     path = Path(__file__).parent.parent / "docs/reference/cli.md"
     path.write_text(with_verbs(path.read_text(encoding="utf-8")), encoding="utf-8")
+    write_circuits.PAGE.write_text(write_circuits.page(), encoding="utf-8")
     write_errors.PAGE.write_text(write_errors.page(), encoding="utf-8")
