@@ -53,7 +53,8 @@ def _outcome(computed: Computed, requirement: Requirement, settings: Mapping[str
     began = time.monotonic()
     judged = _over_bindings(computed, requirement, settings)
     if judged.outcome == "met" and computed.require_proof and judged.proof not in ENOUGH:
-        judged = replace(judged, outcome="undecided", note=f"met, but only {judged.proof}: not proved")
+        more = f"; {judged.note}" if judged.note else ""
+        judged = replace(judged, outcome="undecided", note=f"met, but only {judged.proof}: not proved{more}")
     span = requirement.span
     return RequirementOutcome(
         circuit=computed.circuit.name,
