@@ -125,6 +125,15 @@ def test_equal_runs_say_and_write_equal_bytes_whether_judged_or_remembered(
     assert "as the journal" not in err and (out, *(Path(name).read_bytes() for name in files[1::2])) == first
 
 
+def test_a_let_that_is_set_is_set_in_every_circuit_and_judged_apart(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert said(capsys, "lib")[0] == 1
+    found = document(capsys, "lib", "--set", "supply=5V")
+    assert found["summary"]["met"] == 4 and found["settings"] == {"supply": "5V"}
+    assert said(capsys, "lib", "--set", "supply=5V")[0] == 0 and said(capsys, "lib")[0] == 1  # each remembered under its own
+    (folder / "lib" / "lone.loop").write_text(DIVIDER.format(name="lone", supply=5).replace("supply", "other"), encoding="utf-8")
+    assert document(capsys, "lib", "--set", "supply=6V")["summary"]["met"] == 4
+
+
 def test_one_circuit_leaves_no_journal_unless_it_is_named(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
     said(capsys, "lib/good.loop")
     assert not Path(".loopsim-journal").exists()
@@ -204,6 +213,8 @@ def test_a_run_that_is_not_whole_is_not_accepted(folder: Path, capsys: pytest.Ca
         (["lib", "--accept"], "--accept needs the baseline"),
         (["lib", "--json", "--annotations"], "both want standard output"),
         (["lib", "--jobs", "0"], "at least 1"),
+        (["lib", "--set", "suply=3V"], "did you mean `supply`?"),
+        (["lib", "--set", "supply=3A"], "`supply` is in V"),
         (["lib", "--junit", "lib/good.loop"], "a circuit file would be overwritten"),
         (["lib", "--baseline", "lib/good.loop", "--accept"], "a circuit file would be overwritten"),
         (["lib", "--journl", "x"], "did you mean `--journal`?"),

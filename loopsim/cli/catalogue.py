@@ -148,6 +148,7 @@ VERIFY = Verb(
         Option("--list", "", "name the requirements, judge none"),
         Option("--select", "PATTERN", "only these: a label, a circuit or circuit::label, with * and ?; repeatable", repeatable=True),
         Option("--require-proof", "", "met only by what is proved; the rest is undecided"),
+        Option("--set", "LET=VALUE", "give a let another value where a circuit has it; repeatable", values.setting, repeatable=True),
         BOX,
         Option("--budget", "SECONDS", "wall time for each circuit (60 s)", values.positive_seconds),
         Option("--jobs", "N", "worker processes (one a core)", values.count),

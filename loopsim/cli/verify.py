@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import signal
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from typing import Any
 
@@ -14,7 +14,7 @@ from loopsim.cli.exits import Exit, highest_ranked
 from loopsim.cli.faults import bug_report
 from loopsim.cli.options import Request, UsageError, nearest
 from loopsim.cli.progress import progress
-from loopsim.cli.reading import read_circuit, write_file
+from loopsim.cli.reading import read_circuit, settings, write_file
 from loopsim.errors import CircuitError, LoopsimError
 from loopsim.output.annotations import annotation_lines, no_order
 from loopsim.output.document import document, document_text
@@ -61,8 +61,9 @@ def run(request: Request, around: Surroundings) -> Answer:
     selected = [chosen(circuit, select) for circuit in circuits]
     if request.has("list"):
         return _listing(request, circuits, selected, mistakes)
+    lets = _settings(request, circuits)
     with _journal(request, selected) as (journal, remarks), progress(around, "verify") as tell:
-        found = _verified(request, selected, journal, tell)
+        found = _verified(request, selected, lets, journal, tell)
     if found.interrupted:
         signal.signal(signal.SIGINT, signal.SIG_DFL)  # the second one stops at once
     changes = _compared(request, stored, found, mistakes)
@@ -84,19 +85,41 @@ def _answer(text: str, codes: Sequence[int], remarks: Sequence[str]) -> Answer:
     return Answer(text, highest_ranked(codes), tuple(no_order(remark) for remark in remarks))
 
 
+def _settings(request: Request, circuits: Sequence[Circuit]) -> dict[str, float]:
+    """The lets of `--set` [SI]; CircuitError for one that no circuit has, or that cannot have the value in one that has it."""
+    found: dict[str, float] = {}
+    for name, text in request.get("set", ()):
+        having = [circuit for circuit in circuits if name in circuit.parameters]
+        if circuits and not having:
+            known = {let for circuit in circuits for let in circuit.parameters if "." not in let}
+            hint = nearest(name, known) or f"their lets: {', '.join(sorted(known))}"
+            raise CircuitError("unknown-let", f"no circuit has a let `{name}`", hint=hint)
+        for circuit in having:
+            found.update(settings(circuit, [(name, text)]))
+    return found
+
+
 def _verified(
-    request: Request, circuits: Sequence[Circuit], journal: Journal | None, tell: Callable[[float], None] | None
+    request: Request,
+    circuits: Sequence[Circuit],
+    lets: Mapping[str, float],
+    journal: Journal | None,
+    tell: Callable[[float], None] | None,
 ) -> LibraryRun:
     options = Options(
         request.get("budget", DEFAULTS.budget), request.get("box", DEFAULTS.box), require_proof=request.has("require_proof")
     )
     if not request.has("cluster"):
-        return verify_circuits(circuits, options=options, jobs=request.get("jobs"), journal=journal, progress=tell)
+        return verify_circuits(
+            circuits, options=options, settings=lets, jobs=request.get("jobs"), journal=journal, progress=tell
+        )  # fmt: skip
     from loopsim.cli.cluster import cluster
 
     with cluster(request.get("cluster")) as (executor, threads):
         jobs = request.get("jobs", threads)
-        return verify_circuits(circuits, options=options, jobs=jobs, executor=executor, journal=journal, progress=tell)
+        return verify_circuits(
+            circuits, options=options, settings=lets, jobs=jobs, executor=executor, journal=journal, progress=tell
+        )  # fmt: skip
 
 
 @contextmanager
@@ -174,7 +197,8 @@ def _text(
 
 
 def _document(request: Request, body: dict[str, Any]) -> str:
-    return document_text(document("verify", body, circuit="", file=", ".join(request.paths), settings={}))
+    given = dict(request.get("set", ()))
+    return document_text(document("verify", body, circuit="", file=", ".join(request.paths), settings=given))
 
 
 def _entry(outcome: RequirementOutcome, timings: bool) -> dict[str, Any]:

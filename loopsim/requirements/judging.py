@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import json
 import traceback
+from collections.abc import Mapping
 from dataclasses import asdict, dataclass, fields, replace
 from typing import Any
 
@@ -49,14 +50,16 @@ class Record:
     trouble: Trouble | None = None
 
 
-def task_text(circuit: Circuit, options: Options) -> str:
-    """The task of judging the requirements that `circuit` holds."""
+def task_text(circuit: Circuit, options: Options, settings: Mapping[str, float] | None = None) -> str:
+    """The task of judging the requirements that `circuit` holds. settings: let to value [SI], of which those
+    that it has are set."""
     task = {
         "code": code(),
         "file": circuit.file,
         "sources": list(circuit.sources.items()),  # its own text first
         "labels": [requirement.label for requirement in circuit.requirements],
         "options": asdict(options),
+        "settings": {let: value for let, value in (settings or {}).items() if let in circuit.parameters},
     }
     return json.dumps(task)
 
@@ -101,7 +104,7 @@ def _judged(asked: dict[str, Any], options: Options, heard: list[RequirementOutc
     chosen = tuple(requirement for requirement in circuit.requirements if requirement.label in wanted)
     circuit = replace(circuit, requirements=chosen)
     found = verify(
-        circuit, box=options.box, budget=options.budget, require_proof=options.require_proof, hear=heard.append
+        circuit, settings=asked["settings"], box=options.box, budget=options.budget, require_proof=options.require_proof, hear=heard.append
     )  # fmt: skip
     return Record(found)
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 
 import os
 from collections import deque
-from collections.abc import Callable, Generator, Iterator, Sequence
+from collections.abc import Callable, Generator, Iterator, Mapping, Sequence
 from concurrent.futures import FIRST_COMPLETED, Executor, Future, wait
 from contextlib import closing
 from dataclasses import dataclass, replace
@@ -106,6 +106,7 @@ def verify_library(
     *,
     select: Sequence[str] = (),
     options: Options = DEFAULTS,
+    settings: Mapping[str, float] | None = None,
     jobs: int | None = None,
     executor: Executor | None = None,
     journal: Journal | None = None,
@@ -117,7 +118,9 @@ def verify_library(
     """
     circuits, mistakes = read_library(paths)
     selected = [chosen(circuit, select) for circuit in circuits]
-    found = verify_circuits(selected, options=options, jobs=jobs, executor=executor, journal=journal, progress=progress)
+    found = verify_circuits(
+        selected, options=options, settings=settings, jobs=jobs, executor=executor, journal=journal, progress=progress
+    )  # fmt: skip
     return replace(found, mistakes=tuple(mistakes))
 
 
@@ -125,6 +128,7 @@ def verify_circuits(
     circuits: Sequence[Circuit],
     *,
     options: Options = DEFAULTS,
+    settings: Mapping[str, float] | None = None,
     jobs: int | None = None,
     executor: Executor | None = None,
     journal: Journal | None = None,
@@ -132,14 +136,15 @@ def verify_circuits(
 ) -> LibraryRun:
     """Judge every requirement of the circuits, which came from text; those without any are left out.
 
-    jobs: workers (one a core); executor: any `concurrent.futures.Executor`, of which only `submit` and the
-    order of completion are used and that is handed three tasks for each of `jobs`, own worker processes by
-    default; journal: finished circuits are taken from it and put into it; progress: hears the share done (0 ..
+    settings: let to value [SI], for every circuit that has it; jobs: workers (one a core); executor: any
+    `concurrent.futures.Executor`, of which only `submit` and the order of completion are used and that is
+    handed three tasks for each of `jobs`, own worker processes by default; journal: finished circuits are
+    taken from it and put into it; progress: hears the share done (0 ..
     1). A circuit that cannot be judged does not stop the others; its requirements are undecided.
     An interrupt from the keyboard ends with what is finished.
     """
     asked = [circuit for circuit in circuits if circuit.requirements]
-    tasks = [task_text(circuit, options) for circuit in asked]
+    tasks = [task_text(circuit, options, settings) for circuit in asked]
     keys = [key_of(task) if journal else "" for task in tasks]
     records: dict[int, Record] = {}
     if journal:
@@ -217,7 +222,8 @@ def _judged(
 def _first_attempts(
     pool: Executor | None, tasks: Sequence[str], numbers: Sequence[int], jobs: int, lost: list[int]
 ) -> Generator[tuple[int, Record], None, list[int]]:
-    """(number, record) of what is answered. Appends to `lost` what the executor took and did not answer; returns what it refused."""
+    """(number, record) of what is answered. Appends to `lost` what the executor took and did not answer;
+    returns what it refused."""
     refused: list[int] = []
     for number, answer in _finished(pool, tasks, numbers, WINDOW * jobs, 1):
         if isinstance(answer, Record):
@@ -286,8 +292,9 @@ def read_library(
 
 
 def _meant_as_circuit(path: str) -> bool:
-    """Whether a file found in a folder is meant as a circuit. Only one that begins with definitions and has neither a circuit nor a
-    requirement is none; whatever else cannot be read is told, so that no requirement gets lost by a slip in its file."""
+    """Whether a file found in a folder is meant as a circuit. Only one that begins with definitions and has
+    neither a circuit nor a requirement is none; whatever else cannot be read is told, so that no requirement
+    gets lost by a slip in its file."""
     try:
         with open(path, encoding="utf-8") as stream:
             text = stream.read()
