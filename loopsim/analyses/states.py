@@ -74,11 +74,20 @@ def states(
         boxes=found.boxes,
         seconds=time.monotonic() - began,
         watch=watch,
-        notes=(*_notes(listed), *_outside_ranges(circuit, settings, values)),
+        notes=(*_notes(listed), *_beyond(listed, box), *_outside_ranges(circuit, settings, values)),
         remainder=found.remainder,
         chosen=worth_showing(circuit, settings),
         units={name: parameter.unit for name, parameter in circuit.parameters.items()},
     )
+
+
+def _beyond(listed: tuple[State, ...], box: float) -> tuple[str, ...]:
+    """A note on nets outside the box: sources and linear parts put them there, and nothing was searched for them."""
+    nets = sorted({net for state in listed for net, volts in state.nets.items() if abs(volts) > box})
+    if not nets:
+        return ()
+    shown = ", ".join(nets[:6]) + (f" and {len(nets) - 6} more" if len(nets) > 6 else "")
+    return (f"outside the box, where sources and linear parts alone put them: {shown}",)
 
 
 def _outside_ranges(

@@ -88,6 +88,14 @@ def test_a_let_set_outside_its_stated_range_is_told():
     assert "strength is set outside the range its file states: 1 .. 10" in loopsim.parse(LATCH).states(strength=11).notes
 
 
+def test_nets_that_sources_put_outside_the_box_are_told():
+    text = 'circuit far "Far"\ngnd -> source: 2 kV -> top -- r1: 1 Mohm -- out -> d1: diode -> gnd\n'
+    near, far = loopsim.parse(text).states(box=3e3), loopsim.parse(text).states()
+    assert near.complete
+    assert not any("outside the box" in note for note in near.notes)
+    assert "outside the box, where sources and linear parts alone put them: top" in far.notes
+
+
 def test_after_z_comes_aa():
     names = letters(26 + 26 * 26 + 1)
     assert names[25:28] == ["Z", "AA", "AB"]
