@@ -9,7 +9,7 @@ from loopsim.expressions import Expression, LetRef
 from loopsim.language import tree as t
 from loopsim.language.draft import Frame
 from loopsim.language.formulas import Scope, Typed, typed
-from loopsim.language.measures import COUNTS, MEASURES, MeasureForm
+from loopsim.language.measures import AT_STATES, COUNTS, FROM_A_START, MEASURES, MeasureForm
 from loopsim.language.mistakes import nearest
 from loopsim.language.parser import Source
 from loopsim.language.values import constant, limits, refuse_nets, toleranced, unit_in_words
@@ -24,6 +24,7 @@ def add_requirement(statement: t.Expect, frame: Frame) -> None:
     target = _target_of(statement.target, scope) if statement.target is not None else None
     _check_target(form, words, statement, scope)
     _check_along(form, words, statement, scope)
+    _check_clauses(words, statement, scope)
     along = _let_of(statement.along, frame) if statement.along is not None else None
     if statement.along is not None:
         _check_range(form, statement.along, frame)
@@ -76,6 +77,23 @@ def _check_along(form: MeasureForm, words: str, statement: t.Expect, scope: Scop
         raise scope.mistake("measure-along", f"`{words}` needs `along LET`", statement.words[-1].place)
     if form.along == "refused" and statement.along is not None:
         raise scope.mistake("measure-along", f"`{words}` takes no `along`", statement.along.place)
+
+
+def _check_clauses(words: str, statement: t.Expect, scope: Scope) -> None:
+    """Error for a clause that would mean nothing with this measure."""
+    if statement.stable and words not in AT_STATES:
+        raise scope.mistake(
+            "measure-clause", f"`{words}` takes no `in stable states`", statement.words[-1].place
+        )
+    if statement.start is None:
+        return
+    if words not in FROM_A_START:
+        raise scope.mistake("measure-clause", f"`{words}` takes no `from`", statement.start.place)
+    if statement.start.text != "off" and not re.fullmatch("[A-Z]+", statement.start.text):
+        raise scope.mistake(
+            "measure-clause", f"`{statement.start.text}` is no start", statement.start.place,
+            "from off (the supplies come up), or from A, B, ... (a state by its letter)",
+        )
 
 
 def _check_range(form: MeasureForm, word: t.Word, frame: Frame) -> None:

@@ -43,3 +43,6 @@ MEASURES: dict[str, MeasureForm] = {
 }
 
 COUNTS = ("states", "stable states", "unstable states")
+# what is read at operating points, so that `in stable states` means something; and what begins somewhere, so that `from` does
+AT_STATES = ("values", "slope", "growth rate", "damping", "loop gain", "phase margin")
+FROM_A_START = ("start state", "period", "frequency", "duty", "swing", "settling time", "final value")

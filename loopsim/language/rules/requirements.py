@@ -29,6 +29,14 @@ REQUIREMENTS: tuple[Mistake, ...] = (
         _NET + "expect hysteresis of a along ⟦load⟧ = 1 ohm\n",
     ),
     mistake(
+        "measure-clause",
+        "`in stable states` goes with what is read at operating points, `from` with what begins somewhere: `off` or the letter of a state.",
+        "leave the clause out",
+        _NET + "expect ⟦states⟧ in stable states = 1\n",
+        _NET + "expect states = 1 from ⟦off⟧\n",
+        _NET + "expect final value of a = 1 V from ⟦somewhere⟧\n",
+    ),
+    mistake(
         "relation",
         "A range rises, a set in braces goes with `values`, a count is a whole number.",
         "= v, = v +/- tol, in LO .. HI, < v, > v",
