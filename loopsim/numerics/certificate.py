@@ -62,7 +62,7 @@ def injective(problem: Problem, boxes: Boxes) -> NDArray[np.bool_]:
     for _ in range(6):
         load = ar * y + fr * yv
         y = times(w_through, load) + 1e-14 * (y + times(w, z))
-        top = np.maximum(np.max(y, axis=1, keepdims=True), TINY)
+        top = np.maximum(np.max(y, axis=1, keepdims=True, initial=0.0), TINY)
         y = y / top + 1e-12
         if v_through is not None:
             yv = times(v_through, load) / top + 1e-12

@@ -140,5 +140,5 @@ def relax(problem: Problem, boxes: Boxes) -> Relaxed:
     low[:, at.w] = np.where(proved, np.maximum(w_low, down(wm + dw - w_rad)), w_low)
     high[:, at.w] = np.where(proved, np.minimum(w_high, up(wm + dw + w_rad)), w_high)
     width = np.maximum(w_high - w_low, TINY)
-    impact = np.max(np.abs(w_through) / width[:, :, None], axis=1) * inner_rad
+    impact = np.max(np.abs(w_through) / width[:, :, None], axis=1, initial=0.0) * inner_rad
     return Relaxed(Boxes(low, high), np.nan_to_num(impact, nan=0.0, posinf=HUGE), inverse)

@@ -355,3 +355,11 @@ def test_trip_points_refuse_what_they_cannot_move(two: Trace) -> None:
         circuit.trip_points("level", samples={"nothing": [1.0]})
     with pytest.raises(KeyError):
         circuit.trip_points("level", samples=1).threshold("mid", "rising")
+
+
+def test_a_circuit_without_nonlinear_parts_has_one_branch_that_is_proved():
+    text = "circuit divider\nlet level = 1 V in 0 V .. 2 V\ngnd -> v1: level -> a -- r1: 1 kohm -- b -- r2: 1 kohm -- gnd\n"
+    found = loopsim.parse(text).trace("level")
+    assert found.over_range
+    assert {count for _, count in found.counts} == {1}
+    assert found.folds == ()
