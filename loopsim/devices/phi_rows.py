@@ -25,13 +25,14 @@ class PhiRows:
 
     @cached_property
     def groups(self) -> tuple[tuple[int, Any, Array], ...]:
-        """(kind, rows, parameters with their axis first); rows is a slice of everything where there is one kind only."""
+        """(kind, rows, parameters with their axis first); rows is a slice where those of a kind stand side by side."""
         present = np.unique(self.kinds)
         found = []
         for kind in present:
             rows = np.flatnonzero(self.kinds == kind)
             parameters = np.moveaxis(self.parameters[rows], -1, 0)
-            found.append((int(kind), rows if len(present) > 1 else slice(None), parameters))
+            together = rows[-1] - rows[0] == len(rows) - 1
+            found.append((int(kind), slice(int(rows[0]), int(rows[-1]) + 1) if together else rows, parameters))
         return tuple(found)
 
     @cached_property

@@ -41,8 +41,9 @@ def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.
     """(unknowns, rows that answer for them) in an order in which each needs only earlier ones, by `entries`: (n, n), which must hold the
     pattern of the DC equations. AnalysisError `singular` where no row answers for some unknown."""
     n = system.n
+    always = pattern(system)
     match = (
-        maximum_bipartite_matching(csr_array(pattern(system)), perm_type="row")
+        maximum_bipartite_matching(csr_array(always), perm_type="row")
         if n
         else np.zeros(0, dtype=np.int64)
     )
@@ -53,7 +54,7 @@ def groups(system: System, entries: NDArray[np.bool_]) -> list[tuple[NDArray[np.
             f"no equation determines {', '.join(lost)}",
             hint="look for a loop of sources or a floating net",
         )
-    own = np.diag(pattern(system))
+    own = np.diag(always)
     # match[j]: the row that answers for unknown j; unknown j needs every unknown of that row
     count, labels = connected_components(csr_array(entries[match]), directed=True, connection="strong")  # type: ignore[arg-type]
     members: list[list[int]] = [[] for _ in range(count)]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING, TypeAlias
 
 import numpy as np
@@ -48,6 +49,16 @@ class NodalTable:
     factor_rest: Array
     gather: Array
     rows: Rows
+
+    @cached_property
+    def keeps(self) -> bool:
+        """Whether any equation holds terms that do not move with its quantity."""
+        return bool(np.any(self.keep != 0.0))
+
+    @cached_property
+    def fuzzy(self) -> bool:
+        """Whether any lever was rounded."""
+        return bool(np.any(self.fuzz != 0.0))
 
 
 @dataclass(frozen=True, slots=True)
@@ -172,14 +183,15 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     x_low, x_high = boxes.low[:, at.x], boxes.high[:, at.x]
     i = table.equation
     fixed_low, fixed_high = affine(table.off, x_low, x_high, -problem.s_high[i], -problem.s_low[i])
-    term_low, term_high = affine(
-        table.keep, boxes.low[:, at.p], boxes.high[:, at.p], np.zeros(len(j)), np.zeros(len(j))
-    )
-    fixed_low, fixed_high = down(fixed_low + term_low), up(fixed_high + term_high)
+    if table.keeps:
+        none = np.zeros(len(j))
+        term_low, term_high = affine(table.keep, boxes.low[:, at.p], boxes.high[:, at.p], none, none)
+        fixed_low, fixed_high = down(fixed_low + term_low), up(fixed_high + term_high)
     k = table.pair_row
     rest_low, rest_high = affine(table.rest, x_low, x_high, table.c_low, table.c_high)
-    slack = np.maximum(np.abs(x_low), np.abs(x_high)) @ table.fuzz.T * (1.0 + gamma(problem.n))
-    rest_low, rest_high = down(rest_low - slack), up(rest_high + slack)
+    if table.fuzzy:
+        slack = np.maximum(np.abs(x_low), np.abs(x_high)) @ table.fuzz.T * (1.0 + gamma(problem.n))
+        rest_low, rest_high = down(rest_low - slack), up(rest_high + slack)
     has_product = len(problem.product) > 0
     if has_product:
         u_rest_low, u_rest_high = affine(
@@ -194,7 +206,8 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
     # the interval of w itself is known too; a slice that misses it is empty, but stays here clipped and is left to the row test
     known_low, known_high = boxes.low[:, at.w][:, k], boxes.high[:, at.w][:, k]
     missed = (w_high < known_low) | (w_low > known_high)
-    w_low, w_high = np.clip(w_low, known_low, known_high), np.clip(w_high, known_low, known_high)
+    w_low = np.minimum(np.maximum(w_low, known_low), known_high)
+    w_high = np.minimum(np.maximum(w_high, known_low), known_high)
     f_low, f_high = table.rows.bounds(w_low, w_high)
     if has_product:
         reach_low, reach_high = scale(table.factor_lever, ts, te)
@@ -224,11 +237,11 @@ def nodal(problem: Problem, boxes: Boxes) -> Boxes:
 
 def slices(low: Array, high: Array, pieces: int) -> Array:
     """(pieces + 1, ...) ascending cut points from low to high: even, or even in the inverse hyperbolic sine over more than 50 units."""
-    share = np.linspace(0.0, 1.0, pieces + 1).reshape((-1,) + (1,) * low.ndim)
+    share = (np.arange(pieces + 1) / pieces).reshape((-1,) + (1,) * low.ndim)
     cuts = low + (high - low) * share
     wide = high - low > 50.0
-    if np.any(wide):
+    if wide.any():
         cuts = np.where(wide, np.sinh(np.arcsinh(low) + (np.arcsinh(high) - np.arcsinh(low)) * share), cuts)
-    cuts = np.clip(cuts, low, high)
+    cuts = np.minimum(np.maximum(cuts, low), high)
     cuts[0], cuts[-1] = low, high
     return np.asarray(cuts)

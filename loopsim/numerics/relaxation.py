@@ -28,8 +28,9 @@ class Relaxed:
 
 def invert(matrices: Array) -> Array:
     """Approximate inverses (b, n, n); zeros where a matrix is singular or not finite (which proves nothing, and is safe)."""
-    good = np.all(np.isfinite(matrices), axis=(1, 2))
-    matrices = np.where(good[:, None, None], matrices, np.eye(matrices.shape[1]))
+    good = np.asarray(np.isfinite(matrices).all(axis=(1, 2)))
+    if not good.all():
+        matrices = np.where(good[:, None, None], matrices, np.eye(matrices.shape[1]))
     try:
         inverse = np.linalg.inv(matrices)
     except np.linalg.LinAlgError:
@@ -39,12 +40,13 @@ def invert(matrices: Array) -> Array:
                 inverse[i] = np.linalg.inv(matrix)
             except np.linalg.LinAlgError:
                 good[i] = False
-    good &= np.all(np.abs(inverse) < 1e100, axis=(1, 2)) & np.all(np.isfinite(inverse), axis=(1, 2))
-    return np.where(good[:, None, None], inverse, 0.0)
+    good &= (np.abs(inverse) < 1e100).all(axis=(1, 2))  # false for what is no number
+    return np.asarray(inverse if good.all() else np.where(good[:, None, None], inverse, 0.0))
 
 
 def times(matrix: Array, vector: Array) -> Array:
-    return np.asarray((matrix @ vector[..., None])[..., 0])
+    """matrix @ vector, batch axes first on either."""
+    return vector @ matrix.T if matrix.ndim == 2 else np.asarray((matrix @ vector[..., None])[..., 0])
 
 
 def relax(problem: Problem, boxes: Boxes) -> Relaxed:
