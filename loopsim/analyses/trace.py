@@ -87,7 +87,7 @@ def trace(
         drawn.branches, drawn.folds, drawn.crossings, per_net,
         tuple((float(v), len(p.x)) for v, p in zip(values, proved, strict=True)), tuple(float(v) for v in matched),
         tuple(float(v) for v in values), covered is not None and covered.complete, gaps, time.monotonic() - began, (*notes, *drawn.lost),
-        scale,
+        scale, box,
     )  # fmt: skip
 
 
@@ -134,7 +134,7 @@ def _range(
 def _watch(circuit: Circuit, watch: str | Sequence[str] | None) -> tuple[str, ...]:
     if watch is None:
         return watched(circuit)
-    nets = (watch,) if isinstance(watch, str) else tuple(watch)
+    nets = (watch,) if isinstance(watch, str) else tuple(dict.fromkeys(watch))
     for net in nets:
         if net not in circuit.nets:
             raise CircuitError("unknown-net", f"{circuit.name} has no net `{net}`")

@@ -203,7 +203,7 @@ def matching(
 ) -> tuple[list[float], list[str]]:
     """Values at which the proof was complete and every proved state lies on a branch, and the other way round."""
     good: list[float] = []
-    notes: list[str] = []
+    doubts: dict[str, list[float]] = {}
     for value, points in zip(values, proved, strict=True):
         crossings = [x for branch in branches for x in crossings_of(family, branch, float(value))]
         missing = sum(all(np.max(np.abs(y - x) / scale[:-1]) >= SAME for y in crossings) for x in points.x)
@@ -213,12 +213,19 @@ def matching(
                 f"the curve passes a state at {value:g} that the proof of completeness excluded; please report this"
             )
         if missing:
-            notes.append(f"{missing} proved states at {value:.6g} lie on no branch that could be followed")
+            doubts.setdefault("proved states lie on no branch that could be followed", []).append(float(value))
         elif points.complete:
             good.append(float(value))
         else:
-            notes.append(f"not complete at {value:.6g}: {'; '.join(points.remainder) or 'undecided'}")
-    return good, notes
+            doubts.setdefault(f"not complete: {'; '.join(points.remainder) or 'undecided'}", []).append(float(value))
+    return good, [f"at {_several(places)}: {doubt}" for doubt, places in doubts.items()]
+
+
+def _several(places: Sequence[float]) -> str:
+    """Values of the let as a few words: at most three one by one."""
+    if len(places) <= 3:
+        return ", ".join(f"{value:.6g}" for value in places)
+    return f"{len(places)} stations, {places[0]:.6g} .. {places[-1]:.6g}"
 
 
 def _really_there(family: Family, x: Array, value: float) -> bool:

@@ -105,7 +105,8 @@ class Trace:
     """The characteristic of a circuit along a let.
 
     complete_at: values of the let at which the states were proved complete and all lie on the branches. over_range: proved for every
-    value of the let. gaps: where that proof ran to its end but could not settle these intervals. notes: doubts.
+    value of the let. gaps: where that proof ran to its end but could not settle these intervals. notes: doubts. box: all of this holds for
+    nets within +/- box [V].
     """
 
     circuit: str
@@ -128,6 +129,7 @@ class Trace:
     seconds: float
     notes: tuple[str, ...] = ()
     scale: Array = field(default_factory=lambda: np.zeros(0))
+    box: float = 1e3
 
     @property
     def hopf(self) -> tuple[Crossing, ...]:
@@ -187,6 +189,7 @@ class Trace:
             "stations": list(self.stations),
             "over_range": self.over_range,
             "gaps": [list(gap) for gap in self.gaps],
+            "box": self.box,
             "seconds": self.seconds,
             "notes": list(self.notes),
         }

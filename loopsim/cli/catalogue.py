@@ -50,7 +50,7 @@ TRACE = Verb(
         WATCH,
         Option("--versus", "NET", "draw the watched nets over this net instead of over the let"),
         Option("--overlay", "FILE", "measured points, let and net in two columns: draws them, tells the largest distance"),
-        Option("--stations", "N", "values between the ends at which every state is proved (9)", values.whole),
+        Option("--stations", "N", "values between the ends at which every state is proved (9)", values.stations),
         SET,
         JSON,
         CSV,

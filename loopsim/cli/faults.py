@@ -17,7 +17,10 @@ from loopsim.printable import printable
 
 # codes of AnalysisError that say what was asked wrongly; the others say that an answer was not reached
 ASKED_WRONGLY = frozenset(
-    {"box", "driven", "duration", "not-recorded", "nudge", "ramp", "singular", "start", "time", "tolerance", "unknown-net"}
+    (
+        *("box", "cannot-write", "driven", "duration", "not-recorded", "nudge", "plot-suffix", "ramp", "singular", "start", "time"),
+        *("tolerance", "unknown-net"),
+    )
 )
 
 LIBRARIES = ("numpy", "scipy", "networkx", "lark", "matplotlib", "tqdm", "numba", "dask", "distributed")

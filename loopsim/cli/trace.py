@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from typing import TYPE_CHECKING
 
 from loopsim.cli.answer import Answer, Surroundings
@@ -18,6 +19,7 @@ from loopsim.printable import printable
 if TYPE_CHECKING:
     from loopsim.analyses.trace import Trace
     from loopsim.circuit import Circuit
+    from loopsim.output.overlay import Overlay
 
 DEFAULT_BOX = 1e3  # [V]
 DEFAULT_BUDGET = 60.0  # [s]
@@ -39,13 +41,15 @@ def run(request: Request, around: Surroundings) -> Answer:
         _known_net(circuit, net)
     if request.has("versus") and not request.has("plot"):
         raise UsageError("--versus says how to draw", "add --plot FILE", "trace")
+    for option in ("plot", "csv"):
+        _writable(request, option)
     from loopsim.analyses.states import watched
     from loopsim.analyses.trace import STATIONS, trace
 
     watch = request.get("watch", watched(circuit))
     measured = None
     if request.has("overlay"):
-        measured = read_overlay(request.get("overlay"), circuit.parameters[along].unit, circuit.nets, watch[0])
+        measured = read_overlay(request.get("overlay"), circuit.parameters[along].unit, circuit.nets, watch[0], along)
 
     curve = trace(
         circuit,
@@ -60,8 +64,7 @@ def run(request: Request, around: Surroundings) -> Answer:
     )
     remarks = write_file(request.get("csv"), trace_csv(curve)) if request.has("csv") else ()
     if request.has("plot"):
-        curve.plot(request.get("plot"), versus=request.get("versus"), overlay=measured)
-        remarks += (f"wrote {printable(request.get('plot'))}",)
+        remarks += _draw(curve, request.get("plot"), request.get("versus", None), measured)
     if request.has("json"):
         payload = {**curve.to_dict(), "overlay": distance(curve, measured) if measured is not None else None}
         whole = document("trace", payload, circuit=curve.circuit, file=request.paths[0], settings=curve.settings)
@@ -73,12 +76,37 @@ def run(request: Request, around: Surroundings) -> Answer:
     return Answer(text, code(curve), remarks)
 
 
+def _draw(curve: Trace, path: str, versus: str | None, measured: Overlay | None) -> tuple[str, ...]:
+    """Draw it and tell what the picture does not show. A picture that fails takes no answer with it that can still be printed."""
+    from loopsim.output.plots_trace import PANELS
+
+    if not curve.branches:
+        return (f"{printable(path)} is not written: no branch was traced",)
+    curve.plot(path, versus=versus, overlay=measured)
+    remarks = [f"wrote {printable(path)}"]
+    if len(curve.watch) > PANELS:
+        remarks.append(f"drawn: the first {PANELS} of {len(curve.watch)} nets; --watch NET,... chooses")
+    if versus is not None and measured is not None:
+        remarks.append("measured points belong to a value of the let: drawn without --versus only")
+    return tuple(remarks)
+
+
 def _range(circuit: Circuit, along: str, request: Request) -> tuple[float, float] | None:
     """What --over says, in the unit of the let [SI; degC for a temperature]."""
     if not request.has("over"):
         return None
     low, high = (let_value(text, circuit.parameters[along], "--over ") for text in request.get("over"))
+    if not low < high:
+        said = "..".join(request.get("over"))
+        raise UsageError(f"--over {printable(said)}: the range has to rise", "the lower value stands first: --over LO..HI", "trace")
     return low, high
+
+
+def _writable(request: Request, option: str) -> None:
+    """A folder that is not there is told before the work, not after it."""
+    folder = os.path.dirname(request.get(option, ""))
+    if folder and not os.path.isdir(folder):
+        raise UsageError(f"--{option} {printable(request.get(option))}: there is no folder `{printable(folder)}`", "make it first", "trace")
 
 
 def _known_net(circuit: Circuit, net: str) -> None:

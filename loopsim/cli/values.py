@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import re
 
+MOST_STATIONS = 1000  # each holds a whole proof; beyond, a budget is spent before the curve is followed
 SCALES = {"f": -15, "p": -12, "n": -9, "u": -6, "\N{MICRO SIGN}": -6, "m": -3, "": 0, "k": 3, "M": 6, "G": 9, "T": 12}
 
 # digits are checked here: float() would take "1_0", "inf" and digits of other scripts
@@ -57,6 +58,14 @@ def whole(text: str) -> int:
     if not re.fullmatch(r"[0-9]{1,18}", text):
         raise ValueError("not a whole number")
     return int(text)
+
+
+def stations(text: str) -> int:
+    """A whole number from 0 to MOST_STATIONS."""
+    value = whole(text)
+    if value > MOST_STATIONS:
+        raise ValueError(f"at most {MOST_STATIONS}: the curve between stations is followed through its folds anyway")
+    return value
 
 
 def setting(text: str) -> tuple[str, str]:

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from loopsim.errors import CircuitError, Span
 from loopsim.output.engineering import engineering
+from loopsim.output.text import counted
 from loopsim.output.text import volts as volts_text
 from loopsim.printable import printable
 from loopsim.units import dimension_of, name_of, quantity
@@ -20,6 +21,7 @@ if TYPE_CHECKING:
     from loopsim.analyses.trace import Trace
 
 LARGEST = 16 << 20  # bytes; a table of measured points is far smaller
+EXAMPLE = "for example: 4.5, 0.02"
 _CELL = re.compile(r"([+-]?)\s*([0-9]+\.?[0-9]*(?:[eE][+-]?[0-9]+)?|\.[0-9]+(?:[eE][+-]?[0-9]+)?)\s*(\S*)")
 _NAME = re.compile(r"([^\[(]+?)\s*(?:[\[(].*)?")
 
@@ -54,11 +56,12 @@ class Distance:
         }  # fmt: skip
 
 
-def read_overlay(path: str, curve_unit: str, nets: tuple[str, ...], watched: str) -> Overlay:
+def read_overlay(path: str, curve_unit: str, nets: tuple[str, ...], watched: str, let: str = "") -> Overlay:
     """Read a table with the let in the first column and a net in the second; a first row without numbers names the columns.
 
     Commas, semicolons or tabs part the cells; blank lines and lines that begin with # are passed over; a number may carry its unit.
-    curve_unit: of the let; watched: the net meant where no header names one. CircuitError with file and line for what cannot be read.
+    curve_unit: of the let; watched: the net meant where no header names one; let: its name, to tell columns that are the wrong way
+    round. CircuitError with file and line for what cannot be read.
     """
     lines = _lines(path)
     mark = next((m for m in (";", "\t") if any(m in text for _, text in lines)), ",")
@@ -66,9 +69,12 @@ def read_overlay(path: str, curve_unit: str, nets: tuple[str, ...], watched: str
     for position, (number, text) in enumerate(lines):
         place = Span(path, number, 1, max(1, len(text)))
         cells = [cell.strip() for cell in next(csv.reader([text], delimiter=mark))]
-        if len(cells) < 2:
-            raise CircuitError("wrong-table", "two columns are needed: the let and a net", place, "for example: 4.5, 0.02")
-        if position == 0 and _CELL.fullmatch(cells[0]) is None:
+        if len(cells) != 2:
+            # more than two may be a decimal comma: 4,5,0,02 read as 4 and 5 would compare with the wrong place
+            raise CircuitError("wrong-table", f"two columns are needed, the let and a net, not {len(cells)}", place, EXAMPLE)
+        if position == 0 and _is_header(cells):
+            if let and _named(cells[1]) == let and _named(cells[0]) in nets:
+                raise CircuitError("wrong-table", f"the let `{let}` has to stand in the first column", place, EXAMPLE)
             net = _net_named(cells[1], nets, watched)
             continue
         values.append(_number(cells[0], curve_unit, place))
@@ -94,9 +100,19 @@ def _lines(path: str) -> list[tuple[int, str]]:
     return [(number, line) for number, line in numbered if line.strip() and not line.lstrip().startswith("#")]
 
 
-def _net_named(cell: str, nets: tuple[str, ...], watched: str) -> str:
+def _is_header(cells: list[str]) -> bool:
+    """Whether neither cell begins like a number: a first row with a slip in it is no header."""
+    return not any(cell.lstrip("+-. ")[:1].isdigit() for cell in cells)
+
+
+def _named(cell: str) -> str:
+    """What a header calls a column, without its unit."""
     match = _NAME.fullmatch(cell)
-    return match[1] if match is not None and match[1] in nets else watched
+    return match[1] if match is not None else ""
+
+
+def _net_named(cell: str, nets: tuple[str, ...], watched: str) -> str:
+    return name if (name := _named(cell)) in nets else watched
 
 
 def _number(cell: str, unit: str, place: Span) -> float:
@@ -146,11 +162,11 @@ def _stable_volts(curve: Trace, net: str, value: float) -> list[float]:
 def overlay_text(curve: Trace, overlay: Overlay) -> str:
     """One or two lines on how well the measured points fit."""
     found = distance(curve, overlay)
-    what = f"measured {printable(overlay.net)}, {len(overlay.values)} points"
+    what = f"measured {printable(overlay.net)}, {counted(len(overlay.values), 'point')}"
     lines = []
     if found.largest is not None:
         where = f"at {printable(curve.along)} = {engineering(found.at, curve.unit, 6)}"
         lines.append(f"{what}: largest distance to the nearest stable branch {volts_text(found.largest)} {where}")
     if found.beyond:
-        lines.append(f"{what}: {found.beyond} lie where no stable branch was traced")
+        lines.append(f"{what}: {found.beyond} {'lies' if found.beyond == 1 else 'lie'} where no stable branch was traced")
     return "\n".join(lines)

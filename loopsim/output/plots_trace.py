@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -20,6 +21,10 @@ if TYPE_CHECKING:
     from loopsim.output.overlay import Overlay
 
 PANELS = 6  # nets in one picture; more would be too low to read
+LEAST_JUMP = 0.02  # of a panel's height: a shorter arrow is a blot on its fold
+ALIKE = 5e-3  # of a panel's height: curves nearer than this are one line to the eye
+BETWEEN = 24  # points drawn between two traced ones on an axis of decades
+DECADES = 2.0  # a let above zero over a wider range than this gets a logarithmic axis
 STABLE, UNSTABLE, OPEN, JUMP, MEASURED = COLOURS[0], COLOURS[1], PALE, COLOURS[2], COLOURS[3]
 STYLES: dict[bool | None, dict[str, Any]] = {
     True: {"color": STABLE, "linewidth": 2.0, "linestyle": "-", "zorder": 3},
@@ -42,12 +47,16 @@ class Piece:
 def plot_trace(curve: Trace, path: str, nets: Sequence[str] = (), versus: str | None = None, overlay: Overlay | None = None) -> None:
     """Draw nets (the watched ones unless given) over the let, or over the net `versus`, into `path`. MissingExtra without matplotlib."""
     shown = _known(curve, nets or curve.watch)[:PANELS]
+    if overlay is not None and overlay.net not in shown and versus is None:
+        shown = [*shown[: PANELS - 1], *_known(curve, [overlay.net])]
     across = _known(curve, [versus])[0] if versus is not None else None
     strip = across is None
     figure = new_figure(7.2, (2.0 if len(shown) > 1 else 3.6) * len(shown) + 0.7 + 0.7 * strip)
     heights = [3.0] * len(shown) + [0.55] * strip
     panels = list(figure.subplots(len(heights), 1, sharex=True, squeeze=False, height_ratios=heights)[:, 0])
     scale, unit = _abscissa(curve, across)
+    if across is None and _logarithmic(curve):
+        _use_decades(panels)
     for net, panel in zip(shown, panels, strict=False):
         quiet(panel)
         _draw_net(panel, curve, net, across, scale)
@@ -75,6 +84,8 @@ def _known(curve: Trace, nets: Sequence[str]) -> list[str]:
 def _abscissa(curve: Trace, across: str | None) -> tuple[float, str]:
     if across is not None:
         return _net_scale(curve, across)
+    if _logarithmic(curve):
+        return axis_scale(float(np.sqrt(curve.low * curve.high)), curve.unit)
     return axis_scale(max(abs(curve.low), abs(curve.high)), curve.unit)
 
 
@@ -115,10 +126,76 @@ def _between(curve: Trace, number: int, branch: Branch, i: int, net: str, across
     return 0.5 * float(x[i - 1] + x[i]), middle
 
 
+def _logarithmic(curve: Trace) -> bool:
+    """Whether the let, such as a resistance, runs over so many decades that a straight axis would hide all but the last."""
+    return curve.low > 0.0 and curve.high >= 10.0**DECADES * curve.low and curve.unit != "degC"
+
+
+def _use_decades(panels: Sequence[Any]) -> None:
+    from matplotlib.ticker import FuncFormatter, NullFormatter
+
+    for panel in panels:
+        panel.set_xscale("log")
+        panel.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+        panel.xaxis.set_minor_formatter(NullFormatter())
+
+
+def _seen_apart(found: list[Piece], over_let: bool) -> list[Piece]:
+    """The pieces, cut where the let turns, without those that lie on a longer one of the same verdict.
+
+    The dashes of one would fill the gaps of the other, and what is not stable would look solid.
+    """
+    if not over_let:
+        return found
+    found = [run for piece in found for run in _runs(piece)]
+    height = float(np.ptp(np.concatenate([piece.y for piece in found])))
+    kept: list[Piece] = []
+    for piece in sorted(found, key=lambda one: -float(np.ptp(one.x))):
+        if not any(_covers(other, piece, ALIKE * height) for other in kept if other.stable == piece.stable):
+            kept.append(piece)
+    return kept
+
+
+def _runs(piece: Piece) -> Iterator[Piece]:
+    """A piece cut at the points where the let turns."""
+    way = np.sign(np.diff(piece.x))
+    turns = [0, *(int(i) + 1 for i in np.flatnonzero(way[:-1] * way[1:] < 0.0)), len(piece.x) - 1]
+    for begin, end in pairwise(turns):
+        yield Piece(piece.stable, piece.x[begin : end + 1], piece.y[begin : end + 1])
+
+
+def _covers(one: Piece, other: Piece, room: float) -> bool:
+    """Whether `other` lies on `one` within `room`; both run one way along the let."""
+    x, y = (one.x, one.y) if one.x[0] <= one.x[-1] else (one.x[::-1], one.y[::-1])
+    slack = 1e-6 * float(x[-1] - x[0])
+    if np.min(other.x) < x[0] - slack or np.max(other.x) > x[-1] + slack or np.any(np.diff(x) < 0.0):
+        return False
+    return bool(np.all(np.abs(np.interp(other.x, x, y) - other.y) <= room))
+
+
+def _path(piece: Piece, decades: bool) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """The points to draw a piece by: from left to right, so that dashes of curves that coincide fall on each other; on an axis of decades
+    with points between, because a curve is straight between its points on the straight axis."""
+    x, y = (piece.x, piece.y) if piece.x[0] <= piece.x[-1] else (piece.x[::-1], piece.y[::-1])
+    if not decades:
+        return x, y
+    share = np.linspace(0.0, 1.0, BETWEEN, endpoint=False)
+    logs = np.log(np.maximum(x, np.finfo(float).tiny))
+    low, high = logs[:-1, None], logs[1:, None]
+    between = np.exp(low + share * (high - low))
+    run = x[1:, None] - x[:-1, None]
+    part = np.where(run != 0.0, (between - x[:-1, None]) / np.where(run != 0.0, run, 1.0), share)
+    rising = y[:-1, None] + part * (y[1:, None] - y[:-1, None])
+    return np.append(between.ravel(), x[-1]), np.append(rising.ravel(), y[-1])
+
+
 def _draw_net(panel: Any, curve: Trace, net: str, across: str | None, scale: float) -> None:
     rise, unit = _net_scale(curve, net)
-    for piece in pieces(curve, net, across):
-        panel.plot(piece.x / scale, piece.y / rise, **STYLES[piece.stable])
+    for piece in _seen_apart(list(pieces(curve, net, across)), across is None):
+        x, y = _path(piece, across is None and _logarithmic(curve))
+        panel.plot(x / scale, y / rise, **STYLES[piece.stable])
+    # an arrow is left out by the height of the panel, which the lines alone decide
+    panel.margins(x=0.02, y=0.06)
     for found in curve.folds:
         here = (found.at if across is None else found.nets[across]) / scale, found.nets[net] / rise
         panel.plot(*here, "o", color=STABLE, markersize=4.5, zorder=4)
@@ -129,18 +206,20 @@ def _draw_net(panel: Any, curve: Trace, net: str, across: str | None, scale: flo
         mark = "D" if crossing.kind == "hopf" else "s"
         place = (crossing.at if across is None else crossing.nets[across]) / scale, crossing.nets[net] / rise
         panel.plot(*place, mark, color=STABLE, markerfacecolor="white", markersize=5.0, zorder=4)
-    panel.margins(x=0.02, y=0.06)
     panel.set_ylabel(f"{net} in {unit}", fontsize=9)
     panel.ticklabel_format(axis="y", useOffset=False, style="plain")
 
 
 def _arrow(panel: Any, start: tuple[float, float], end: tuple[float, float]) -> None:
     style = {"arrowstyle": "-|>", "color": JUMP, "linewidth": 0.8, "shrinkA": 3, "shrinkB": 1, "mutation_scale": 8}
+    wide, high = (abs(np.subtract(*limits)) for limits in (panel.get_xlim(), panel.get_ylim()))
+    if max(abs(end[0] - start[0]) / wide, abs(end[1] - start[1]) / high) < LEAST_JUMP:
+        return
     panel.annotate("", xy=end, xytext=start, arrowprops=style, zorder=3)
 
 
 def stable_counts(curve: Trace) -> tuple[NDArray[np.float64], list[int]]:
-    """(edges, counts): the number of stable states in each interval of the let between places where it changes."""
+    """(edges, counts): the number of stable states in each interval of the let between the places where it changes."""
     places = {curve.low, curve.high, *(f.at for f in curve.folds), *(c.at for c in curve.crossings)}
     edges = np.array(sorted(place for place in places if curve.low <= place <= curve.high))
     counts = []
@@ -152,7 +231,15 @@ def stable_counts(curve: Trace) -> tuple[NDArray[np.float64], list[int]]:
                 nearer = i if abs(d[i]) <= abs(d[i + 1]) else i + 1
                 number += branch.stable[nearer] is True
         counts.append(number)
-    return edges, counts
+    kept = [0, *(i for i in range(1, len(counts)) if counts[i] != counts[i - 1])]
+    return np.append(edges[kept], edges[-1]), [counts[i] for i in kept]
+
+
+def _within(curve: Trace, left: float, right: float) -> tuple[float, float]:
+    """Middle of a stretch as drawn, and its share of the axis."""
+    if _logarithmic(curve):
+        return float(np.sqrt(left * right)), float(np.log(right / left) / np.log(curve.high / curve.low))
+    return 0.5 * (left + right), (right - left) / (curve.high - curve.low)
 
 
 def _draw_strip(panel: Any, curve: Trace, scale: float) -> None:
@@ -161,8 +248,9 @@ def _draw_strip(panel: Any, curve: Trace, scale: float) -> None:
     for left, right, count in zip(edges[:-1], edges[1:], counts, strict=True):
         shade = 0.12 + 0.5 * count / max(most, 1) if count else 0.0
         panel.axvspan(left / scale, right / scale, color=STABLE, alpha=shade, linewidth=0)
-        if right - left > 0.025 * (curve.high - curve.low):
-            panel.text(0.5 * (left + right) / scale, 0.5, str(count), ha="center", va="center", fontsize=8, color="#202124")
+        middle, share = _within(curve, left, right)
+        if share > 0.025:
+            panel.text(middle / scale, 0.5, str(count), ha="center", va="center", fontsize=8, color="#202124")
     panel.set_ylim(0.0, 1.0)
     panel.set_yticks([])
     panel.set_ylabel("stable\nstates", fontsize=7, rotation=0, ha="right", va="center")

@@ -27,7 +27,7 @@ def trace_text(curve: Trace, palette: Palette = PLAIN, chosen: str = "") -> str:
         if part:
             lines += ["", palette.faint(part[0]), *part[1:]]
     lines += ["", *_states_along(curve)]
-    notes = [*_gap_notes(curve), *curve.notes]
+    notes = [*_landing_notes(curve), *_empty_notes(curve), *_gap_notes(curve), *curve.notes]
     if notes:
         lines += ["", *(palette.faint(printable(note)) for note in notes)]
     return "\n".join(lines) + "\n"
@@ -54,7 +54,7 @@ def _counts(curve: Trace) -> str:
 
 
 def _known(curve: Trace) -> str:
-    cost = shortest(curve.seconds, "s", 2)
+    cost = f"all nets within +/- {shortest(curve.box, 'V', 3)}, {shortest(curve.seconds, 's', 2)}"
     if curve.over_range:
         return f"complete over the range ({cost})"
     if curve.complete and curve.gaps:
@@ -124,6 +124,24 @@ def _states_along(curve: Trace) -> list[str]:
         first, last = (shortest(value, curve.unit, 4) for value in (values[0], values[-1]))
         rows.append([str(count), first if len(values) == 1 else f"{first} .. {last} ({len(values)} stations)"])
     return table(rows)
+
+
+def _landing_notes(curve: Trace) -> list[str]:
+    """Folds that a circuit at rest leaves without finding another rest, inside the range."""
+    edge = 1e-6 * (curve.high - curve.low)
+    lost = [f.at for f in curve.folds if f.from_stable and f.lands is None and curve.low + edge < f.at < curve.high - edge]
+    if not lost:
+        return []
+    return [f"no state at rest was reached beyond {', '.join(_value(curve, at) for at in lost)}: see what `transient` shows there"]
+
+
+def _empty_notes(curve: Trace) -> list[str]:
+    """A box that leaves out every state, at some station or at all."""
+    empty = [value for value, count in curve.counts if count == 0 and value in curve.complete_at]
+    if not empty:
+        return []
+    where = f"within +/- {shortest(curve.box, 'V', 3)}"
+    return [f"{counted(len(empty), 'station')} without a state {where}: states may lie farther out (--box)"]
 
 
 def _gap_notes(curve: Trace) -> list[str]:

@@ -1,6 +1,7 @@
 """What `trace` prints, writes and draws."""
 
 import csv
+import dataclasses
 import io
 import re
 from pathlib import Path
@@ -12,8 +13,8 @@ import loopsim
 from loopsim.analyses.trace import Trace
 from loopsim.cli import main
 from loopsim.errors import AnalysisError, CircuitError
-from loopsim.output.overlay import distance, overlay_text, read_overlay
-from loopsim.output.plots_trace import pieces, plot_trace, stable_counts
+from loopsim.output.overlay import Overlay, distance, overlay_text, read_overlay
+from loopsim.output.plots_trace import Piece, _logarithmic, _path, pieces, plot_trace, stable_counts
 from loopsim.output.trace_text import trace_csv, trace_text
 
 PUMP = """circuit pump "a switch"
@@ -53,8 +54,6 @@ def test_the_table_tells_folds_landings_and_thresholds(pump: Trace) -> None:
 
 
 def test_a_list_that_is_not_proved_is_not_called_complete(pump: Trace) -> None:
-    import dataclasses
-
     text = trace_text(dataclasses.replace(pump, complete_at=pump.complete_at[:2]))
     assert "undecided: complete at 2 of 5 stations" in text
 
@@ -122,7 +121,7 @@ def test_measured_points_are_compared_with_the_nearest_stable_branch(pump: Trace
     assert (found.at, found.measured, found.beyond, found.points) == (4.5, 8.8, 1, 3)
     high = loopsim.parse(PUMP).states(level=4.5)["C"]["out"]
     assert found.largest == pytest.approx(high - 8.8, abs=1e-3)  # straight between points of the curve
-    assert "1 lie where no stable branch was traced" in overlay_text(pump, overlay)
+    assert "1 lies where no stable branch was traced" in overlay_text(pump, overlay)
 
 
 @pytest.mark.parametrize(
@@ -135,13 +134,16 @@ def test_measured_points_are_compared_with_the_nearest_stable_branch(pump: Trace
         ("level, out\n", "", "no measured points"),
         ("", "", "no measured points"),
         ("1, 1e999\n", ":1:", "1e999"),
+        ("level, out\n4,5,0,02\n", ":2:", "not 4"),
+        ("4,5; 0.02\n5; 1\n", ":1:", "4,5"),
+        ("out, level\n8, 4\n", ":1:", "first column"),
     ],
 )
 def test_a_table_that_cannot_be_read_says_where(text: str, place: str, said: str, tmp_path: Path) -> None:
     path = tmp_path / "bench.csv"
     path.write_text(text, encoding="utf-8")
     with pytest.raises(CircuitError) as caught:
-        read_overlay(str(path), "V", ("out",), "out")
+        read_overlay(str(path), "V", ("out",), "out", "level")
     assert said in str(caught.value) and place in str(caught.value)
 
 
@@ -170,9 +172,80 @@ def test_the_command_prints_writes_and_draws(file: str, tmp_path: Path, capsys: 
         (["--along", "level", "--versus", "out"], "--plot"),
         (["--along", "level", "--overlay", "nowhere.csv"], "cannot be read"),
         (["--along", "level", "--plot", "a.bmp"], "svg, png or pdf"),
+        (["--along", "level", "--plot", "nowhere/a.svg"], "no folder `nowhere`"),
+        (["--along", "level", "--csv", "nowhere/a.csv"], "no folder `nowhere`"),
+        (["--along", "level", "--stations", "1000000"], "at most 1000"),
     ],
 )
 def test_what_cannot_be_traced_is_said_with_exit_code_2(words: list[str], said: str, file: str, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["trace", file, *words]) == 2
     out, err = capsys.readouterr()
     assert not out and said in err
+
+
+def test_a_trace_without_a_branch_keeps_its_answer_and_tells_that_nothing_is_drawn(
+    file: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    words = ["trace", file, "--along", "level", "--over", "4V..5V", "--stations", "1", "--box", "0.5", "--plot", str(tmp_path / "p.svg")]
+    main(words)
+    out, err = capsys.readouterr()
+    assert "no branches, no folds" in out and "all nets within +/- 500 mV" in out
+    assert "3 stations without a state within +/- 500 mV" in out
+    assert "is not written: no branch was traced" in err and not (tmp_path / "p.svg").exists()
+
+
+def test_a_net_that_is_named_twice_is_shown_once() -> None:
+    assert loopsim.parse(PUMP).trace("level", watch=["out", "plus", "out"], stations=3, range_budget=0.0).watch == ("out", "plus")
+
+
+def test_measured_points_of_a_net_that_is_not_watched_get_a_panel(pump: Trace, tmp_path: Path) -> None:
+    measured = Overlay("bench.csv", "sense", np.array([1.0]), np.array([1.1]))
+    path = tmp_path / "a.svg"
+    pump.plot(str(path), ["out"], overlay=measured)
+    text = path.read_text(encoding="utf-8")
+    assert "<!-- sense in V -->" in text and "<!-- measured -->" in text
+
+
+def test_a_fold_without_a_landing_is_pointed_out(pump: Trace) -> None:
+    lost = dataclasses.replace(pump, folds=tuple(dataclasses.replace(f, lands=None) for f in pump.folds))
+    assert "no state at rest was reached beyond" in trace_text(lost)
+    assert "no state at rest" not in trace_text(pump)
+
+
+def _curve(pump: Trace, values: list[float], rows: list[tuple[list[float], bool]]) -> Trace:
+    """A trace of straight branches at `values`, one for each row of volts and verdict."""
+    first = pump.branches[0]
+    branches = tuple(
+        dataclasses.replace(
+            first, values=np.array(values), lengths=np.arange(len(values), dtype=float), nets={"out": np.array(volts)},
+            stable=(stable,) * len(values), x=np.zeros((len(values), first.x.shape[1])),
+        )
+        for volts, stable in rows
+    )  # fmt: skip
+    return dataclasses.replace(pump, watch=("out",), branches=branches, folds=(), crossings=(), low=values[0], high=values[-1])
+
+
+def test_curves_that_coincide_are_drawn_once_so_that_dashes_stay_dashes(pump: Trace, tmp_path: Path) -> None:
+    both = _curve(pump, [0.0, 1.0, 2.0], [([0.0, 1.0, 2.0], False), ([0.0, 1.001, 2.0], False), ([5.0, 6.0, 8.0], False)])
+    path = tmp_path / "a.svg"
+    both.plot(str(path))
+    # two lines and the legend's one
+    assert path.read_text(encoding="utf-8").count("stroke: #b8860b") == 3
+
+
+def test_values_over_decades_get_a_logarithmic_axis_on_which_lines_keep_their_course(pump: Trace) -> None:
+    piece = Piece(True, np.array([1.0, 1001.0]), np.array([0.0, 10.0]))
+    x, y = _path(piece, decades=True)
+    assert x[[0, -1]].tolist() == [1.0, 1001.0]
+    np.testing.assert_allclose(y, (x - 1.0) / 100.0, atol=1e-12)
+    assert np.ptp(np.diff(np.log(x))) < 1e-12
+    wide = _curve(pump, [10.0, 50.0, 1e5], [([0.0, 1.0, 2.0], True)])
+    assert _logarithmic(wide) and not _logarithmic(pump)
+
+
+def test_a_jump_of_no_length_has_no_arrow(pump: Trace, tmp_path: Path) -> None:
+    path = tmp_path / "a.svg"
+    pump.plot(str(path), ["sense"])  # held by the source: nothing jumps
+    still = path.read_text(encoding="utf-8").count("stroke: #2a7f79")
+    pump.plot(str(path), ["out"])
+    assert path.read_text(encoding="utf-8").count("stroke: #2a7f79") > still
