@@ -16,7 +16,7 @@ from loopsim.language.fields import fields_of
 from loopsim.language.formulas import Scope, Typed, require, typed
 from loopsim.language.lets import add_lets
 from loopsim.language.mistakes import nearest
-from loopsim.language.names import nets_of, parts_of
+from loopsim.language.names import instances_of, nets_of, parts_of
 from loopsim.language.values import refuse_nets, toleranced, unit_in_words
 from loopsim.units import NUMBER
 
@@ -98,6 +98,7 @@ def _add_instance(statement: t.PartOf, block: BlockKind, frame: Frame) -> None:
     _check_dimensions(given, block, scope)
     scope.nets = {**{name: prefix + name for name in nets_of(inner.body)}, **given.pins}
     scope.parts = {name: prefix + name for name in parts_of(inner.body)}
+    scope.instances = {name: prefix + name for name in instances_of(inner.body, block.definitions.blocks)}
     trail = (*frame.trail, inner.name.text)
     within = Frame(frame.draft, block.definitions, prefix, scope, given.pins, trail)
     add_lets(inner.body, within)

@@ -15,8 +15,8 @@ from loopsim.language.expects import add_requirement
 from loopsim.language.formulas import Scope, Typed
 from loopsim.language.lets import add_lets
 from loopsim.language.mistakes import nearest
-from loopsim.language.names import nets_of, parts_of, statement_place
-from loopsim.language.parser import Source
+from loopsim.language.names import instances_of, nets_of, parts_of, statement_place
+from loopsim.language.source import Source
 from loopsim.units import KELVIN
 
 USUAL_AMBIENT = 25.0  # degC
@@ -37,6 +37,7 @@ def build(
     # nets and parts inside blocks are known by now and may be named in requirements
     scope.nets = {name: name for name in draft.nets}
     scope.parts = {name: name for name in draft.parts}
+    scope.instances = {}
     for statement in statements:
         if isinstance(statement, t.Expect):
             add_requirement(statement, frame)
@@ -63,6 +64,7 @@ def _outer_scope(source: Source, statements: tuple[t.Statement, ...], definition
         {name: name for name in nets},
         {name: name for name in parts_of(statements)},
         definitions.curve_forms,
+        {name: name for name in instances_of(statements, definitions.blocks)},
     )
     definitions.scope.values = scope.values
     for statement in statements:

@@ -14,7 +14,7 @@ from loopsim.language.curves import read_curve
 from loopsim.language.formulas import Scope
 from loopsim.language.mistakes import nearest
 from loopsim.language.names import a
-from loopsim.language.parser import Source
+from loopsim.language.source import Source
 from loopsim.units import Dimension
 
 

@@ -11,7 +11,7 @@ from loopsim.language.draft import Frame
 from loopsim.language.formulas import Scope, Typed, typed
 from loopsim.language.measures import AT_STATES, COUNTS, FROM_A_START, MEASURES, MeasureForm
 from loopsim.language.mistakes import nearest
-from loopsim.language.parser import Source
+from loopsim.language.source import Source
 from loopsim.language.values import constant, limits, refuse_nets, toleranced, unit_in_words
 from loopsim.units import Dimension, dimension_of, name_of
 

@@ -10,7 +10,7 @@ from loopsim.errors import CircuitError
 from loopsim.expressions import CurrentRef, Expression, LetRef, NetRef, Number, Operation
 from loopsim.language import tree as t
 from loopsim.language.mistakes import nearest
-from loopsim.language.parser import Source
+from loopsim.language.source import Source
 from loopsim.units import AMPERE, KELVIN, NUMBER, UNIT_PATTERN, VOLT, Dimension, name_of
 
 UNIT_HINT = "a unit stands behind its number, without a blank inside: 3 V/us"
@@ -28,14 +28,15 @@ class Typed:
 
 @dataclass
 class Scope:
-    """What names mean in one place. values: lets and block parameters; nets: inner name to full name; parts: likewise;
-    curves: name to (input, output) dimension."""
+    """What names mean in one place. values: lets and block parameters; nets, parts, instances (of blocks): inner name to full
+    name; curves: name to (input, output) dimension."""
 
     source: Source
     values: dict[str, Typed] = field(default_factory=dict)
     nets: Mapping[str, str] = field(default_factory=dict)
     parts: Mapping[str, str] = field(default_factory=dict)
     curves: Mapping[str, tuple[Dimension, Dimension]] = field(default_factory=dict)
+    instances: Mapping[str, str] = field(default_factory=dict)
 
     def net(self, text: str) -> str | None:
         """Full name of a net that a formula names: one of this place, or `instance.net` of a block placed here."""
@@ -48,7 +49,7 @@ class Scope:
     def _inside(self, text: str) -> str | None:
         # whether the block holds it shows when it is expanded
         instance, point, inner = text.partition(".")
-        return f"{self.parts[instance]}.{inner}" if point and instance in self.parts else None
+        return f"{self.instances[instance]}.{inner}" if point and instance in self.instances else None
 
     def mistake(self, code: str, message: str, where: t.Place, hint: str = "") -> CircuitError:
         """An error at a place of this scope's text."""

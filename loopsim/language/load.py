@@ -15,10 +15,12 @@ from loopsim.language.builder import build
 from loopsim.language.definitions import Definitions, define
 from loopsim.language.mistakes import nearest
 from loopsim.language.names import statement_place
-from loopsim.language.parser import MAX_CHARACTERS, Source, statements
+from loopsim.language.parser import MAX_CHARACTERS, statements
 from loopsim.language.rules import with_way_out
+from loopsim.language.source import Source
 
 MAX_FILES = 200  # parts files that one circuit may draw in
+MAX_LINE_OF_FILES = 32  # files that use files; each is read inside the one before
 PARTS = "parts"  # a folder of this name marks the library root
 
 
@@ -129,6 +131,8 @@ class _Reader:
             )
         if name in trail:
             raise CircuitError("use-cycle", f"`{use.path}` leads back to itself", where)
+        if len(trail) > MAX_LINE_OF_FILES:
+            raise CircuitError("too-many-files", f"files use each other more than {MAX_LINE_OF_FILES} deep", where)
         if name not in self.done:
             if len(self.done) >= MAX_FILES:
                 raise CircuitError("too-many-files", f"more than {MAX_FILES} files are used", where)

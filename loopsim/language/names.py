@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Container, Iterator
 from typing import Any
 
 from loopsim.language import tree as t
@@ -55,6 +55,11 @@ def parts_of(statements: tuple[t.Statement, ...]) -> list[str]:
         elif isinstance(statement, t.PartOf):
             found.append(statement.name.text)
     return found
+
+
+def instances_of(statements: tuple[t.Statement, ...], blocks: Container[str]) -> list[str]:
+    """Names of the parts that are instances of blocks."""
+    return [s.name.text for s in statements if isinstance(s, t.PartOf) and s.call.name.text in blocks]
 
 
 def words_in(formula: t.Formula) -> set[str]:

@@ -2,50 +2,22 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Iterable, Iterator
 from dataclasses import replace
 from functools import cache
 from importlib.resources import files
 from typing import Any, cast
 
-from lark import Lark, Token, Transformer, UnexpectedCharacters, UnexpectedInput, UnexpectedToken
+from lark import Lark, Token, Transformer, UnexpectedInput
 
-from loopsim.errors import CircuitError, Span
+from loopsim.errors import CircuitError
 from loopsim.language import tree as t
-from loopsim.language.mistakes import syntax_mistake
+from loopsim.language.explain import explained
+from loopsim.language.source import Source, place
 from loopsim.units import CODE_PATTERN, UNIT_PATTERN, code, quantity
 
 MAX_CHARACTERS = 2_000_000  # a circuit file of 50,000 lines; beyond it is not one circuit
 MAX_NESTING = 100  # operations within operations, brackets within brackets; keeps recursion well within Python's limit of 1000
-
-
-_BRACKETS = re.compile(r'"[^"]*"|#.*|[()]')  # texts and comments are passed over
-
-
-class Source:
-    """One text with its name; makes spans of places."""
-
-    def __init__(self, file: str, text: str) -> None:
-        self.file = file
-        self.text = text = text.removeprefix("\ufeff")
-        self.lines = text.split("\n")
-
-    def span(self, place: t.Place) -> Span:
-        """The first line of a place, as a span."""
-        line = self.lines[place.line - 1].rstrip("\r") if place.line <= len(self.lines) else ""
-        end = place.end_column if place.end_line == place.line else len(line) + 1
-        return Span(self.file, place.line, place.column, max(end, place.column + 1), line)
-
-    def at(self, line: int, column: int, width: int = 1) -> Span:
-        """A span of one place."""
-        return self.span(t.Place(line, column, line, column + width))
-
-
-def place(token: Token) -> t.Place:
-    """Where a token stands."""
-    line, column = token.line or 1, token.column or 1
-    return t.Place(line, column, token.end_line or line, token.end_column or column + 1)
 
 
 class _LineEnds:
@@ -327,43 +299,4 @@ def statements(source: Source) -> tuple[t.Statement, ...]:
     except _BadNumber as bad:
         raise CircuitError("bad-number", bad.reason, source.span(place(bad.token))) from None
     except UnexpectedInput as error:
-        raise _explained(source, error) from None
-
-
-def _explained(source: Source, error: UnexpectedInput) -> CircuitError:
-    """The mistake behind a place where the grammar cannot go on."""
-    if isinstance(error, UnexpectedCharacters):
-        where = t.Place(error.line, error.column, error.line, error.column + 1)
-        return _at(source, where, "", error.char, error.allowed or set())
-    wanted: Iterable[str] = getattr(error, "accepts", None) or getattr(error, "expected", None) or ()
-    if isinstance(error, UnexpectedToken) and error.token.type != "$END":
-        where = place(error.token)
-        if error.token.type != "_LINE_END":
-            return _at(source, where, error.token.type, str(error.token), wanted)
-        # the statement breaks off: point behind its last character
-        column = min(where.column, len(source.lines[where.line - 1]) + 1)
-        return _at(source, t.Place(where.line, column, where.line, column + 1), "_LINE_END", "", wanted)
-    last = max((i for i, line in enumerate(source.lines, start=1) if line.strip()), default=1)
-    end = len(source.lines[last - 1].rstrip("\r")) + 1
-    return _at(source, t.Place(last, end, last, end + 1), "$END", "", wanted)
-
-
-def _at(source: Source, where: t.Place, kind: str, text: str, wanted: Iterable[str]) -> CircuitError:
-    """A bracket that an earlier line leaves open is the mistake, whatever stands here."""
-    opening = _left_open(source, where.line)
-    if opening is not None:
-        return CircuitError("unfinished", "this bracket is not closed", source.at(*opening), "close it with )")
-    line = source.lines[where.line - 1]
-    return syntax_mistake(source.span(where), kind, text, wanted, line[: where.column - 1], line[where.column - 1 :])
-
-
-def _left_open(source: Source, line: int) -> tuple[int, int] | None:
-    """Line and column of the last round bracket that the lines before `line` open and do not close."""
-    opened: list[tuple[int, int]] = []
-    for number, text in enumerate(source.lines[: line - 1], start=1):
-        for mark in _BRACKETS.finditer(text):
-            if mark.group() == "(":
-                opened.append((number, mark.start() + 1))
-            elif mark.group() == ")" and opened:
-                opened.pop()
-    return opened[-1] if opened else None
+        raise explained(source, error) from None

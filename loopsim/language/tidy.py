@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import re
 
-from loopsim.language.parser import Source, statements
+from loopsim.language.parser import statements
+from loopsim.language.source import Source
 from loopsim.units import CODE_PATTERN, UNIT_PATTERN
 
 INDENT = "  "

@@ -11,7 +11,8 @@ from hypothesis import strategies as st
 
 from loopsim import CircuitError, parse
 from loopsim.expressions import evaluate
-from loopsim.language.parser import Source, statements
+from loopsim.language.parser import statements
+from loopsim.language.source import Source
 from loopsim.language.tidy import tidy
 from loopsim.output.engineering import engineering
 from loopsim.units import PREFIXES, UNITS, code, dimension_of, name_of, quantity

@@ -12,6 +12,7 @@ DEFINITIONS: tuple[Mistake, ...] = (
         "let supply = 9 V\ngnd -> v1: ⟦suply⟧ -> a\n",
         "let speed = 3 V / ⟦us⟧\n",
         "curve hump = polynomial(2 mA/V)\na -- r1: 1 kohm -- gnd\ngnd -> i1: 2*⟦hump⟧ -> a\n",
+        "a -- r1: 1 kohm -- gnd\nexpect values of ⟦r1.b⟧ = 1 V\n",
         "block cell(p) {\n  p -- r1: ⟦load⟧ -- gnd\n}\nlet load = 1 kohm\nx1: cell(p = a)\n",
     ),
     mistake(

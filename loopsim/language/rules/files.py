@@ -51,11 +51,12 @@ FILES: tuple[Mistake, ...] = (
     ),
     mistake(
         "too-many-files",
-        "A circuit uses at most 200 files.",
+        "A circuit uses at most 200 files, which use each other at most 32 deep.",
         "join parts files that belong together",
         Example(
             "".join(f'use "{k}.loop"\n' for k in range(200)) + 'use ⟦"200.loop"⟧\n',
             files={f"{k}.loop": f"kind k{k} = diode()\n" for k in range(201)},
         ),
+        Example('use "0.loop"\n', files={f"{k}.loop": f'use "{k + 1}.loop"\n' for k in range(34)}),
     ),
 )
