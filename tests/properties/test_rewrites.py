@@ -85,3 +85,24 @@ def test_scaling_there_and_back_changes_no_digit(subject):
     circuit, points = subject
     again = scaled(scaled(circuit, 9), -9).states()
     assert [[p[n] for n in circuit.nets] for p in again] == [[p[n] for n in circuit.nets] for p in points]
+
+
+@pytest.mark.parametrize(("file", "let", "net"), [(SUBJECTS[0], "level", "out"), (SUBJECTS[1], "glow", "drive")])
+def test_trip_points_survive_every_rewrite(file, let, net):
+    """Located to 1e-10 of the range; a tenth of a millionth leaves room for the split resistors, which are rounded anew."""
+    circuit = loopsim.load(str(LIBRARY / file))
+
+    def trip_points(other, watched):
+        found = other.trace(let, watch=watched, range_budget=0.0).thresholds(watched)
+        return [found.rising, found.falling]
+
+    expected = trip_points(circuit, net)
+    for other, watched in (
+        (renamed(circuit), back(net)),
+        (reordered(circuit), net),
+        (split_resistors(circuit), net),
+        (scaled(circuit, 10), net),
+        (mirrored(circuit), net),
+    ):
+        # in the mirror image the net falls where it rose, at the same value of the let
+        assert trip_points(other, watched) == pytest.approx(expected, rel=1e-7)
