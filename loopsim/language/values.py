@@ -54,14 +54,15 @@ def _two_sided(formula: t.Formula, scope: Scope) -> tuple[Typed, Tolerance] | No
     value = typed(rest, scope)
     if value.dimension == NUMBER:
         return None
-    size = {sign: _share(share, value, scope) for sign, share in zip(formula.operators[-2:], shares, strict=True)}
-    return value, Tolerance(-size["-"], size["+"], True)
+    signed = dict(zip(formula.operators[-2:], shares, strict=True))
+    up, down = (_share(typed(signed[sign], scope), value, signed[sign], scope) for sign in "+-")
+    return value, Tolerance(-down, up, True)
 
 
-def _share(written: t.Formula, value: Typed, scope: Scope) -> float:
-    """A tolerance in % or ppm, as a number."""
-    assert isinstance(written, t.Num)
-    size = written.quantity.value
+def _share(spread: Typed, value: Typed, written: t.Formula, scope: Scope) -> float:
+    """A tolerance that is a share of its value, as a number."""
+    assert isinstance(spread.tree, Number)
+    size = spread.tree.value
     if value.scale:
         raise scope.mistake(
             "tolerance", "a share of a temperature in degC means nothing", written.place, "write +/- 5 K"
@@ -77,14 +78,16 @@ def _tolerance(value: Typed, written: t.Formula, scope: Scope, draft: Draft) -> 
     """What stands behind `+/-`: a share in % or ppm, or a distance in the unit of the value."""
     if isinstance(written, t.Negative):
         raise scope.mistake("tolerance", "a tolerance is a size, without a sign", written.place)
-    if isinstance(written, t.Num) and written.percent:
-        size = _share(written, value, scope)
-        return Tolerance(-size, size, True)
     spread = constant(written, scope, "a tolerance")
     if lets_in(spread.tree):
         raise scope.mistake(
             "tolerance", "a tolerance is written out; it cannot follow a let", written.place, "for example +/- 1 %"
         )
+    # the parameter of a block is a number by now: behind a unit, a pure one is a share
+    handed_on = isinstance(written, t.Word) and spread.dimension == NUMBER != value.dimension
+    if handed_on or (isinstance(written, t.Num) and written.percent):
+        size = _share(spread, value, written, scope)
+        return Tolerance(-size, size, True)
     if spread.dimension != value.dimension or (spread.scale and not value.scale):
         unit = unit_in_words(value)
         raise scope.mistake(
