@@ -1,7 +1,8 @@
 """A circuit with one of its lets left free: the equations F(x, let) = 0 and their derivatives.
 
 A let that only moves sources in a straight line costs nothing per point: s follows from two assemblies. Any other is assembled where it is
-asked for, and its derivative is a central difference of residuals.
+asked for, and its derivative is a difference of residuals. It is assembled inside its range alone, because a duration or a resistance may
+have no meaning beyond; a curve that is followed a step past an end meets the equations continued there in a straight line.
 """
 
 from __future__ import annotations
@@ -53,6 +54,14 @@ class Family:
     def _assembled(self, level: float) -> System:
         return assemble(self.circuit, {**self.settings, self.let: float(level)})
 
+    def _inside(self, level: float) -> float:
+        return min(max(level, self.low), self.high)
+
+    def _beside(self, level: float) -> tuple[float, float]:
+        """Two values around one, both inside the range."""
+        inside, h = self._inside(level), DIFFERENCE * (self.high - self.low)
+        return max(inside - h, self.low), min(inside + h, self.high)
+
     def system(self, level: float) -> System:
         """The system at one value of the let."""
         kept = self._kept.get(level)
@@ -65,7 +74,7 @@ class Family:
                     supply=self._base.supply + shift * self._supply_rise,
                 )
             else:
-                kept = self._assembled(level)
+                kept = self._assembled(self._inside(level))
             if len(self._kept) > 8:
                 self._kept.clear()
             self._kept[level] = kept
@@ -75,18 +84,28 @@ class Family:
         """F: (n,)."""
         if self.affine:
             return self._base.residual(x, self._base.s + (level - self.low) * self.rise)
-        return self.system(level).residual(x)
+        inside = self._inside(level)
+        found = self.system(inside).residual(x)
+        return found if inside == level else found + (level - inside) * self.slope(x, inside)
 
     def jacobian(self, x: Array, level: float) -> Array:
         """dF/dx: (n, n)."""
-        return (self._base if self.affine else self.system(level)).jacobian(x)
+        if self.affine:
+            return self._base.jacobian(x)
+        inside = self._inside(level)
+        found = self.system(inside).jacobian(x)
+        if inside == level:
+            return found
+        below, above = self._beside(inside)
+        rise = (self._assembled(above).jacobian(x) - self._assembled(below).jacobian(x)) / (above - below)
+        return found + (level - inside) * rise
 
     def slope(self, x: Array, level: float) -> Array:
         """dF/dlet: (n,)."""
         if self.affine:
             return -self.rise
-        h = DIFFERENCE * (self.high - self.low)
-        return (self._assembled(level + h).residual(x) - self._assembled(level - h).residual(x)) / (2.0 * h)
+        below, above = self._beside(level)
+        return (self._assembled(above).residual(x) - self._assembled(below).residual(x)) / (above - below)
 
     def bend(self, x: Array, level: float, v: Array) -> Array:
         """d(J v)/dx: (n, n)."""
@@ -96,7 +115,5 @@ class Family:
         """d(J v)/dlet: (n,)."""
         if self.affine:
             return np.zeros(len(x))
-        h = DIFFERENCE * (self.high - self.low)
-        return (self._assembled(level + h).jacobian(x) @ v - self._assembled(level - h).jacobian(x) @ v) / (
-            2.0 * h
-        )
+        below, above = self._beside(level)
+        return (self._assembled(above).jacobian(x) @ v - self._assembled(below).jacobian(x) @ v) / (above - below)

@@ -33,6 +33,8 @@ from loopsim.numerics.curve import Curve
 Array: TypeAlias = NDArray[np.float64]
 
 STATIONS = 9
+DEAD = 1e-9  # V: a circuit whose nets all stay below has nothing but rounding to measure by, and is measured in millivolts
+ENDED = {"stuck": "no step along them succeeded", "time": "the budget was used up"}
 
 
 def trace(
@@ -77,6 +79,10 @@ def trace(
             break
         lines, covered = more, None
         drawn = _drawn(family, lines, index, scale)
+    for end, reason in ENDED.items():
+        broken = sum(line.end == end for line in lines)
+        if broken:
+            notes.append(f"{broken} of {len(lines)} branches are not followed to their ends: {reason}")
     travel = {net: travel_of(drawn.branches, net) for net in index}
     per_net = thresholds(family, drawn.branches, drawn.folds, travel, scale)
     gaps = covered.gaps if covered is not None and covered.finished else ()
@@ -146,6 +152,8 @@ def _scale(family: Family, proved: Sequence[Points], width: float) -> Array:
     known = np.concatenate([p.x for p in proved if len(p.x)] or [np.ones((1, family.system(family.low).n))])
     size = np.maximum(np.ptp(known, axis=0), 0.1 * np.max(np.abs(known), axis=0))
     nets = np.array([kind == "net" for kind, _ in family.system(family.low).unknowns])
+    if np.max(size[nets], initial=0.0) < DEAD:
+        return np.append(np.full(len(size), 1e-3), width)
     floor = np.where(nets, 1e-2 * max(float(np.max(size[nets], initial=0.0)), 1e-3), 1e-12)
     return np.append(np.maximum(size, floor), width)
 

@@ -237,7 +237,7 @@ def _eigen(matrices: Array, slips: Array) -> tuple[Complex, Array, Array]:
     for _ in range(4):
         off = np.abs(balanced) * others
         rows, columns = off.sum(axis=2), off.sum(axis=1)
-        with np.errstate(divide="ignore", invalid="ignore"):
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
             factor = np.where(
                 (rows > 0.0) & (columns > 0.0), np.exp2(np.round(0.5 * np.log2(columns / rows))), 1.0
             )

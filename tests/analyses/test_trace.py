@@ -1,5 +1,6 @@
 """The whole characteristic along a let: folds, thresholds, crossings, and what is proved about them."""
 
+import dataclasses
 import itertools
 
 import mpmath
@@ -7,6 +8,7 @@ import numpy as np
 import pytest
 
 import loopsim
+from loopsim.analyses.family import Family
 from loopsim.analyses.trace import Trace
 from loopsim.errors import AnalysisError, CircuitError
 
@@ -363,3 +365,39 @@ def test_a_circuit_without_nonlinear_parts_has_one_branch_that_is_proved():
     assert found.over_range
     assert {count for _, count in found.counts} == {1}
     assert found.folds == ()
+
+
+DELAYED = """circuit delayed "a divider behind a ramp"
+let rise = 1 ms in 1 us .. 10 s
+gnd -> rail: ramp(from = 0 V, to = 5 V, start = 0 s, duration = rise) -> vcc
+vcc -- r_top: 22 kohm -- half -- r_bottom: 22 kohm -- gnd
+"""
+
+
+def test_a_let_is_assembled_inside_its_range_alone_and_a_dead_circuit_is_followed() -> None:
+    # 60 us below 1 us there is no duration: the step past the end must not ask for one
+    curve = loopsim.parse(DELAYED).trace("rise")
+    assert len(curve.branches) == 1 and curve.complete and not curve.notes
+    assert curve.branches[0].values[[0, -1]].tolist() == [1e-6, 10.0]
+
+
+def test_beyond_its_range_a_family_goes_on_in_a_straight_line() -> None:
+    text = 'circuit c "load"\nlet load = 1 kohm in 100 ohm .. 10 kohm\ngnd -> s: 1 mA -> out\nout -- r: load -- gnd\n'
+    family = Family(loopsim.parse(text), {}, "load", 100.0, 10e3)
+    x = np.full(family.system(100.0).n, 0.3)
+    for level in (100.0 - 40.0, 10e3 + 300.0):
+        inside = float(np.clip(level, 100.0, 10e3))
+        expected = family.residual(x, inside) + (level - inside) * family.slope(x, inside)
+        np.testing.assert_allclose(family.residual(x, level), expected, rtol=1e-12)
+        step = 1e-4
+        columns = [(family.residual(x + step * e, level) - family.residual(x - step * e, level)) / (2 * step) for e in np.eye(len(x))]
+        np.testing.assert_allclose(family.jacobian(x, level), np.transpose(columns), rtol=1e-6, atol=1e-15)
+
+
+def test_a_branch_that_is_not_followed_to_its_end_is_told(monkeypatch: pytest.MonkeyPatch) -> None:
+    from loopsim.analyses import trace_curves
+
+    real = trace_curves.follow
+    monkeypatch.setattr(trace_curves, "follow", lambda *words: dataclasses.replace(real(*words), end="stuck"))
+    curve = loopsim.parse(DELAYED).trace("rise")
+    assert "1 of 1 branches are not followed to their ends: no step along them succeeded" in curve.notes
