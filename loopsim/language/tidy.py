@@ -19,8 +19,9 @@ _UNIT = re.compile(UNIT_PATTERN)
 
 def tidy(text: str, file: str = "<text>") -> str:
     """`text` in the standard layout. CircuitError when it does not parse: a broken file is left to its author."""
-    before = statements(Source(file, text))
-    laid_out = _lay_out(text)
+    source = Source(file, text)
+    before = statements(source)
+    laid_out = _lay_out(source.text)
     after = statements(Source(file, laid_out))
     if _shape(before) != _shape(after):  # a guard, not a path that is expected
         return text
@@ -99,31 +100,21 @@ def _join(tokens: list[tuple[str, str]]) -> str:
 
 
 def _gap(before_previous: tuple[str, str], previous: tuple[str, str], token: tuple[str, str]) -> str:
+    """What stands between two tokens. before_previous: the one before them, ("", "") for none."""
     if previous[0] == "":
         return ""
     if token[0] == "comment":
         return "  "
-    if token[1] in (",", ";", ")", ":"):
+    if token[1] in (",", ";", ")", ":") or previous[1] == "(" or "^" in (token[1], previous[1]):
         return ""
-    if token[1] == "(":
-        return (
-            ""
-            if previous[0] == "name"
-            else " "
-            if previous[1] not in ("(", "-") or before_previous[0] in ("number", "unit", "name")
-            else ""
-        )
-    if previous[1] == "(":
+    if token[1] == "(" and previous[0] == "name":
         return ""
-    if token[1] == "^" or previous[1] == "^":
-        return ""
-    if (
-        previous[1] in ("-", "+")
-        and previous[0] == "mark"
-        and (
-            before_previous[0] in ("", "link", "range", "spread")
-            or before_previous[1] in ("(", ",", "=", "+", "-", "*", "/", "^", "<", ">", "{", ":", ";", "in")
-        )
-    ):
-        return ""
-    return " "
+    return "" if _is_sign(previous, before_previous) else " "
+
+
+def _is_sign(token: tuple[str, str], before: tuple[str, str]) -> bool:
+    """Whether a plus or minus belongs to what follows and joins nothing."""
+    return token in (("mark", "-"), ("mark", "+")) and (
+        before[0] in ("", "link", "range", "spread")
+        or before[1] in ("(", ",", "=", "+", "-", "*", "/", "^", "<", ">", "{", ":", ";", "in", "of")
+    )
