@@ -1,5 +1,6 @@
 """The command: words in, an answer on standard output, the rest on standard error, an exit code."""
 
+import contextlib
 import dataclasses
 import os
 import re
@@ -473,6 +474,21 @@ def test_transient_follows_the_circuit_for_a_time(capsys) -> None:
     assert "--for TIME" in capsys.readouterr().err
     assert main(["transient", str(ROOT / PUMP), "--for", "1ms", "--start", "Q"]) == Exit.MISTAKE
     assert "there is no state Q" in capsys.readouterr().err
+
+
+def test_an_interrupted_transient_prints_what_it_has(capsys, monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    from loopsim.cli import motion
+
+    def stop(share: float) -> None:
+        signal.raise_signal(signal.SIGINT)
+
+    monkeypatch.setattr(motion, "progress", lambda around, label: contextlib.nullcontext(stop))
+    table = tmp_path / "steps.csv"
+    words = ["transient", str(ROOT / "circuits/oscillators/cistern_blinker.loop"), "--for", "20s", "--start", "out=1"]
+    assert main([*words, "--csv", str(table)]) == Exit.INTERRUPTED
+    out, err = capsys.readouterr()
+    assert "stopped early" in out and "interrupted at" in err and "of 20 s" in err
+    assert len(table.read_text(encoding="utf-8").splitlines()) > 100
 
 
 def test_colour_is_for_terminals_that_want_it() -> None:

@@ -56,12 +56,13 @@ class Motion:
         first_step: float | None = None,
         peak: Array | None = None,
         progress: Callable[[float], None] | None = None,
+        keep_interrupted: bool = False,
     ) -> Path:
         """Integrate from x; tolerance: error over amplitude."""
         return integrate(
             self.eq, x, start, end, self.base, rtol=tolerance, atol=tolerance * self.floor, waves=self.waves,
             peak=self.floor if peak is None else peak, kept=kept, max_step=max_step, first_step=first_step,
-            index_two=self.index_two, error_weight=self.tested, progress=progress,
+            index_two=self.index_two, error_weight=self.tested, progress=progress, keep_interrupted=keep_interrupted,
         )  # fmt: skip
 
     def source(self, time: float) -> Array:

@@ -21,7 +21,7 @@ from loopsim.equations.assemble import assemble, parameter_values
 from loopsim.equations.structure import check
 from loopsim.equations.system import System
 from loopsim.errors import AnalysisError
-from loopsim.numerics.radau import Path, crossings, prepare
+from loopsim.numerics.radau import INTERRUPTED, Path, crossings, prepare
 
 if TYPE_CHECKING:
     from loopsim.analyses.results import States
@@ -56,6 +56,7 @@ class Transient:
     start: the start in words; duration: as asked for [s]; watch: nets to show first; nets: all that were recorded; path: steps and
     polynomials; columns: unknown to its column in path. end: "ends in state C", "settles", "oscillates" or "still moving" with what
     is known; end_state: the letter, or None. completed: False where the run stopped early (then an error carries this object).
+    states: the states it was compared with, or None where it was compared with none.
     """
 
     circuit: str
@@ -73,6 +74,7 @@ class Transient:
     completed: bool
     seconds: float
     notes: tuple[str, ...] = field(default=())
+    states: States | None = None
 
     @property
     def times(self) -> Array:
@@ -170,10 +172,12 @@ class Transient:
         return pandas.DataFrame({net: self[net] for net in self.nets}, index=pandas.Index(self.times, name="time"))
 
     def plot(self, path: str, nets: Sequence[str] = ()) -> None:
-        """Draw the nets (the watched ones) over time into a file; the suffix decides: svg, png, pdf."""
+        """Draw the nets (the watched ones) over time into a file, the states that are known marked; the suffix decides: svg, png, pdf."""
         from loopsim.output.plots_time import plot_transient
 
-        plot_transient(self, path, tuple(nets))
+        shown = tuple(nets) or self.watch or self.nets
+        levels = [(net, state[net], state.name) for state in self.states or () for net in shown if net in self.nets]
+        plot_transient(self, path, tuple(nets), levels)
 
     def _column(self, kind: str, name: str) -> int:
         if (kind, name) not in self.columns:
@@ -209,6 +213,14 @@ class TransientError(AnalysisError):
         super().__init__(code, message, last_good, hint)
 
 
+class TransientInterrupted(KeyboardInterrupt):
+    """A run that was interrupted from outside. partial: what there is of it."""
+
+    def __init__(self, partial: Transient) -> None:
+        self.partial = partial
+        super().__init__(f"interrupted at {partial.times[-1]:.6g} s of {partial.duration:.6g} s, after {partial.steps} steps")
+
+
 def transient(
     circuit: Circuit,
     duration: float,
@@ -230,7 +242,7 @@ def transient(
     moves most along the fastest growing direction of the start; its sign chooses the side. tolerance: wanted error over amplitude.
     settings: let name to SI value. progress: called with the share done; tell: hears when the kernel is compiled for the first time.
     Raises CircuitError for a faulty circuit, AnalysisError for a start that does not exist, TransientError (with the partial run) where
-    no step is small enough.
+    no step is small enough; an interrupt becomes TransientInterrupted, a KeyboardInterrupt with the partial run.
     """
     began = time.monotonic()
     _check_numbers(duration, tolerance, nudge, ramp)
@@ -247,13 +259,14 @@ def transient(
     kept = [j for j, (kind, name) in enumerate(system.unknowns) if system.n <= KEEP_ALL or (kind == "net" and name in watched)]
     longest = min(max_step or np.inf, LONGEST_SHARE * duration)
     told = None if progress is None else lambda t: progress(t / duration)
-    path = plan.solve(x, 0.0, duration, tolerance, kept=kept, max_step=longest, progress=told)
+    path = plan.solve(x, 0.0, duration, tolerance, kept=kept, max_step=longest, progress=told, keep_interrupted=True)
     left_alone = ramp_time == 0.0 and not nudge
     growth = None if left_alone or path.outcome != 0 else _growth_at_rest(plan, path)
     if growth is not None and duration * abs(growth) <= WATCHED_STEPS * GROWTH_STEP:
         # long steps see what grows as dying away: look again with steps short enough for it
         path = plan.solve(
-            x, 0.0, duration, tolerance, kept=kept, max_step=min(longest, GROWTH_STEP / abs(growth)), progress=told
+            x, 0.0, duration, tolerance, kept=kept, max_step=min(longest, GROWTH_STEP / abs(growth)), progress=told,
+            keep_interrupted=True,
         )  # fmt: skip
         growth = _growth_at_rest(plan, path) if path.outcome == 0 else None
     if growth is not None:
@@ -262,11 +275,15 @@ def transient(
     nets = tuple(name for kind, name in columns if kind == "net")
     completed = path.outcome == 0
     end, end_state = ("stopped early", None)
+    interrupted = path.outcome == INTERRUPTED
     if completed:
-        end, end_state, note = _end(circuit, plan, path, settings, listed, duration)
-        notes += [note] if note else []
+        try:
+            end, end_state, note, listed = _end(circuit, plan, path, settings, listed, duration)
+            notes += [note] if note else []
+        except KeyboardInterrupt:
+            interrupted, end = True, "not compared with the states"
     if ramp_time > 0.0:
-        notes.append(f"supplies came up together within {1e3 * ramp_time:g} ms")
+        notes.append(f"supplies came up together within {_spoken(ramp_time)}")
     run = Transient(
         circuit=circuit.name,
         file=circuit.file,
@@ -283,10 +300,19 @@ def transient(
         completed=completed,
         seconds=time.monotonic() - began,
         notes=tuple(notes),
+        states=listed,
     )
+    if interrupted:
+        raise TransientInterrupted(run) if path.accepted else KeyboardInterrupt
     if not completed:
         raise _failure(system, path, run)
     return run
+
+
+def _spoken(seconds: float) -> str:
+    """A time in the unit that suits it."""
+    size, unit = next(((size, unit) for size, unit in ((1.0, "s"), (1e-3, "ms"), (1e-6, "us")) if seconds >= size), (1e-9, "ns"))
+    return f"{seconds / size:g} {unit}"
 
 
 def _check_numbers(duration: float, tolerance: float, nudge: float, ramp: float | None) -> None:
@@ -356,8 +382,8 @@ def _nudged(system: System, x: Array, nudge: float) -> tuple[Array, str]:
 
 def _end(
     circuit: Circuit, plan: Motion, path: Path, settings: Mapping[str, Any] | None, listed: States | None, duration: float
-) -> tuple[str, str | None, str]:
-    """(where it ended, the letter, a note)."""
+) -> tuple[str, str | None, str, States | None]:
+    """(where it ended, the letter, a note, the states as far as they were needed)."""
     from loopsim.analyses.cycle import repetition
 
     system, x = plan.system, path.end_x
@@ -368,16 +394,16 @@ def _end(
     rest = newton(system, x, source)
     if rest is not None and np.max(np.abs(rest - x)[nets], initial=0.0) <= SAME_STATE * plan.volts and moved <= SAME_STATE * plan.volts:
         if not np.allclose(source, system.s, rtol=1e-9, atol=1e-12 * plan.volts):
-            return "settles", None, "the sources have moved away from their values at time 0, so the end is not one of their states"
+            return "settles", None, "the sources have moved away from their values at time 0, so the end is not one of their states", listed
         listed = _states(circuit, settings) if listed is None else listed
         near = [state for state in listed if np.max(np.abs(state.x - rest)[nets], initial=0.0) <= SAME_STATE * plan.volts]
         if near:
-            return f"ends in state {near[0].name}", near[0].name, ""
-        return "settles", None, "the end is a rest point that is not in the list of states"
+            return f"ends in state {near[0].name}", near[0].name, "", listed
+        return "settles", None, "the end is a rest point that is not in the list of states", listed
     again = repetition(path, [i for i, (kind, _) in enumerate(_kept_unknowns(system, path)) if kind == "net"], SAME_STATE * plan.volts)
     if again is not None and not _driven(system, path.end):
-        return f"oscillates with a period of {again:.6g} s", None, ""
-    return "still moving", None, ""
+        return f"oscillates with a period of {again:.6g} s", None, "", listed
+    return "still moving", None, "", listed
 
 
 def _growth_at_rest(plan: Motion, path: Path) -> complex | None:

@@ -17,22 +17,25 @@ NOTHING = ("no-cycle",)  # the answer to a question that was understood: there i
 
 
 def run_transient(request: Request, around: Surroundings) -> Answer:
-    """Response in time. A run that stopped early is printed as far as it came, with exit code 3."""
+    """Response in time. A run that stopped early is printed as far as it came, with exit code 3, or 130 where it was interrupted."""
     if not request.has("for"):
         raise UsageError("transient needs a time: --for TIME", "for example --for 20ms", "transient")
     circuit = read_circuit(request.paths[0])
-    from loopsim.analyses.transient import TransientError, transient
+    from loopsim.analyses.transient import TransientError, TransientInterrupted, transient
 
     given = _given(request, {word: word for word in ("start", "nudge", "watch", "tolerance", "ramp")})
+    code = Exit.WELL
     with progress(around, "transient") as share:
         try:
             lets = settings(circuit, request.get("set", ()))
             run = transient(circuit, request.get("for"), settings=lets, progress=share, tell=teller(around), **given)
             trouble: tuple[str, ...] = ()
+        except TransientInterrupted as interrupted:
+            run, trouble, code = interrupted.partial, (printable(str(interrupted)),), Exit.INTERRUPTED
         except TransientError as stopped:
             if stopped.partial is None:
                 raise
-            run, trouble = stopped.partial, (printable(str(stopped)),)
+            run, trouble, code = stopped.partial, (printable(str(stopped)),), Exit.UNDECIDED
     from loopsim.output.time_text import transient_csv, transient_text
 
     remarks = trouble
@@ -41,7 +44,6 @@ def run_transient(request: Request, around: Surroundings) -> Answer:
     if request.has("plot"):
         run.plot(request.get("plot"))
         remarks += (f"wrote {printable(request.get('plot'))}",)
-    code = Exit.UNDECIDED if trouble else Exit.WELL
     return _answer(request, run, "transient", transient_text(run), code, remarks)
 
 

@@ -12,6 +12,7 @@ import heapq
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from functools import cache, cached_property, lru_cache
+from time import perf_counter
 from typing import Any, TypeAlias
 
 import numpy as np
@@ -39,6 +40,8 @@ FULL_LIMIT = 12  # unknowns of all stages together up to which Newton with every
 LOOKS = 8  # stretches of a step in which a crossing is looked for
 RECORD_ROOM = 4_000_000  # numbers in one stretch of the record: 32 MB
 FIRST_ROOM = 256  # steps in the first stretch, doubled from stretch to stretch
+STRETCH = 0.25  # s that one stretch may take: so often progress is told and an interrupt is heard
+INTERRUPTED = -1  # outcome beside the kernel's: stopped from outside, the steps before are kept
 
 
 @dataclass(frozen=True, eq=False)
@@ -275,8 +278,8 @@ class Path:
     """Accepted steps and what they cost.
 
     times (k,): starts of the steps [s]; steps (k,) [s]; starts (k, kept), polynomials (k, stages, kept): x(times + q steps) = starts +
-    polynomials[0] q + ...; end, end_x (n,): where it stopped; outcome: one of kernel.DONE, TOO_SMALL, NOT_FINITE; worst: unknown that
-    stood in the way of the last step that failed.
+    polynomials[0] q + ...; end, end_x (n,): where it stopped; outcome: one of kernel.DONE, TOO_SMALL, NOT_FINITE, or
+    INTERRUPTED; worst: unknown that stood in the way of the last step that failed.
     """
 
     times: Array
@@ -348,13 +351,15 @@ def integrate(
     index_two: ArrayLike | None = None,
     error_weight: ArrayLike | None = None,
     progress: Callable[[float], None] | None = None,
+    keep_interrupted: bool = False,
 ) -> Path:
     """Solve from x0 at `start` to `end` [s].
 
     source (n,): constant part; waves: the rest. rtol, atol: NumPy's meaning, scalars or (n,); peak (n,): when given, rtol is relative to
     the largest size each unknown has had so far, and never less than this. kept: unknowns that are recorded (all). index_two (n,): nonzero
     for unknowns of index 2, whose error counts by the step's share of the span. error_weight (n,): 0 leaves an unknown out of error and
-    convergence tests. fixed_step: take it whatever the error, for order tests. Never raises for a step that fails: see `Path.outcome`.
+    convergence tests. fixed_step: take it whatever the error, for order tests. keep_interrupted: a KeyboardInterrupt
+    ends the run with the steps before it instead of being raised. Never raises for a step that fails: see `Path.outcome`.
     """
     from loopsim.numerics import kernel, radau_plain
 
@@ -407,29 +412,38 @@ def integrate(
     room, repivoted = FIRST_ROOM, 0
     cap = max(16, RECORD_ROOM // max(1, len(kept_places) * (stages + 1)))
     while True:
+        began = perf_counter()
         room = min(2 * room, cap)
         record = (
             np.empty(room), np.empty(room), np.empty((room, len(kept_places))), np.empty((room, stages, len(kept_places)))
         )  # fmt: skip
-        if by_arrays:
-            outcome, used = radau_plain.advance(
-                eq, waves, method, jacobian_values, x, peaks, control, state, counts, marks, kept_places, base, inner, absolute, second,
-                weights, polynomial, *record,
-            )  # fmt: skip
-        else:
-            outcome, used = kernel.advance(
-                x, peaks, control, state, counts, marks, kept_places,
-                *eq.rows, *eq.control, eq.c, *eq.product, eq.d, eq.kinds, eq.parameters, *eq.storage, eq.mass, eq.base_jac,
-                eq.stamp_place, eq.stamp_row, eq.stamp_value, base, waves.forms, wave_starts, wave_data, *columns,
-                method.nodes, method.transform, method.inverse, method.order_real, method.pairs_real, method.pairs_imaginary,
-                method.error_weights, method.monomials, inner, absolute, second, weights,
-                factors.entry_start, factors.entry_from, factors.entry_column, factors.lu_start, factors.lu_column, factors.lu_diagonal,
-                factors.row_order, factors.column_order, polynomial, lu, pivots, lu_pairs, pivots_pairs, jac, inverse_A,
-                mass_full, jac_full, lu_full, pivots_full, *record,
-            )  # fmt: skip
+        done_before = int(counts[kernel.STEPS])
+        try:
+            if by_arrays:
+                outcome, used = radau_plain.advance(
+                    eq, waves, method, jacobian_values, x, peaks, control, state, counts, marks, kept_places, base, inner, absolute,
+                    second, weights, polynomial, *record,
+                )  # fmt: skip
+            else:
+                outcome, used = kernel.advance(
+                    x, peaks, control, state, counts, marks, kept_places,
+                    *eq.rows, *eq.control, eq.c, *eq.product, eq.d, eq.kinds, eq.parameters, *eq.storage, eq.mass, eq.base_jac,
+                    eq.stamp_place, eq.stamp_row, eq.stamp_value, base, waves.forms, wave_starts, wave_data, *columns,
+                    method.nodes, method.transform, method.inverse, method.order_real, method.pairs_real, method.pairs_imaginary,
+                    method.error_weights, method.monomials, inner, absolute, second, weights,
+                    factors.entry_start, factors.entry_from, factors.entry_column, factors.lu_start, factors.lu_column,
+                    factors.lu_diagonal, factors.row_order, factors.column_order, polynomial, lu, pivots, lu_pairs, pivots_pairs, jac,
+                    inverse_A, mass_full, jac_full, lu_full, pivots_full, *record,
+                )  # fmt: skip
+            if progress is not None:
+                progress(float(state[kernel.TIME]))
+        except KeyboardInterrupt:
+            if not keep_interrupted:
+                raise
+            outcome, used = INTERRUPTED, int(counts[kernel.STEPS]) - done_before
         records.append(tuple(part[:used] for part in record))  # type: ignore[arg-type]
-        if progress is not None:
-            progress(float(state[kernel.TIME]))
+        pace = STRETCH / max(perf_counter() - began, 1e-9)
+        room = min(room, max(16, int(0.5 * pace * used)))
         if outcome == kernel.PIVOT:
             factors = sparse_factors(eq, x, float(state[kernel.STEP]), method)
             lu = np.zeros((1, len(factors.lu_column)))
@@ -441,6 +455,9 @@ def integrate(
         if outcome not in (kernel.FULL, kernel.PIVOT):
             break
     joined = records[0] if len(records) == 1 else tuple(np.concatenate(parts) for parts in zip(*records, strict=True))
+    if outcome == INTERRUPTED and len(joined[0]):  # without a compiler it may have come in the middle of a step
+        state[kernel.TIME] = joined[0][-1] + joined[1][-1]
+        x[kept_places] = joined[2][-1] + joined[3][-1].sum(axis=0)
     return Path(  # type: ignore[misc]
         *joined,
         end=float(state[kernel.TIME]),

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from loopsim.analyses.transient import Transient
 
 PANELS = 8  # nets in one picture; more would be too low to read
+NEAR = 0.04  # of a curve's extent: levels this close share one line of names
 
 
 def plot_transient(run: Transient, path: str, nets: Sequence[str] = (), levels: Sequence[tuple[str, float, str]] = ()) -> None:
@@ -29,15 +30,18 @@ def plot_transient(run: Transient, path: str, nets: Sequence[str] = (), levels: 
     scale, unit = _time_scale(float(times[-1]))
     for i, (net, panel) in enumerate(zip(shown, panels, strict=True)):
         panel.plot(times / scale, values[net], color=COLOURS[i % len(COLOURS)], linewidth=1.4)
-        for other, volts, name in levels:
-            if other == net:
-                panel.axhline(volts, color=PALE, linewidth=0.8, linestyle=(0, (4, 3)))
-                panel.annotate(
-                    name, (1.0, volts), xycoords=("axes fraction", "data"), xytext=(4, -3), textcoords="offset points", fontsize=8
-                )  # fmt: skip
-                dots = [crossing.time for crossing in run.crossings(net, volts)]
-                panel.plot(np.array(dots) / scale, [volts] * len(dots), "o", color=COLOURS[i % len(COLOURS)], markersize=3.5)
-        _label(panel, net, values[net])
+        course = values[net]
+        extent = float(np.ptp(course))
+        for volts, names in _told_apart([(v, name) for other, v, name in levels if other == net], NEAR * extent):
+            panel.axhline(volts, color=PALE, linewidth=0.8, linestyle=(0, (4, 3)), zorder=1)
+            panel.annotate(
+                names, (1.0, volts), xycoords=("axes fraction", "data"), xytext=(4, -3), textcoords="offset points", fontsize=8
+            )  # fmt: skip
+            if min(abs(course[0] - volts), abs(course[-1] - volts)) <= NEAR * extent:
+                continue  # where it starts or comes to rest, crossings are ripple
+            dots = [crossing.time for crossing in run.crossings(net, volts)]
+            panel.plot(np.array(dots) / scale, [volts] * len(dots), "o", color=COLOURS[i % len(COLOURS)], markersize=3.5)
+        _label(panel, net, np.append(course, [v for other, v, _ in levels if other == net]))
     if not run.completed:
         for panel in panels:
             panel.axvline(float(times[-1]) / scale, color=COLOURS[3], linewidth=1.0, linestyle=(0, (1, 2)))
@@ -70,6 +74,17 @@ def _refined(times: NDArray[np.float64], parts: int = 6) -> NDArray[np.float64]:
     """Each gap in `parts` equal ones."""
     inner = times[:-1, None] + np.diff(times)[:, None] * np.arange(parts) / parts
     return np.append(inner.ravel(), times[-1])
+
+
+def _told_apart(levels: Sequence[tuple[float, str]], room: float) -> list[tuple[float, str]]:
+    """Levels with their names; those within `room` of the one below have their names on its line."""
+    found: list[tuple[float, str]] = []
+    for volts, name in sorted(levels):
+        if found and volts - found[-1][0] <= room:
+            found[-1] = (found[-1][0], f"{found[-1][1]}, {name}")
+        else:
+            found.append((volts, name))
+    return found
 
 
 def _chosen(wanted: Sequence[str], known: Sequence[str]) -> list[str]:

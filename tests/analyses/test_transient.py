@@ -1,13 +1,14 @@
 """Starts, ends, crossings, failures and forms of a transient."""
 
 import json
+import signal
 
 import numpy as np
 import pytest
 from moving_circuits import blinker, charging, follower, latch, negative_conductance, series_tank, trigger
 
 import loopsim
-from loopsim.analyses.transient import TransientError
+from loopsim.analyses.transient import TransientError, TransientInterrupted
 from loopsim.build import CircuitBuilder, waveform
 from loopsim.errors import AnalysisError, CircuitError
 
@@ -182,6 +183,53 @@ def test_progress_is_told_and_ends_at_one() -> None:
     seen: list[float] = []
     blinker().transient(20e-3, progress=seen.append)
     assert seen == sorted(seen) and seen[-1] == pytest.approx(1.0)
+
+
+def test_an_interrupted_run_keeps_its_good_steps() -> None:
+    whole = blinker().transient(20e-3)
+
+    def stop(share: float) -> None:
+        signal.raise_signal(signal.SIGINT)
+
+    with pytest.raises(KeyboardInterrupt) as caught:
+        blinker().transient(20e-3, progress=stop)
+    assert isinstance(caught.value, TransientInterrupted)
+    part = caught.value.partial
+    assert not part.completed and part.end == "stopped early"
+    assert 0 < part.steps < whole.steps and len(part.times) == part.steps + 1
+    assert np.array_equal(part["out"], whole["out"][: part.steps + 1])
+    assert f"after {part.steps} steps" in str(caught.value)
+
+
+def test_an_interrupt_in_the_middle_of_an_uncompiled_step_keeps_the_steps_before(monkeypatch: pytest.MonkeyPatch) -> None:
+    from loopsim.devices import phi
+    from loopsim.numerics import radau
+
+    # 20 cells of a line: more unknowns than the full factors take, so that whole-array operations run without a compiler
+    b = CircuitBuilder("line")
+    b.chain("gnd", "feed", "n0", device="voltage_source", voltage=1.0)
+    for k in range(20):
+        b.chain(f"n{k}", f"r{k}", f"n{k + 1}", device="resistor", resistance=1e3)
+        b.chain(f"n{k + 1}", f"c{k}", "gnd", device="capacitor", capacitance=1e-9)
+        b.chain(f"n{k + 1}", f"d{k}", "gnd", device="diode", saturation_current=1e-12)
+    line = b.circuit()
+    monkeypatch.setattr(radau, "have_compiler", lambda: False)
+    calls = 0
+    value = phi.VALUE[phi.Kind.EXPONENTIAL]
+
+    def counted(w: np.ndarray, p: np.ndarray) -> np.ndarray:
+        nonlocal calls
+        calls += 1
+        if calls == 150:
+            raise KeyboardInterrupt
+        return value(w, p)
+
+    monkeypatch.setattr(phi, "VALUE", (counted, *phi.VALUE[1:]))
+    with pytest.raises(TransientInterrupted) as caught:
+        line.transient(1e-3)
+    part = caught.value.partial
+    assert part.steps > 5 and part.times[-1] < 1e-3
+    assert np.all(np.diff(part.times) > 0.0) and np.all(np.isfinite(part["n20"]))
 
 
 def test_a_result_prints_as_an_answer_and_as_data() -> None:
