@@ -129,7 +129,7 @@ def _range(
             "let-range",
             f"the let `{along}` has no range",
             parameter.span,
-            f"write `let {along} = ... in LO .. HI`, or give one",
+            f"write `let {along} = ... in LO .. HI`, or give one with --over LO..HI",
         )
     low, high = float(found[0]), float(found[1])
     if not (np.isfinite(low) and np.isfinite(high) and low < high):

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import os
+from importlib.util import find_spec
 from typing import TYPE_CHECKING
 
 from loopsim.cli.answer import Answer, Surroundings
 from loopsim.cli.exits import Exit
 from loopsim.cli.options import Request, UsageError, nearest
 from loopsim.cli.reading import let_value, read_circuit, settings, unknown_let, write_file
-from loopsim.errors import CircuitError
+from loopsim.errors import CircuitError, MissingExtra
 from loopsim.output.document import document, document_text
 from loopsim.output.overlay import distance, overlay_text, read_overlay
 from loopsim.output.text import settings_text
@@ -41,6 +42,8 @@ def run(request: Request, around: Surroundings) -> Answer:
         _known_net(circuit, net)
     if request.has("versus") and not request.has("plot"):
         raise UsageError("--versus says how to draw", "add --plot FILE", "trace")
+    if request.has("plot") and find_spec("matplotlib") is None:
+        raise MissingExtra("plot", "a plot")  # before the work, not after it
     for option in ("plot", "csv"):
         _writable(request, option)
     from loopsim.analyses.states import watched

@@ -4,6 +4,7 @@ import csv
 import dataclasses
 import io
 import re
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -163,7 +164,7 @@ def test_the_command_prints_writes_and_draws(file: str, tmp_path: Path, capsys: 
     [
         ([], "trace needs a let"),
         (["--along", "levle"], "did you mean `level`?"),
-        (["--along", "supply"], "has no range"),
+        (["--along", "supply"], "--over LO..HI"),
         (["--along", "level", "--over", "9V..1V"], "has to rise"),
         (["--along", "level", "--over", "1V"], "LO..HI"),
         (["--along", "level", "--over", "1A..2A"], "is in V"),
@@ -249,3 +250,12 @@ def test_a_jump_of_no_length_has_no_arrow(pump: Trace, tmp_path: Path) -> None:
     still = path.read_text(encoding="utf-8").count("stroke: #2a7f79")
     pump.plot(str(path), ["out"])
     assert path.read_text(encoding="utf-8").count("stroke: #2a7f79") > still
+
+
+def test_a_missing_plot_library_is_told_before_the_work(
+    file: str, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setitem(sys.modules, "matplotlib", None)
+    monkeypatch.setattr("loopsim.analyses.trace.trace", lambda *_, **__: pytest.fail("traced in vain"))
+    assert main(["trace", file, "--along", "level", "--plot", "a.svg"]) == 2
+    assert "pip install 'loopsim[plot]'" in capsys.readouterr().err
