@@ -241,7 +241,7 @@ def deviation(kind: int, a: Array, low: Array, high: Array, p: Any) -> Pair:
     from both ends, which is exact where it is monotone and second order small where a cut missed the stationary point.
     """
     inner = stationary(kind, a, low, high, p)
-    cuts = np.stack([low, *inner, high])
+    cuts = np.array([low, *inner, high])
     if len(cuts) > 4:
         cuts = np.sort(cuts, axis=0)
     q = [np.asarray(parameter)[None] for parameter in p]  # the piece axis stands in front of the box axis
@@ -261,29 +261,15 @@ def deviation(kind: int, a: Array, low: Array, high: Array, p: Any) -> Pair:
 
 
 def _between_lines(at_start: Pair, at_stop: Pair, s_low: Array, s_high: Array, width: Array) -> Pair:
-    """Bounds of q on a piece from its end values and slope range: q(start) + s_low t <= q <= q(start) + s_high t, likewise from the end.
+    """Bounds of q on a piece from its end values and slope range: going down from the start it loses s_low times the width at most, and
+    coming up to the stop it has risen by s_high times the width at most; likewise from above. Exact where q is monotone.
 
-    Where both lines bind, their crossing is the bound; it is never worse than the one line alone, which is used with rounding room.
+    The width carries one rounding, each product one: both lie within the 8 roundings that the width is enlarged by.
     """
-    falls, rises = np.minimum(s_low, 0.0), np.maximum(s_high, 0.0)
-    reach = up(width)
-    # going down from the start at slope s_low and up to the stop at slope s_high: lowest where they meet
-    span = rises - falls
-    share = np.where(span > 0.0, 1.0 / np.where(span > 0.0, span, 1.0), 0.0)
-    # relative error of the quotient forms is a few roundings of the terms added
-    low_terms = (rises * at_start[0], -falls * at_stop[0], falls * rises * reach)
-    low_cross = (low_terms[0] + low_terms[1] + low_terms[2]) * share
-    low_error = (np.abs(low_terms[0]) + np.abs(low_terms[1]) + np.abs(low_terms[2])) * share * (12.0 * UNIT)
-    high_terms = (-falls * at_start[1], rises * at_stop[1], -falls * rises * reach)
-    high_cross = (high_terms[0] + high_terms[1] + high_terms[2]) * share
-    high_error = (
-        (np.abs(high_terms[0]) + np.abs(high_terms[1]) + np.abs(high_terms[2])) * share * (12.0 * UNIT)
-    )
-    both = (falls < 0.0) & (rises > 0.0)
-    ends_low = np.minimum(at_start[0], at_stop[0])
-    ends_high = np.maximum(at_start[1], at_stop[1])
-    low = np.where(both, np.minimum(ends_low, low_cross - low_error), ends_low)
-    high = np.where(both, np.maximum(ends_high, high_cross + high_error), ends_high)
+    reach = width * (1.0 + 8.0 * UNIT) + TINY
+    falls, rises = np.minimum(s_low, 0.0) * reach, np.maximum(s_high, 0.0) * reach
+    low = np.maximum(at_start[0] + falls, at_stop[0] - rises)
+    high = np.minimum(at_start[1] + rises, at_stop[1] - falls)
     return down(low), up(high)
 
 
@@ -401,7 +387,7 @@ def _proved_inverse(kind: int, y_low: Array, y_high: Array, p: Any) -> Pair:
 
 def _cuts(low: Array, high: Array, pieces: int) -> Array:
     """Cut points (pieces + 1, ...): even over short intervals, even in the inverse hyperbolic sine over wide ones."""
-    share = np.linspace(0.0, 1.0, pieces + 1).reshape((-1,) + (1,) * low.ndim)
+    share = (np.arange(pieces + 1) / pieces).reshape((-1,) + (1,) * low.ndim)
     wide = (high - low) > 100.0
     even = low + (high - low) * share
     if np.any(wide):

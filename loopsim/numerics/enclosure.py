@@ -29,12 +29,18 @@ def gamma(k: int) -> float:
 
 def down(x: Array) -> Array:
     """A number below x by two roundings of it."""
-    return x - (np.abs(x) * (2.0 * UNIT) + TINY)
+    room = np.abs(x)
+    room *= 2.0 * UNIT
+    room += TINY
+    return np.subtract(x, room)
 
 
 def up(x: Array) -> Array:
     """A number above x by two roundings of it."""
-    return x + (np.abs(x) * (2.0 * UNIT) + TINY)
+    room = np.abs(x)
+    room *= 2.0 * UNIT
+    room += TINY
+    return np.add(x, room)
 
 
 def middle(low: Array, high: Array) -> Array:
