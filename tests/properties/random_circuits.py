@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
+import loopsim
 from loopsim.build import CircuitBuilder
 from loopsim.circuit import Circuit
 
@@ -132,3 +133,44 @@ def any_network(seed: int) -> Circuit:
             build.chain(a, f"p{k}", b, device="constant_power_load", power=10 ** random.uniform(-3, 1),
                         dropout_voltage=random.uniform(0.2, 2))
     return build.circuit()
+
+
+def formula_network(seed: int) -> Circuit:
+    """The same with what `any_network` leaves out: comparators of both outputs, piecewise linear curves, sources that a formula with
+    limit, tanh, atan or a curve controls. As text, since formulas read best so."""
+    random = np.random.default_rng([36, seed])
+    nets = [f"n{k}" for k in range(int(random.integers(2, 6)))]
+    lines = [
+        f'circuit mixture_{seed} "Mixture"',
+        "curve corners = points(-1 V: -2 mA, -0.2 V: -1.5 mA, 0 V: 0 A, 0.3 V: 2 mA, 0.7 V: 0.4 mA, 2 V: 5 mA)",
+        "curve hump = points(-5 V: -3 V, -1 V: 2 V, 0 V: 0 V, 1 V: -2 V, 5 V: 3 V)",
+        f"gnd -> rail: {random.uniform(1, 24):.4g} V -> vcc",
+    ]
+
+    def value(low: float, high: float) -> str:
+        return f"{10 ** random.uniform(low, high):.4g}"
+
+    def signed(low: float, high: float) -> str:
+        return f"{random.choice([-1.0, 1.0]) * 10 ** random.uniform(low, high):.4g}"
+
+    def two() -> list[str]:
+        return [str(net) for net in random.choice(["gnd", "vcc", *nets], 2, replace=False)]
+
+    for k, net in enumerate(nets):
+        lines.append(f"{net} -- g{k}: {value(1, 7)} ohm -- {random.choice(['gnd', 'vcc'])}")
+    for k in range(int(random.integers(2, 6))):
+        (a, b), (c, d) = two(), two()
+        pins = f"plus = {a}, minus = {b}, out = {random.choice(nets)}, high = vcc, low = gnd, gain = {value(2, 6)}"
+        lines.append(
+            (
+                f"u{k}: comparator({pins}, output_resistance = {value(0, 3)} ohm)",
+                f"u{k}: comparator({pins}, output = open_collector)",
+                f"{a} -> c{k}: corners -> {b}",
+                f"{a} -> f{k}: {value(-5, -1)} S * limit({c} - {d}, -{value(-1, 1)} V, {value(-1, 1)} V) -> {b}",
+                f"{a} -> f{k}: {signed(-4, -1)} A * tanh(({c} - {value(-1, 0.5)} * {d}) / {value(-2, 1)} V) -> {b}",
+                f"{a} -> f{k}: {signed(-4, -1)} A * atan({c} / {value(-2, 1)} V) -> {b}",
+                f"{a} -> f{k}: {signed(-4, -2)} S * hump({c} - {d}) -> {b}",
+                f"kind junction{k} = diode(saturation_current = {value(-16, -8)} A)\n{a} -> d{k}: junction{k} -> {b}",
+            )[int(random.integers(8))]
+        )
+    return loopsim.parse("\n".join(lines) + "\n")

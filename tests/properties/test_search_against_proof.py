@@ -4,7 +4,7 @@ leaves out."""
 import numpy as np
 import pytest
 from array_systems import solve
-from random_circuits import any_network
+from random_circuits import any_network, formula_network
 
 from loopsim.equations.assemble import assemble
 
@@ -37,9 +37,9 @@ def searched(system, seed):
     return x[rests]
 
 
-def compared(seed, budget):
+def compared(seed, budget, maker=any_network):
     """Whether the list was complete and so could be compared."""
-    system = assemble(any_network(seed))
+    system = assemble(maker(seed))
     found = solve(system, BOX, budget=budget)
     if not found.complete:
         return False
@@ -57,3 +57,13 @@ def test_no_search_finds_what_the_proof_left_out():
 @pytest.mark.parametrize("block", range(10))
 def test_no_search_finds_what_the_proof_left_out_in_five_hundred(block):
     assert sum(compared(100 + 50 * block + k, budget=10.0) for k in range(50)) >= 25
+
+
+def test_no_search_finds_what_the_proof_left_out_of_networks_with_formulas():
+    assert sum(compared(seed, 2.0, formula_network) for seed in range(10)) >= 8
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("block", range(4))
+def test_no_search_finds_what_the_proof_left_out_of_two_hundred_networks_with_formulas(block):
+    assert sum(compared(100 + 50 * block + k, 10.0, formula_network) for k in range(50)) >= 45
