@@ -121,7 +121,7 @@ def _chain(formula: t.Chain, scope: Scope) -> Typed:
                 word, preposition = ("add", "to") if operator == "+" else ("subtract", "from")
                 raise scope.mistake(
                     "dimension", f"cannot {word} {in_words(part.dimension)} {preposition} {in_words(total.dimension)}",
-                    operand.place,
+                    operand.place, "a tolerance is written +/- 1 %" if _is_share(operand) else "",
                 )  # fmt: skip
             dimension = total.dimension
         else:
@@ -132,6 +132,12 @@ def _chain(formula: t.Chain, scope: Scope) -> Typed:
                 raise scope.mistake("division", "division by zero", operand.place)
         total = Typed(Operation(operator, (total.tree, part.tree)), dimension)
     return total
+
+
+def _is_share(formula: t.Formula) -> bool:
+    """Written in % or ppm."""
+    inner = formula.operand if isinstance(formula, t.Negative) else formula
+    return isinstance(inner, t.Num) and inner.percent
 
 
 def _power(base: t.Formula, exponent: t.Formula, where: t.Place, scope: Scope) -> Typed:

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import difflib
 import re
-from collections.abc import Iterable
+from collections.abc import Collection, Iterable
 
 from loopsim.errors import CircuitError, Span
-from loopsim.units import PREFIXES, UNITS
+from loopsim.units import CODE_PATTERN, PREFIXES, UNIT_PATTERN, UNITS
 
 STATEMENTS = ("circuit", "use", "let", "kind", "curve", "block", "couple", "expect")
 
@@ -53,7 +53,8 @@ def syntax_mistake(
 
     kind: the terminal found, "" for none; text: what stands there; before, after: the line up to there, and from there.
     """
-    hint = _expected(expected)
+    expected = frozenset(expected)
+    hint = _expected(expected) or _missing(kind, expected, before)
     if kind == "$END":
         return CircuitError(
             "unfinished", "the file ends inside a statement", span, hint or "a bracket or brace is still open"
@@ -75,6 +76,16 @@ def _expected(terminals: Iterable[str]) -> str:
     if not 0 < len(wanted) <= MOST_EXPECTED:
         return ""
     return "expected " + (f"{', '.join(wanted[:-1])} or {wanted[-1]}" if len(wanted) > 1 else wanted[0])
+
+
+def _missing(kind: str, expected: Collection[str], before: str) -> str:
+    """The mark that is missing where a name or a value follows another."""
+    if kind not in ("NAME", "NUMBER", "CODE"):
+        return ""
+    after_name = re.search(r"(?<![A-Za-z0-9_])[A-Za-z_][A-Za-z0-9_.]*[ \t]*$", before) is not None
+    if after_name and kind != "NAME" and "EQUALS" in expected:
+        return "is `=` missing?"
+    return "is `,` missing?" if "COMMA" in expected else ""
 
 
 def _number_mistake(span: Span, kind: str, text: str, before: str, after: str) -> CircuitError | None:
@@ -136,6 +147,10 @@ def _word_mistake(span: Span, kind: str, text: str, hint: str, before: str) -> C
         return CircuitError("unexpected", f"a statement cannot begin with `{text}`", span, hint)
     if text == "=" and before[-1:] in ("=", "<", ">"):
         hint = "write one `=`" if before[-1] == "=" else f"write `{before[-1]}`, or in LO .. HI"
+    elif re.search(rf"(?<![A-Za-z0-9_]){CODE_PATTERN}[ \t]*$", before) and re.fullmatch(UNIT_PATTERN, text):
+        hint = "a value code has its unit in it: 4R7, or 4.7 ohm"
+    elif text == "}" and before.strip():
+        hint = "each statement of a block has a line of its own, and so has the closing brace"
     elif kind in CLAUSES and before.lstrip().startswith("expect"):
         hint = ORDER
     elif re.fullmatch(r"\s*[A-Za-z_]+\s+", before):

@@ -36,6 +36,7 @@ QUANTITIES: tuple[Mistake, ...] = (
         "give it in that unit",
         "let top = 9 V + ⟦2 ohm⟧\n",
         "let top = 9 V - ⟦1⟧\n",
+        "let top = 9 V +⟦- 1 %⟧\n",
         "let top = 2^⟦1 V⟧\n",
         "let top = sqrt(⟦4 V⟧)\n",
         "let top = (4 V)^⟦0.5⟧\n",
