@@ -38,7 +38,8 @@ class Branch:
 @dataclass(frozen=True, eq=False)
 class Fold:
     """A turning point. at: value of the let; nets: volts there; direction: "rising" where the curve ends for a rising let, else "falling";
-    precision: of `at`, relative to the range; from_stable: one side of it is stable, so that a circuit can sit there until it jumps;
+    precision: of `at`, relative to the range; from_stable: one side of it is stable, or may be
+    (undecided beside the fold), so that a circuit can sit there until it jumps;
     lands: volts after the jump, None where there is none; landing: x there; direction_of_curve: (n,) along the curve there."""
 
     at: float

@@ -14,13 +14,15 @@ from loopsim.analyses.settling import settle_all
 from loopsim.analyses.stability import judge
 from loopsim.analyses.trace_curves import at, stable_crossings
 from loopsim.analyses.trace_results import Branch, Crossing, Fold
-from loopsim.numerics.curve import fold
+from loopsim.numerics.curve import FoldPoint, fold
 from loopsim.numerics.spectrum import determinant_signs
 
 Array: TypeAlias = NDArray[np.float64]
 
 PAST = 1e-7  # of the range: how far past a fold the landing is looked for
 MEETING = 0.02  # of the picture: half a step of the curve, within which a turn and a branch point are one
+ASTRAY = 1.5  # of the longer step beside a turn: a fold further from it is not its own
+SAME_FOLD = 1e-7  # scaled: two turns located as near to each other are one fold, and one of them was not found
 SAME_PLACE = 1e-5  # of the range: a fold this near to a branch point is that point
 
 
@@ -41,13 +43,14 @@ def folds(
             meeting = [other for other in branch_points if _meets(branch, i, other, index, scale)]
             if point is not None and any(abs(point.level - other.at) < SAME_PLACE * scale[-1] for other in meeting):
                 continue
-            if point is None or abs(point.level - level) > 0.1 * scale[-1]:
+            if point is None or not _beside(point, branch, (before, i, after), scale) or _known(point, number, found, scale):
                 if meeting:
                     continue
                 lost.append(f"the turn of branch {number + 1} near {level:.6g} could not be located")
                 continue
             rising = bool(branch.values[before] < level) or bool(level > branch.values[after])
-            stable_side = True in (branch.stable[before], branch.stable[after])
+            # a verdict that rests on strays, or on rounding beside the fold, is not one of instability
+            stable_side = branch.stable[before] is not False or branch.stable[after] is not False
             found.append(
                 Fold(
                     point.level, _volts(index, point.x), "rising" if rising else "falling", point.precision, stable_side, None, point.x,
@@ -59,6 +62,19 @@ def folds(
         replace(f, landing=x, lands=None if x is None else _volts(index, x)) for f, x in zip(found, landings, strict=True)
     ]
     return tuple(sorted(landed, key=lambda f: (f.at, f.branch))), tuple(lost)
+
+
+def _beside(point: FoldPoint, branch: Branch, around: tuple[int, int, int], scale: Array) -> bool:
+    """Whether a located fold belongs to a turn and is not another one near by. around: points before, at and after the turn."""
+    near = np.column_stack([branch.x[list(around)], branch.values[list(around)]]) / scale
+    length = max(float(np.linalg.norm(near[1] - near[0])), float(np.linalg.norm(near[2] - near[1])))
+    return float(np.linalg.norm(np.append(point.x, point.level) / scale - near[1])) <= ASTRAY * length + 1e-9
+
+
+def _known(point: FoldPoint, number: int, found: Sequence[Fold], scale: Array) -> bool:
+    """Whether another turn of the same branch was located at this fold: each turn has a fold of its own."""
+    here = np.append(point.x, point.level) / scale
+    return any(f.branch == number and float(np.linalg.norm(np.append(f.x, f.at) / scale - here)) < SAME_FOLD for f in found)
 
 
 def _meets(branch: Branch, i: int, other: Crossing, index: Mapping[str, int], scale: Array) -> bool:

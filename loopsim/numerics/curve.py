@@ -21,6 +21,8 @@ LARGEST_STEP = 0.04  # at least 25 points over the range, for a picture
 SMALLEST_STEP = 1e-13
 TURN = 0.35  # [rad] largest turn of the tangent in one accepted step: more means a corner was cut or a branch jumped
 CROSSING_STEP = 1e-5  # a curve that turns over within a step as short as this has crossed another branch, not been left for it
+SHORT_ENOUGH = 1e-4  # scaled step below which no pair of turns is looked for inside it
+LEVEL_NOISE = 1e-12  # scaled: a reversal of the level by less is rounding
 CORRECTIONS = 7
 CORRECTOR_SHARE = 0.3  # of the step: a corrector that moves further has probably left the branch
 MAX_POINTS = 20_000
@@ -107,6 +109,22 @@ def correct(
     return None
 
 
+def _turns_inside(rise: float, step: float, begin: Array, end: Array, turned: bool) -> bool:
+    """Whether a step hides turns of the level from its end points. rise: scaled, of the level; turned: the step before held a turn.
+
+    A steep stretch with a narrow pair of folds hides them from the tangent's turn too. Two turns inside show in the cubic with the rise
+    and the tangents of both ends, which is not monotone then; one turn right after another leaves no falling step between the two.
+    """
+    first, last = step * float(begin[-1]), step * float(end[-1])
+    if step < SHORT_ENOUGH:
+        return False
+    if first * last <= 0.0:
+        return turned
+    b, c = 2.0 * (3.0 * rise - 2.0 * first - last), 3.0 * (first + last - 2.0 * rise)
+    where = -0.5 * b / c if c != 0.0 else -1.0
+    return 0.0 < where < 1.0 and float(np.sign(first)) * (first + 0.5 * b * where) < -LEVEL_NOISE
+
+
 def follow(
     equations: CurveEquations,
     x: Array,
@@ -130,7 +148,7 @@ def follow(
     tangents.append(here)
     start, start_tangent = np.append(x / scale[:n], level / scale[n]), here
     step, end = FIRST_STEP, "stuck"
-    left_start = False
+    left_start = turned = False
     while len(xs) < MAX_POINTS:
         if time.monotonic() > deadline:
             end = "time"
@@ -142,7 +160,8 @@ def follow(
         turn = float(np.arccos(np.clip(new[0] @ here, -1.0, 1.0))) if new is not None else np.pi
         # turned over: another branch was hit, unless one crosses right here
         hit = new is not None and new[1] != orientation and step > CROSSING_STEP
-        if corrected is None or new is None or turn > TURN or hit:
+        cut = corrected is None or new is None or _turns_inside((corrected[1] - level) / scale[n], step, here, new[0], turned)
+        if corrected is None or new is None or turn > TURN or hit or cut:
             step *= 0.4
             if step < SMALLEST_STEP:
                 break
@@ -162,6 +181,7 @@ def follow(
             end = "closed"
             break
         left_start = left_start or away > 3.0 * LARGEST_STEP
+        turned = bool(here[n] * new[0][n] < 0.0)
         x, level, (here, orientation) = corrected[0], corrected[1], new
         xs.append(x)
         levels.append(level)

@@ -134,6 +134,22 @@ def test_before_the_cusp_there_is_no_fold() -> None:
     assert not curve.folds and curve.thresholds("x").rising is None and curve.over_range
 
 
+@pytest.mark.parametrize("b", [1e-4, 1e-3, 1e-2])
+def test_a_fold_pair_far_narrower_than_the_range_is_not_stepped_over(b: float) -> None:
+    """The hysteresis 4 (b/3)^1.5 is down to 2e-7 of the range here, on a stretch so steep that the tangent does not turn."""
+    curve = loopsim.parse(CUSP).trace("a", watch="x", stations=8, b=b)
+    assert [f.at for f in curve.folds] == pytest.approx([-2 * (b / 3) ** 1.5, 2 * (b / 3) ** 1.5], rel=1e-6)
+    assert curve.crossings == () and [f.direction for f in curve.folds] == ["falling", "rising"]
+
+
+@pytest.mark.parametrize("reach", [1e2, 1e3, 1e4])
+def test_no_two_turns_are_located_at_one_fold(reach: float) -> None:
+    curve = loopsim.parse(CUSP).trace("a", watch="x", stations=8, over=(-reach, reach))
+    places = [f.nets["x"] for f in curve.folds]
+    assert all(abs(a - b) > 0.1 for a, b in itertools.combinations(places, 2))
+    assert len(curve.folds) == 2 or (curve.notes and not curve.over_range)
+
+
 PITCHFORK = """circuit fork "a symmetric pair"
 let b = 0 S in -1 S .. 1 S
 curve cubic = polynomial(0 A/V, 0 A/V^2, 1 A/V^3)
@@ -281,6 +297,27 @@ def test_ambient_and_a_field_of_a_kind_can_be_the_abscissa() -> None:
     at_end = circuit.states(ambient=50.0)
     ends = sorted(float(b.nets["drive"][k]) for b in warm.branches for k in (0, -1) if b.values[k] == 50.0)
     assert ends == pytest.approx(sorted(point["drive"] for point in at_end), abs=1e-6)
+
+
+def test_along_a_resistance_a_fold_beside_an_undecided_state_is_not_called_unstable_on_both_sides() -> None:
+    # just above the fold the second stable state rests on strays; a little further it is stable for all of them
+    text = SCHMITT.replace("let glow = 1.8 V in 0 V .. 4 V", "let glow = 1.8 V\nlet r_tail = 470 ohm in 47 ohm .. 4.7 kohm")
+    circuit = loopsim.parse(text.replace("r_e: 470 ohm", "r_e: r_tail"))
+    curve = circuit.trace("r_tail", watch="drive")
+    assert curve.complete and not curve.over_range
+    assert [f.direction for f in curve.folds] == ["falling", "rising"] and all(f.from_stable for f in curve.folds)
+    for found, counts in zip(curve.folds, [(1, 3), (3, 1)], strict=True):
+        assert tuple(len(circuit.states(r_tail=found.at * (1 + side))) for side in (-1e-3, 1e-3)) == counts
+    known = curve.thresholds("drive")
+    assert known.falling == pytest.approx(curve.folds[0].at) and known.rising == pytest.approx(curve.folds[1].at)
+
+
+def test_where_a_let_enters_squared_there_is_a_pair_of_folds_on_each_side() -> None:
+    # a^2 - 1/2 + x - x^3 = 0: folds where a^2 - 1/2 = -+2 / 3^1.5 (the cusp's power law)
+    curve = loopsim.parse(CUSP.replace("push: a ->", "push: a * a / 1 A - 0.5 A ->")).trace("a", watch="x")
+    inner, outer = np.sqrt(0.5 - 2 / 3**1.5), np.sqrt(0.5 + 2 / 3**1.5)
+    assert [f.at for f in curve.folds] == pytest.approx([-outer, -inner, inner, outer], rel=1e-9)
+    assert curve.complete and not curve.over_range
 
 
 def test_two_gates_on_one_float_each_have_thresholds_of_their_own() -> None:
