@@ -79,6 +79,8 @@ def trace(
             break
         lines, covered = more, None
         drawn = _drawn(family, lines, index, scale)
+    # a stretch between stations may be missing from the branches although its states were proved to be there
+    over_range = covered is not None and covered.complete and all(line.end not in ENDED for line in lines)
     for end, reason in ENDED.items():
         broken = sum(line.end == end for line in lines)
         if broken:
@@ -92,7 +94,7 @@ def trace(
         {name: float(v) for name, v in parameter_values(circuit, settings).items()}, nets,
         drawn.branches, drawn.folds, drawn.crossings, per_net,
         tuple((float(v), len(p.x)) for v, p in zip(values, proved, strict=True)), tuple(float(v) for v in matched),
-        tuple(float(v) for v in values), covered is not None and covered.complete, gaps, time.monotonic() - began, (*notes, *drawn.lost),
+        tuple(float(v) for v in values), over_range, gaps, time.monotonic() - began, (*notes, *drawn.lost),
         scale, box,
     )  # fmt: skip
 

@@ -438,3 +438,14 @@ def test_a_branch_that_is_not_followed_to_its_end_is_told(monkeypatch: pytest.Mo
     monkeypatch.setattr(trace_curves, "follow", lambda *words: dataclasses.replace(real(*words), end="stuck"))
     curve = loopsim.parse(DELAYED).trace("rise")
     assert "1 of 1 branches are not followed to their ends: no step along them succeeded" in curve.notes
+
+
+def test_no_range_is_complete_where_a_branch_is_not_followed_to_its_end(monkeypatch: pytest.MonkeyPatch) -> None:
+    from loopsim.analyses import trace_curves
+
+    text = 'circuit line "a divider"\nlet supply = 1 V in 0 V .. 9 V\ngnd -> s: supply -> a\na -- r1: 1 kohm -- b -> d: diode() -> gnd\n'
+    assert loopsim.parse(text).trace("supply").over_range
+    real = trace_curves.follow
+    monkeypatch.setattr(trace_curves, "follow", lambda *words: dataclasses.replace(real(*words), end="stuck"))
+    curve = loopsim.parse(text).trace("supply")
+    assert curve.complete and not curve.over_range
