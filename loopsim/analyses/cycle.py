@@ -169,7 +169,8 @@ def cycle(
 ) -> Cycle:
     """The oscillation that `start` leads to (starts as in `transient`; a rest point that is unstable is left by a small nudge).
 
-    duration: how long to look for it at most [s], unlimited unless given; budget: wall time for the search [s]. Raises AnalysisError
+    duration: how long to look for it at most [s], unlimited unless given; budget: wall time for the search [s].
+    progress: called with the share of the budget that is used. Raises AnalysisError
     `no-cycle` where the circuit comes to rest, `no-repetition` where nothing came back in time, `driven` where a source moves.
     """
     began = time.monotonic()
@@ -188,7 +189,8 @@ def cycle(
         if direction is None:
             raise AnalysisError("nudge", "nothing grows from this start, so there is no direction to nudge it in")
         x = x + nudge * direction[1]
-    path, column, period = _search(circuit, plan, x, scale, watched, began + budget, duration, notes)
+    told = None if progress is None else lambda: progress(min((time.monotonic() - began) / max(budget, 1e-9), 1.0))
+    path, column, period = _search(circuit, plan, x, scale, watched, began + budget, duration, notes, told)
     level = _middle(path, column)
     t0 = _last_rise(path, column, level)
     plan = motion(system, path.end_x, period)
@@ -339,7 +341,7 @@ def _shortest_time(system: System) -> float:
 
 def _search(
     circuit: Circuit, plan: Motion, x: Array, scale: float, watched: tuple[str, ...], deadline: float, duration: float | None,
-    notes: list[str],
+    notes: list[str], told: Callable[[], None] | None,
 ) -> tuple[Path, int, float]:
     """Run on in stretches, each longer than the last, until the state comes back: (last stretch, column of the widest net, period)."""
     system = plan.system
@@ -349,6 +351,8 @@ def _search(
     peak: Array | None = None
 
     def in_time(reached: float) -> None:
+        if told is not None:
+            told()
         if time.monotonic() > deadline:
             raise AnalysisError("no-repetition", f"no state came back within {reached:.4g} s", hint="allow it more time")
 

@@ -112,6 +112,12 @@ def test_the_search_ends_when_it_has_looked_long_enough() -> None:
     assert caught.value.code == "no-repetition"
 
 
+def test_the_search_tells_how_much_of_its_budget_is_used() -> None:
+    seen: list[float] = []
+    blinker().cycle(progress=seen.append, budget=50.0)
+    assert seen and seen == sorted(seen) and seen[0] > 0.0 and seen[-1] <= 1.0
+
+
 def test_a_cycle_prints_as_an_answer_and_as_data() -> None:
     found = negative_conductance(1.0).cycle()
     assert "period 6.663287 s" in str(found) and "stable cycle" in str(found)
