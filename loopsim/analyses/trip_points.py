@@ -116,6 +116,8 @@ def trip_points(
 
 def _drawn(circuit: Circuit, count: int, seed: int, fixed: Mapping[str, Any]) -> dict[str, Array]:
     """Evenly between the limits of each toleranced value."""
+    if count < 1:
+        raise ValueError(f"the number of samples has to be 1 or more, not {count}")
     random = np.random.default_rng(seed)
     return {name: random.uniform(low, high, count) for name, (low, high) in tolerance_limits(circuit, fixed).items()}
 

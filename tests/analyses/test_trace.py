@@ -384,6 +384,21 @@ def test_sensitivities_of_trip_points_are_their_differences() -> None:
         assert slope == pytest.approx((second - first) / (2e-5 * value), rel=1e-4, abs=1e-9)
 
 
+def test_a_fold_that_a_sample_does_not_have_is_lost_and_not_taken_from_elsewhere() -> None:
+    # the cusp's power law; below b = 0 there is no fold
+    b = np.array([3.0, 1.0, 0.1, 0.01, -0.01, -0.1, -1.0])
+    spread = loopsim.parse(CUSP).trip_points("a", samples={"b": b}, watch="x")
+    assert spread.lost == 6 and np.all(np.isnan(spread.at[4:]))
+    assert spread.at[:4, 1] == pytest.approx(2 * (b[:4] / 3) ** 1.5, rel=1e-9)
+    assert spread.at[:4, 0] == pytest.approx(-spread.at[:4, 1], rel=1e-9)
+
+
+@pytest.mark.parametrize("count", [0, -4])
+def test_no_samples_are_refused(count: int) -> None:
+    with pytest.raises(ValueError, match="1 or more"):
+        loopsim.parse(CUSP).trip_points("a", samples=count)
+
+
 def test_trip_points_refuse_what_they_cannot_move(two: Trace) -> None:
     circuit = loopsim.load("circuits/comparators/cistern_pump.loop")
     with pytest.raises(AnalysisError, match="no-fold"):

@@ -62,6 +62,15 @@ def test_a_crossing_is_gone_straight_through() -> None:
     assert parabola.end == "high" and parabola.x[-1, 0] < 0.0
 
 
+@pytest.mark.parametrize("b", [1e-4, 1e-3, 1e-2])
+def test_a_narrow_pair_of_turns_on_a_steep_stretch_shows_in_the_points(b: float) -> None:
+    # l = x^3 - b x turns at x = -+sqrt(b/3) (textbook cusp); between, l falls by 4 (b/3)^1.5, down to 8e-7
+    cusp = Plane(lambda x, l: l + b * x - x**3, lambda x, l: b - 3.0 * x * x, lambda x, l: 1.0)
+    curve = followed(cusp, -1.1, -(1.1**3) + 1.1 * b, 1.0, -1.4, 1.2)
+    x = curve.x[np.flatnonzero(np.diff(np.sign(np.diff(curve.level)))) + 1, 0]
+    assert x == pytest.approx([-np.sqrt(b / 3), np.sqrt(b / 3)], abs=np.sqrt(b))
+
+
 @pytest.mark.parametrize("steepness", [1e1, 1e3, 1e5])
 def test_a_steep_corner_is_followed(steepness: float) -> None:
     # x = tanh(steepness l): an output between its limits
