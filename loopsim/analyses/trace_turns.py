@@ -44,6 +44,8 @@ def folds(
             if point is not None and any(abs(point.level - other.at) < SAME_PLACE * scale[-1] for other in meeting):
                 continue
             if point is None or not _beside(point, branch, (before, i, after), scale) or _known(point, number, found, scale):
+                # which of the two turns the fold belongs to is not known: neither keeps it
+                found = [f for f in found if point is None or not _known(point, number, [f], scale)]
                 if meeting:
                     continue
                 lost.append(f"the turn of branch {number + 1} near {level:.6g} could not be located")
