@@ -173,13 +173,13 @@ def cycle(
     progress: called with the share of the budget that is used. Raises AnalysisError
     `no-cycle` where the circuit comes to rest, `no-repetition` where nothing came back in time, `driven` where a source moves.
     """
-    began = time.monotonic()
     check(circuit)
     system = assemble(circuit, settings)
     if system.timed:
         raise AnalysisError("driven", f"a source of {circuit.name} moves in time, so its cycle is not its own", hint="use transient")
     watched = _watched(circuit, watch)
     prepare(tell)
+    began = time.monotonic()  # compiling, once in a fresh environment, is none of the search's time
     scale = _shortest_time(system)
     x, words, ramp, _ = _start(circuit, system, start, 100.0 * scale, scale, settings)
     plan = motion(system, x, 100.0 * scale, ramp)
