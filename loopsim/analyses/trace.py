@@ -17,9 +17,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from loopsim.analyses.family import Family
-from loopsim.analyses.points import Points
 from loopsim.analyses.states import watched
-from loopsim.analyses.trace_curves import branch, closed_curves, curves, matching, starts_of, strangers
+from loopsim.analyses.trace_curves import branch, curves, matching, more_curves, starts_of, strangers
 from loopsim.analyses.trace_levels import levels_of, prove_range, states_at
 from loopsim.analyses.trace_results import Branch, Crossing, Fold, Thresholds, Trace
 from loopsim.analyses.trace_ride import thresholds, travel_of
@@ -64,17 +63,20 @@ def trace(
     values = np.linspace(low, high, stations + 2)
     levels = levels_of(family, box)
     proved = states_at(family, levels, values, box, deadline)
-    scale = _scale(family, proved, high - low)
+    scale = _scale(family, [points.x for points in proved], high - low)
     index = {name: j for j, (kind, name) in enumerate(family.system(low).unknowns) if kind == "net"}
     lines = curves(family, starts_of(values, proved), (), scale, deadline)
     drawn = _drawn(family, lines, index, scale)
-    matched, notes = matching(family, drawn.branches, values, proved, scale)
+    matched, notes = matching(family, drawn.branches, values, proved, scale, box)
     covered = None
     until = min(deadline, time.monotonic() + range_budget)
     while levels is not None and len(matched) == len(values) and drawn.provable and time.monotonic() < until:
         covered = prove_range(family, levels, values, drawn.branches, drawn.folds, scale, until)
-        # states that were proved on the way may lie on a closed curve between two stations
-        more = closed_curves(family, strangers(drawn.branches, covered.x, covered.values, scale), lines, scale, deadline)
+        # states that were proved on the way may lie on a closed curve between two stations, or on one from beyond the box
+        if not lines:
+            scale = _scale(family, [covered.x - covered.spread, covered.x + covered.spread], high - low)
+        starts = strangers(drawn.branches, covered.x, covered.values, covered.inner, scale)
+        more = more_curves(family, starts, lines, scale, deadline)
         if len(more) == len(lines):
             break
         lines, covered = more, None
@@ -149,9 +151,9 @@ def _watch(circuit: Circuit, watch: str | Sequence[str] | None) -> tuple[str, ..
     return nets
 
 
-def _scale(family: Family, proved: Sequence[Points], width: float) -> Array:
-    """Size of each unknown over all proved states, and of the let: its range."""
-    known = np.concatenate([p.x for p in proved if len(p.x)] or [np.ones((1, family.system(family.low).n))])
+def _scale(family: Family, proved: Sequence[Array], width: float) -> Array:
+    """Size of each unknown over all proved states, (k, n) each, and of the let: its range."""
+    known = np.concatenate([x for x in proved if len(x)] or [np.ones((1, family.system(family.low).n))])
     size = np.maximum(np.ptp(known, axis=0), 0.1 * np.max(np.abs(known), axis=0))
     nets = np.array([kind == "net" for kind, _ in family.system(family.low).unknowns])
     if np.max(size[nets], initial=0.0) < DEAD:

@@ -25,6 +25,7 @@ Array: TypeAlias = NDArray[np.float64]
 SAME = 1e-6  # scaled distance at which a proved state and a point of a curve are one; both are known to 1e-9
 NEAREST = 4  # stretches of a curve that are tried for a state
 REACH = 0.1  # scaled distance beyond which a stretch is none of a state's
+EDGE = 1e-6  # of the box: states this near to its edge may have been counted on either side
 CLEARLY_ON = 1e-4  # scaled distance from the straight line between two traced points at which no finer test is needed
 
 
@@ -62,32 +63,36 @@ def curves(family: Family, starts: Sequence[Start], known: Sequence[Curve], scal
     return found
 
 
-def closed_curves(family: Family, starts: Sequence[Start], known: Sequence[Curve], scale: Array, deadline: float) -> list[Curve]:
-    """The known curves and every closed one through a start. A curve that reaches an end of the range is known: all states are, there."""
+def more_curves(family: Family, starts: Sequence[Start], known: Sequence[Curve], scale: Array, deadline: float) -> list[Curve]:
+    """The known curves and every other one through a start: closed ones between stations, and those that come from beyond the box."""
     found = list(known)
     for curve in curves(family, starts, known, scale, deadline)[len(known) :]:
+        # a start beside a fold may have been followed although its curve is known: where the let moves most that is plain
         steepest = int(np.argmax(np.abs(curve.tangent[:, -1])))
-        again = any(_passes(family, other, curve.x[steepest], float(curve.level[steepest]), scale) for other in found)
-        if curve.end == "closed" and not again:
+        if not any(_passes(family, other, curve.x[steepest], float(curve.level[steepest]), scale) for other in found):
             found.append(curve)
     return found
 
 
-def strangers(branches: Sequence[Branch], x: Array, values: Array, scale: Array) -> list[Start]:
+def strangers(branches: Sequence[Branch], x: Array, values: Array, plain: NDArray[np.bool_], scale: Array) -> list[Start]:
     """Those of the proved states x (k, n) at values (k,) of the let that lie on no branch as far as straight lines between its points
-    tell; which of them really do, `curves` decides."""
+    tell, which is asked of the `plain` ones (k,) alone; which of them really lie on none, `curves` decides."""
     found = []
-    for state, value in zip(x, values.tolist(), strict=True):
-        near = False
-        for branch in branches:
-            d = branch.values - value
-            for i in np.flatnonzero(d[:-1] * d[1:] <= 0.0):
-                share = 0.0 if d[i] == d[i + 1] else d[i] / (d[i] - d[i + 1])
-                between = branch.x[i] + share * (branch.x[i + 1] - branch.x[i])
-                near |= bool(np.max(np.abs(between - state) / scale[:-1]) < CLEARLY_ON)
-        if not near:
+    for state, value, simple in zip(x, values.tolist(), plain.tolist(), strict=True):
+        if not (simple and any(_near(branch, state, value, scale) for branch in branches)):
             found.append(Start(state, value))
     return found
+
+
+def _near(branch: Branch, state: Array, value: float, scale: Array) -> bool:
+    """Whether a state lies on a straight line between two points of a branch."""
+    d = branch.values - value
+    for i in np.flatnonzero(d[:-1] * d[1:] <= 0.0):
+        share = 0.0 if d[i] == d[i + 1] else d[i] / (d[i] - d[i + 1])
+        between = branch.x[i] + share * (branch.x[i + 1] - branch.x[i])
+        if float(np.max(np.abs(between - state) / scale[:-1])) < CLEARLY_ON:
+            return True
+    return False
 
 
 def _joined(back: Curve, ahead: Curve) -> Curve:
@@ -198,16 +203,24 @@ def _stabilities(family: Family, levels: Array, x: Array) -> tuple[bool | None, 
     )
 
 
+def within(x: Array, nets: NDArray[np.bool_], box: float) -> NDArray[np.bool_]:
+    """(k,) which states x (k, n) a proof with all nets within +/- box [V] speaks of, those on its very edge left out. nets: (n,)."""
+    return np.asarray(np.all(np.abs(x[:, nets]) < box * (1.0 - EDGE), axis=1))
+
+
 def matching(
-    family: Family, branches: Sequence[Branch], values: Array, proved: Sequence[Points], scale: Array
+    family: Family, branches: Sequence[Branch], values: Array, proved: Sequence[Points], scale: Array, box: float
 ) -> tuple[list[float], list[str]]:
-    """Values at which the proof was complete and every proved state lies on a branch, and the other way round."""
+    """Values at which the proof was complete and every proved state lies on a branch, and the other way round. box [V] of the proof:
+    a branch may well leave it."""
+    nets = np.array([kind == "net" for kind, _ in family.system(family.low).unknowns])
     good: list[float] = []
     doubts: dict[str, list[float]] = {}
     for value, points in zip(values, proved, strict=True):
         crossings = [x for branch in branches for x in crossings_of(family, branch, float(value))]
         missing = sum(all(np.max(np.abs(y - x) / scale[:-1]) >= SAME for y in crossings) for x in points.x)
-        extra = [y for y in crossings if all(np.max(np.abs(y - x) / scale[:-1]) >= SAME for x in points.x)]
+        inside = [y for y in crossings if within(y[None], nets, box)[0]]
+        extra = [y for y in inside if all(np.max(np.abs(y - x) / scale[:-1]) >= SAME for x in points.x)]
         if extra and points.complete and _really_there(family, extra[0], float(value)):
             raise InternalError(
                 f"the curve passes a state at {value:g} that the proof of completeness excluded; please report this"

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from loopsim.analyses.family import Family
 from loopsim.analyses.points import INNER_LIMIT, Points, all_points, parity_holds
+from loopsim.analyses.trace_curves import EDGE
 from loopsim.analyses.trace_results import Branch, Fold
 from loopsim.devices.phi_rows import rows_of
 from loopsim.equations.ordering import blocks
@@ -86,12 +87,15 @@ def _points(levels: Levels, found: Tubes, value: float) -> Points:
 @dataclass(frozen=True, eq=False)
 class Covered:
     """What a proof over the range came to. gaps: intervals of the let that it could not settle, none where every state for every value is
-    known; finished: it was not ended by its budget. x, values: (k, n), (k,) one state of each tube and the value of the let there."""
+    known; finished: it was not ended by its budget. x, values: (k, n), (k,) one state of each tube and the value of the let there;
+    spread: (k, n) how far the tube reaches from it; inner: (k,) it stays clear of the edge of the box."""
 
     gaps: tuple[tuple[float, float], ...]
     finished: bool
     x: Array
     values: Array
+    spread: Array
+    inner: NDArray[np.bool_]
 
     @property
     def complete(self) -> bool:
@@ -105,8 +109,9 @@ def prove_range(
     """Every state for every value of the let. values: edges of the pieces to begin with.
 
     Around each fold a region is proved to hold the traced curve alone, then every box of states and values outside is shown empty or to
-    hold one state for each of its values. Where nothing is left, no branch is missing: a state outside the regions lies in a tube, tubes go
-    on until an end of the range or a region, and a closed curve would have folds of its own, at which no tube can be.
+    hold one state for each of its values. Where nothing is left, no branch is missing: a state outside the regions lies in a tube; tubes go
+    on until an end of the range, a region or the edge of the box; a closed curve would have folds of its own, at which no tube can be; and
+    the caller compares the tubes at the edge with the branches one by one.
     """
     with np.errstate(all="ignore"):
         regions = [_region(levels, f, scale) for f in folds]
@@ -124,7 +129,9 @@ def prove_range(
     finished = found.boxes < MAX_BOXES and time.monotonic() < deadline
     if finished:
         _nothing_excluded(levels, found, known, branches, gaps, scale)
-    return Covered(gaps, finished, found.x[:, :-1], found.x[:, -1])
+    x, spread = found.x[:, :-1], found.spread[:, :-1]
+    inner = np.all(np.abs(x) + spread < levels.limits * (1.0 - EDGE), axis=1)
+    return Covered(gaps, finished, x, found.x[:, -1], spread, inner)
 
 
 def _region(levels: Levels, found: Fold, scale: Array) -> Region | None:
@@ -145,10 +152,11 @@ def _merged(intervals: Array, slack: float) -> tuple[tuple[float, float], ...]:
 def _nothing_excluded(
     levels: Levels, found: Tubes, known: Sequence[Region], branches: Sequence[Branch], gaps: Sequence[tuple[float, float]], scale: Array
 ) -> None:
-    """Every traced point has to lie in a tube, a region or a gap; a certified one that does not contradicts the proof."""
+    """Every traced point within the box has to lie in a tube, a region or a gap; a certified one that does not contradicts the proof."""
     low, high = levels.problem.s_low[-1], levels.problem.s_high[-1]
     points = np.concatenate([np.column_stack([b.x, b.values]) for b in branches] or [np.zeros((0, levels.problem.n))])
-    points = points[(points[:, -1] >= low) & (points[:, -1] <= high)]
+    inside = np.all(np.abs(points[:, :-1]) < levels.limits * (1.0 - EDGE), axis=1)
+    points = points[inside & (points[:, -1] >= low) & (points[:, -1] <= high)]
     open_ = np.ones(len(points), dtype=bool)
     for start, stop in gaps:
         open_ &= (points[:, -1] < start) | (points[:, -1] > stop)

@@ -14,6 +14,8 @@ from typing import Protocol, TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
+from loopsim.numerics.newton import solve
+
 Array: TypeAlias = NDArray[np.float64]
 
 STEPS = 40
@@ -65,7 +67,7 @@ def solve_folds(equations: FoldEquations, y: Array, level: Array, left: Array, r
             bordered[:, :n, n] = equations.slope(y, level)
             bordered[:, n, :n] = -equations.bend(y, level, u, v)
             bordered[:, n, n] = -equations.level_bend(y, level, u, v)
-            step = _solve(bordered, -np.concatenate([equations.residual(y, level), g[:, None]], axis=1))
+            step = solve(bordered, -np.concatenate([equations.residual(y, level), g[:, None]], axis=1))
             broken |= ~np.isfinite(step).all(axis=1)
             step[broken | done] = 0.0
             length = np.maximum(np.max(np.abs(step[:, :n]) / size, axis=1), np.abs(step[:, n]) / level_size)
@@ -93,22 +95,8 @@ def _null(bordered: Array, n: int) -> tuple[Array, Array]:
     """(vector, g) of each matrix: (b, n), (b,)."""
     right = np.zeros((len(bordered), n + 1))
     right[:, n] = 1.0
-    found = _solve(bordered, right)
+    found = solve(bordered, right)
     return found[:, :n], found[:, n]
-
-
-def _solve(matrices: Array, right: Array) -> Array:
-    """Row by row; NaN where a matrix of the batch is singular."""
-    try:
-        return np.asarray(np.linalg.solve(matrices, right[..., None])[..., 0])
-    except np.linalg.LinAlgError:
-        found = np.full_like(right, np.nan)
-        for i, (matrix, one) in enumerate(zip(matrices, right, strict=True)):
-            try:
-                found[i] = np.linalg.solve(matrix, one)
-            except np.linalg.LinAlgError:
-                continue
-        return found
 
 
 __all__ = ["FoldEquations", "Folds", "null_vectors", "solve_folds"]

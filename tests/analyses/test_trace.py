@@ -464,3 +464,31 @@ def test_no_range_is_complete_where_a_branch_is_not_followed_to_its_end(monkeypa
     monkeypatch.setattr(trace_curves, "follow", lambda *words: dataclasses.replace(real(*words), end="stuck"))
     curve = loopsim.parse(text).trace("supply")
     assert curve.complete and not curve.over_range
+
+
+STEEP = """circuit steep "a gain of a thousand"
+let level = 2 V in 0 V .. 5 V
+gnd -> probe: level -> sense
+sense -- r: 1 kohm -- gnd
+gnd -> amp: 1000 * sense - 2350 V -> a
+a -- r_a: 1 kohm -- gnd
+"""
+
+
+def test_a_branch_that_is_within_the_box_between_two_stations_alone_is_not_missed() -> None:
+    """Within +/- 50 V the net is only where the level is within 0.05 V of 2.35 V, and no station is there."""
+    circuit = loopsim.parse(STEEP)
+    curve = circuit.trace("level", watch="a", box=50.0)
+    assert all(count == 0 for _, count in curve.counts)
+    assert len(circuit.states(level=2.36, box=50.0)) == 1
+    assert len(curve.branches) == 1 and curve.over_range
+    (branch,) = curve.branches
+    assert np.interp(2.36, branch.values, branch.nets["a"]) == pytest.approx(10.0, abs=1e-6)
+
+
+@pytest.mark.parametrize("box", [3.0, 10.0])
+def test_a_branch_may_leave_the_box(box: float) -> None:
+    circuit = loopsim.load("circuits/switches/kiln_trip.loop")
+    curve = circuit.trace("supply", box=box)
+    assert [count for value, count in curve.counts] == [1 if value == 0.0 else 3 if value < box else 0 for value, _ in curve.counts]
+    assert curve.over_range and len(curve.branches) == 2 and len(curve.folds) == 1

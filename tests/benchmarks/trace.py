@@ -67,7 +67,7 @@ def _followed(circuit: loopsim.Circuit, along: str) -> None:
         family = Family(circuit, {}, along, low, high)
         values = np.linspace(low, high, 11)
         proved = [all_points(family.system(float(value)), 1e3) for value in values]
-        KNOWN[circuit.name] = (family, starts_of(values, proved), (), _scale(family, proved, high - low))
+        KNOWN[circuit.name] = (family, starts_of(values, proved), (), _scale(family, [points.x for points in proved], high - low))
     curves(*KNOWN[circuit.name], np.inf)
 
 

@@ -10,6 +10,7 @@ from loopsim.requirements.corners import every_corner, loose, over_tolerances
 from loopsim.requirements.judged import Judged
 from loopsim.requirements.jump_corners import Followed
 from loopsim.requirements.jumps import jumps
+from loopsim.requirements.proved_tolerances import count_is_proved
 
 RISING = "expect rising threshold of out along level"
 
@@ -131,6 +132,16 @@ def test_a_count_over_the_tolerance_of_one_source_is_proved_where_that_is_asked_
     # with a second value that varies there is no such proof
     both = one(text.replace("470 ohm", "470 ohm +/- 1 %"), line, require_proof=True)
     assert (both.outcome, both.proof) == ("undecided", "by corners")
+
+
+def test_a_count_is_not_proved_where_a_branch_enters_the_box_on_the_way():
+    """With a gain of a thousand the net is within 50 V for a thousandth of the tolerance alone, where no corner and no station is."""
+    text = (
+        'circuit steep "A gain of a thousand"\nlet level = 2 V +/- 1 V\ngnd -> probe: level -> sense\nsense -- r: 1 kohm -- gnd\n'
+        "gnd -> amp: 1000 * sense - 2350 V -> a\na -- r_a: 1 kohm -- gnd\n"
+    )
+    circuit = loopsim.parse(text + "expect states = 0 over tolerances\n")
+    assert not count_is_proved(Computed(circuit, 50.0, 60.0), circuit.requirements[0], {}, 0.0)
 
 
 def test_a_spent_budget_leaves_it_undecided():
