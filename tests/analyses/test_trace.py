@@ -492,3 +492,16 @@ def test_a_branch_may_leave_the_box(box: float) -> None:
     curve = circuit.trace("supply", box=box)
     assert [count for value, count in curve.counts] == [1 if value == 0.0 else 3 if value < box else 0 for value, _ in curve.counts]
     assert curve.over_range and len(curve.branches) == 2 and len(curve.folds) == 1
+
+
+TURN = 2.0 / 3.0**1.5  # of the cusp at b = 1, textbook
+
+
+@pytest.mark.parametrize("over", [(-TURN, TURN), (TURN, 1.0), (-1.0, TURN), (TURN * (1.0 - 1e-12), 1.0), (-5.0 * TURN, 5.0 * TURN)])
+def test_a_fold_exactly_on_a_station_leaves_the_range_undecided(over: tuple[float, float]) -> None:
+    curve = loopsim.parse(CUSP).trace("a", watch="x", over=over, stations=9)
+    assert not curve.over_range and curve.notes
+    for value in np.random.default_rng(5).uniform(*over, 9).tolist():
+        roots = np.roots([1.0, 0.0, -1.0, -value])
+        crossed = sum(int(np.count_nonzero(np.diff(np.sign(branch.values - value)))) for branch in curve.branches)
+        assert crossed == np.count_nonzero(np.abs(roots.imag) < 1e-9)
